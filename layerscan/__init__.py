@@ -25,17 +25,38 @@ _PUBLIC = {
     "CompareSettings": "layerscan.settings",
     "LayerscanError": "layerscan.errors",
 }
-_ROOMS = ("comparison", "documents", "errors", "figures", "geometry", "measurement", "optics", "readers", "records",
-          "report", "settings", "study", "uncertainty", "workflow")
+_ROOMS = (
+    "comparison",
+    "documents",
+    "errors",
+    "figures",
+    "geometry",
+    "measurement",
+    "optics",
+    "readers",
+    "records",
+    "report",
+    "settings",
+    "study",
+    "uncertainty",
+    "workflow",
+)
 
 __all__ = ["__version__", *sorted(_PUBLIC), *_ROOMS]
 
 if TYPE_CHECKING:
-    from layerscan.errors import LayerscanError
-    from layerscan.readers.images import open_image
-    from layerscan.readers.spectra import open_spectrum
-    from layerscan.settings import CompareSettings, MeasureSettings, PredictSettings
-    from layerscan.workflow import compare, inspect, measure, predict, run_demo, verify
+    from layerscan.errors import LayerscanError as LayerscanError
+    from layerscan.readers.images import open_image as open_image
+    from layerscan.readers.spectra import open_spectrum as open_spectrum
+    from layerscan.settings import CompareSettings as CompareSettings
+    from layerscan.settings import MeasureSettings as MeasureSettings
+    from layerscan.settings import PredictSettings as PredictSettings
+    from layerscan.workflow import compare as compare
+    from layerscan.workflow import inspect as inspect
+    from layerscan.workflow import measure as measure
+    from layerscan.workflow import predict as predict
+    from layerscan.workflow import run_demo as run_demo
+    from layerscan.workflow import verify as verify
 
 
 def __getattr__(name: str) -> Any:

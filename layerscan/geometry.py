@@ -107,7 +107,8 @@ def correct_lengths(
 
     def stretch(compressed: np.ndarray, psi_deg: float) -> np.ndarray:
         psi = math.radians(psi_deg)
-        return np.sqrt((np.cos(psi) / compressed) ** 2 + np.sin(psi) ** 2)
+        result: np.ndarray = np.sqrt((np.cos(psi) / compressed) ** 2 + np.sin(psi) ** 2)
+        return result
 
     if obliquity is not None:
         add("obliquity", angle(obliquity, "Obliquity"), lambda t: np.cos(np.radians(t)))

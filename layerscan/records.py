@@ -548,6 +548,8 @@ class Comparison:
     agreement: Agreement
     reasons: tuple[Reason, ...]
     sentence: str
+    prediction_source: str | None = None
+    prediction_sha256: str | None = None
     observed_source: str = ""
     observed_sha256: str | None = None
     scale: float | None = None  # factor on the observed spectrum where --scale free

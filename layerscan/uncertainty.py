@@ -114,9 +114,7 @@ def parse_quantity(text: str, *, dimension: str, name: str = "quantity") -> Quan
             high=high,
         )
     variance = (low**2 + mode**2 + high**2 - low * mode - low * high - mode * high) / 18
-    return Quantity(
-        value=value, unit=unit_out, u=math.sqrt(variance), distribution="triangular", low=low, high=high
-    )
+    return Quantity(value=value, unit=unit_out, u=math.sqrt(variance), distribution="triangular", low=low, high=high)
 
 
 def parse_pixel_size(text: str) -> tuple[Quantity, Quantity]:
