@@ -1,4 +1,4 @@
-"""What the program does, one function a command: records and settings in, records out. No arithmetic, no files written."""
+"""What the program does, one function a command: records and settings in, records out. No arithmetic."""
 
 from __future__ import annotations
 
@@ -26,10 +26,8 @@ def inspect(image: Micrograph | Path | str, *, page: int = 0, pixel_size: str | 
     ----------
     image : Micrograph, path or str
         A file needs no pixel size to be inspected.
-    page : int
-        Page of a file with several images.
-    pixel_size : str, optional
-        A pixel size to be held against what the file states.
+    page, pixel_size
+        Page of a file with several images; a pixel size to be held against what the file states.
 
     Returns
     -------
@@ -61,12 +59,10 @@ def measure(
     ----------
     image : Micrograph, path or str
         An opened image, or a file.
-    settings : MeasureSettings, optional
-        What was chosen; the defaults where not given.
+    settings, **changes
+        A ``MeasureSettings`` record and changes to its fields, such as ``region=(0, 0, 400, 600)``.
     progress : callable, optional
         See ``records.Progress``.
-    **changes
-        Fields of the settings record, such as ``region=(0, 0, 400, 600)``.
 
     Returns
     -------
@@ -75,12 +71,8 @@ def measure(
 
     Raises
     ------
-    SettingsError
-        A setting is unknown or wrong.
-    CalibrationError
-        The pixel size is unknown.
-    InputError
-        The image cannot be used.
+    SettingsError, CalibrationError, InputError
+        A setting is wrong; the pixel size is unknown; the image cannot be used.
     """
     from layerscan.measurement.measure import measure_micrograph
     from layerscan.readers.images import open_image
@@ -112,12 +104,10 @@ def predict(
     ----------
     source : Measurement, LayerTable, path or str
         A measurement, its ``--out`` folder or ``measurement.json``, or a table of layers.
-    settings : PredictSettings, optional
-        What was chosen; the defaults where not given.
+    settings, **changes
+        A ``PredictSettings`` record and changes to its fields, such as ``dark="chitin", bright="air"``.
     progress : callable, optional
         See ``records.Progress``.
-    **changes
-        Fields of the settings record, such as ``dark="chitin", bright="air"``.
 
     Returns
     -------
@@ -125,12 +115,8 @@ def predict(
 
     Raises
     ------
-    SettingsError
-        A setting is unknown or wrong, or a phase has no material.
-    MaterialError
-        A material is unknown.
-    InputError
-        The source has no layers or cannot be read.
+    SettingsError, MaterialError, InputError
+        A setting is wrong or a phase has no material; a material is unknown; the source has no layers.
     """
     from layerscan.optics.predict import predict_light
 
@@ -160,12 +146,10 @@ def compare(
         A prediction, its ``--out`` folder or ``prediction.json``.
     observed : Spectrum, path or str, optional
         The observed spectrum; None where ``lab`` gives an observed colour instead.
-    settings : CompareSettings, optional
-        What was chosen; the defaults where not given.
+    settings, **changes
+        A ``CompareSettings`` record and changes to its fields, such as ``scale="free"``.
     progress : callable, optional
         See ``records.Progress``.
-    **changes
-        Fields of the settings record, such as ``scale="free"``.
 
     Returns
     -------
