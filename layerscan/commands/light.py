@@ -19,7 +19,7 @@ from layerscan.commands.options import (
     settings_options,
     with_u,
 )
-from layerscan.document_files import write_file
+from layerscan.document_files import dump_json, write_file
 from layerscan.settings import CompareSettings, PredictSettings, change_settings
 
 if TYPE_CHECKING:
@@ -143,7 +143,7 @@ def materials(name: str | None, materials_folder: str | None, out: str | None, a
 
         for medium in media:
             write_file(Path(out) / f"{medium.name.replace('/', '_')}.svg", draw_medium(medium))
-        write_file(Path(out) / "materials.json", documents.dump_json(document))
+        write_file(Path(out) / "materials.json", dump_json(document))
     lines = _medium_lines(document["media"][0]) if name is not None else _list_lines(document["media"])
     print_document(document, as_json=as_json, lines=lines)
 
