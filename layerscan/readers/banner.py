@@ -61,10 +61,10 @@ def find_banner(intensity: NDArray[np.float32]) -> Exclusion | None:
 
 def _find_start(page: NDArray[np.float32]) -> int | None:
     """First row of a banner at the bottom of ``page``, or None."""
-    rows, columns = page.shape
+    rows = page.shape[0]
     reach = int(rows * MAX_FRACTION)
     strip = page[rows - reach :].astype(np.float64)
-    low, high = np.nanmin(page), np.nanmax(page)
+    low, high = float(np.nanmin(page)), float(np.nanmax(page))
     if not high > low:
         return None
     near = _TOLERANCE * (high - low)
@@ -79,7 +79,7 @@ def _find_start(page: NDArray[np.float32]) -> int | None:
             continue
         frame = _frame_rows(strip, begin, near)
         if begin > frame and _holds_text(~same[begin:end]):
-            return rows - reach + begin - frame
+            return int(rows - reach + begin - frame)
     return None
 
 

@@ -213,7 +213,7 @@ def _user_pixel_size(*, pixel_size_nm: float | tuple[float, float] | None, pixel
         row, column = parse_pixel_size(pixel_size)
         parts = [None if q.u is None else q.u / q.value for q in (row, column)]
         known = [p for p in parts if p is not None]
-        doubts = ()
+        doubts: tuple[str, ...] = ()
         if len(known) == 1:
             doubts = ("Only one of the two axes has an uncertainty; it was taken for both.",)
         return PixelSize(

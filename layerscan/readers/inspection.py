@@ -8,7 +8,7 @@ from layerscan._version import __version__
 from layerscan.records import ImageSource, Inspection, Micrograph
 
 SATURATED_ADVICE = 0.01
-"""Share of pixels at one end of the stored range above which saturation is worth a word (common practice, no source)."""
+"""Share of pixels at the ends of the stored range from which saturation is told (common practice, no source)."""
 
 
 def inspect_image(micrograph: Micrograph) -> Inspection:

@@ -30,7 +30,8 @@ def plan_mrc(path: Path, page: int) -> ImagePlan:
 
     Notes
     -----
-    Layout of header and modes by mrcfile (Cheng et al. (2015), J. Struct. Biol. 192, 146, doi:10.1016/j.jsb.2015.04.002).
+    Layout of header and modes by mrcfile; format: Cheng et al. (2015), J. Struct. Biol. 192, 146,
+    doi:10.1016/j.jsb.2015.04.002.
     A missing 'MAP ' identifier is accepted with a doubt where the sizes fit. Rows stay in the order of the file.
     """
     with plain_errors(path, "MRC"), _open(path) as file:
@@ -107,7 +108,8 @@ def _sample_type(path: Path, header: Any) -> np.dtype[Any]:
             f"'{path.name}' holds complex numbers (MRC mode {mode}), not intensities. Export amplitude as an image."
         )
     order = header.dtype["nx"].byteorder
-    return dtype.newbyteorder(order if order in "<>" else "=")
+    result: np.dtype[Any] = dtype.newbyteorder(order if order in "<>" else "=")
+    return result
 
 
 def _voxel_size(header: Any) -> tuple[list[ScaleStatement], list[str], list[str]]:

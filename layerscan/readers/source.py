@@ -1,4 +1,4 @@
-"""What every image format hands over: a plan read from the header, checked against limits before any pixel is decoded."""
+"""What every image format hands over: a plan read from the header, checked before any pixel is decoded."""
 
 from __future__ import annotations
 
@@ -160,7 +160,8 @@ def finish(path: Path, pixels: NDArray[Any], shape: tuple[int, int]) -> NDArray[
     check_type(path, pixels.dtype)
     if pixels.shape != shape:
         raise InputError(
-            f"'{path.name}' decodes to shape {pixels.shape}, but its header says {shape}: it is damaged. Export it again."
+            f"'{path.name}' decodes to shape {pixels.shape}, but its header says {shape}: it is damaged. "
+            "Export it again."
         )
     with np.errstate(over="ignore", invalid="ignore"):
         grey = np.array(pixels, dtype=np.float32)

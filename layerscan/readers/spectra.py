@@ -5,7 +5,7 @@ from __future__ import annotations
 import re
 from dataclasses import dataclass, replace
 from pathlib import Path
-from typing import TYPE_CHECKING, cast
+from typing import TYPE_CHECKING
 
 import numpy as np
 
@@ -100,7 +100,7 @@ def open_spectrum(
     value, u = value * factor, None if u is None else u * factor
     visible = (wavelength_nm >= 400) & (wavelength_nm <= 700)
     bright = value[visible] if visible.any() else value
-    flags = ()
+    flags: tuple[str, ...] = ()
     if kind == "reflectance" and float(np.percentile(bright, 90)) > 1.0:
         flags = ("specular_reference_suspected",)
     return Spectrum(
@@ -209,7 +209,9 @@ def read_table(text: str, *, name: str) -> Table:
 
 def _largest_block(lines: list[str], separator: str | None, decimal: str) -> tuple[int, list[list[float]]]:
     """Where the longest run of equally long number rows starts (blank lines do not end it), and its rows."""
-    best_start, best, start, current = 0, [], 0, []
+    best_start, start = 0, 0
+    best: list[list[float]] = []
+    current: list[list[float]] = []
     for number, line in enumerate(lines):
         if not line.strip():
             continue
@@ -398,7 +400,7 @@ def _to_nm(table: Table, axis: int, name: str, doubts: list[str]) -> FloatArray:
             f"The first column of '{name}' runs from {np.nanmin(values):.4g} to {np.nanmax(values):.4g}, which is no "
             "range of wavelengths in nm, um or 1/cm. Put the wavelength first, with its unit in the header."
         )
-    return cast("FloatArray", wavelength_nm)
+    return wavelength_nm
 
 
 def _scale(

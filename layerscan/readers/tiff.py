@@ -95,8 +95,8 @@ def _check_layout(path: Path, page: Any, file_bytes: int) -> tuple[int, int]:
     beyond = sum(o + c > file_bytes for o, c in zip(offsets, counts, strict=False))
     if beyond:
         raise InputError(
-            f"'{path.name}' is cut short: {beyond} of its {len(counts)} strips or tiles lie beyond the end of the file. "
-            "Copy it again."
+            f"'{path.name}' is cut short: {beyond} of its {len(counts)} strips or tiles lie beyond the end "
+            "of the file. Copy it again."
         )
     return shape
 

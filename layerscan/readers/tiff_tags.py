@@ -5,6 +5,7 @@ from __future__ import annotations
 import re
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
+from functools import partial
 from typing import Any
 from xml.etree import ElementTree
 
@@ -52,14 +53,14 @@ def read_scales(page: Any, first: Any, shape: tuple[int, int]) -> TagFindings:
         for holder in holders:
             tag = holder.tags.get(code)
             if tag is not None:
-                _guard(found, f"tag {code}", lambda read=read, holder=holder: read(found, holder, shape))
+                _guard(found, f"tag {code}", partial(read, found, holder, shape))
                 break
     description = next((d for d in (_description(holder) for holder in holders) if d), "")
     if description:
         found.metadata["description"] = description[:300]
-        _guard(found, "the description", lambda: _read_description(found, description, page, shape))
+        _guard(found, "the description", partial(_read_description, found, description, page, shape))
     if not _has_unit_in_description(description):
-        _guard(found, "the resolution tag", lambda: _read_resolution(found, page))
+        _guard(found, "the resolution tag", partial(_read_resolution, found, page))
     for code, name in ((271, "make"), (272, "model"), (305, "software"), (306, "date")):
         tag = page.tags.get(code)
         if tag is not None and isinstance(tag.value, str) and tag.value.strip():
@@ -67,7 +68,7 @@ def read_scales(page: Any, first: Any, shape: tuple[int, int]) -> TagFindings:
     return found
 
 
-def _guard(found: TagFindings, what: str, read: Callable[[], None]) -> None:
+def _guard(found: TagFindings, what: str, read: Callable[[], object]) -> None:
     try:
         read()
     except Exception as error:  # a damaged tag must not cost the picture
@@ -107,8 +108,8 @@ def _read_34118(found: TagFindings, page: Any, shape: tuple[int, int]) -> None:
         size_nm = scaled or rounded_nm
         if scaled is None:
             found.doubts.append(
-                f"Tag 34118 states {rounded_nm:.4g} nm for the picture, which does not follow from its {exact_nm:.6g} nm "
-                "for the display."
+                f"Tag 34118 states {rounded_nm:.4g} nm for the picture, which does not follow from its "
+                f"{exact_nm:.6g} nm for the display."
             )
     if not size_nm:
         found.no_scale.append("its tag 34118 states no positive pixel size")
@@ -269,7 +270,7 @@ def _read_ome(found: TagFindings, root: ElementTree.Element, shape: tuple[int, i
 
 
 def _read_magnification(found: TagFindings, root: ElementTree.Element, page: Any) -> None:
-    """XML of some transmission microscopes: the magnification from specimen to picture; the resolution tag is the picture's."""
+    """XML of some transmission microscopes: the magnification; pixels of the resolution tag are divided by it."""
     system = root.find("ImageFormingSystem")
     if system is None or system.findtext("SelectorUnitString", "").strip().upper() != "X":
         return
