@@ -29,7 +29,8 @@ CREATE TABLE units (
     position INTEGER PRIMARY KEY, key TEXT NOT NULL UNIQUE, kind TEXT NOT NULL, row TEXT NOT NULL, tasks TEXT NOT NULL);
 CREATE TABLE tasks (
     key TEXT PRIMARY KEY, kind TEXT NOT NULL, unit TEXT NOT NULL, state TEXT NOT NULL,
-    failure TEXT, reason TEXT, attempts INTEGER NOT NULL, input_sha256 TEXT, settings TEXT NOT NULL,
+    failure TEXT, reason TEXT, by_chance INTEGER NOT NULL, attempts INTEGER NOT NULL, input_sha256 TEXT,
+    settings TEXT NOT NULL,
     versions TEXT NOT NULL, document TEXT, extras TEXT, picture BLOB, folder TEXT,
     seconds REAL, finished TEXT);
 CREATE INDEX tasks_of_unit ON tasks (unit, kind);
@@ -43,8 +44,8 @@ _MIGRATIONS: dict[int, tuple[str, ...]] = {}
 """Statements that take a ledger from the version that is the key to the next one."""
 
 _TASK_COLUMNS = (
-    "key, kind, unit, state, failure, reason, attempts, input_sha256, settings, versions, document, extras, picture, "
-    "folder, seconds, finished"
+    "key, kind, unit, state, failure, reason, by_chance, attempts, input_sha256, settings, versions, document, extras, "
+    "picture, folder, seconds, finished"
 )
 
 
@@ -61,6 +62,7 @@ class TaskRecord:
     input_sha256: str | None = None
     failure: str | None = None
     reason: str | None = None
+    by_chance: bool = False
     attempts: int = 1
     document: Mapping[str, Any] | None = None
     extras: Mapping[str, Any] | None = None
@@ -101,6 +103,7 @@ class Ledger:
     def __init__(self, folder: str | os.PathLike[str], *, write: bool = False) -> None:
         self.folder = Path(folder)
         self.path = self.folder / FILE_NAME
+        self.writable = write
         self._lock: sqlite3.Connection | None = None
         if write:
             self._prepare_folder()
@@ -236,7 +239,7 @@ class Ledger:
             for task in tasks:
                 connection.execute("DELETE FROM layers WHERE task = ?", (task.key,))
                 connection.execute(
-                    f"INSERT OR REPLACE INTO tasks ({_TASK_COLUMNS}) VALUES ({','.join('?' * 16)})",
+                    f"INSERT OR REPLACE INTO tasks ({_TASK_COLUMNS}) VALUES ({','.join('?' * 17)})",
                     (
                         task.key,
                         task.kind,
@@ -244,6 +247,7 @@ class Ledger:
                         task.state,
                         task.failure,
                         task.reason,
+                        int(task.by_chance),
                         task.attempts,
                         task.input_sha256,
                         dump(task.settings),
@@ -309,6 +313,11 @@ class Ledger:
         """State and folder of every task that the ledger holds, by key."""
         return {key: (state, folder) for key, state, folder in self._rows("SELECT key, state, folder FROM tasks")}
 
+    def failures_to_retry(self, version: str) -> set[str]:
+        """Keys of failures that another run may end otherwise: by chance, or met by another version of layerscan."""
+        rows = self._rows("SELECT key, by_chance, versions FROM tasks WHERE state != 'done'")
+        return {key for key, by_chance, made in rows if by_chance or json.loads(made).get("layerscan") != version}
+
     def task(self, key: str) -> TaskRecord | None:
         """One task without its layers, or None."""
         rows = self._rows(f"SELECT {_TASK_COLUMNS} FROM tasks WHERE key = ?", (key,))
@@ -317,6 +326,7 @@ class Ledger:
         values = dict(zip(_TASK_COLUMNS.split(", "), rows[0], strict=True))
         for name in ("settings", "versions", "document", "extras"):
             values[name] = json.loads(values[name]) if values[name] else None
+        values["by_chance"] = bool(values["by_chance"])
         return TaskRecord(**values)
 
     def layers(self, key: str) -> list[tuple[Any, ...]]:
