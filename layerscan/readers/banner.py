@@ -20,7 +20,8 @@ MIN_ROWS = 8
 _FRAME_ROWS = 6  # rows of frame or left-over picture that may lie between a banner and the edge of the page
 _TOLERANCE = 0.03  # of the grey range: how constant the background is (JPEG alters it a little)
 _FILLED = 0.97  # of the columns: what a blank row of a banner shows of its background
-_PAPER = 0.5  # of the columns: least background in a row with text
+_PAPER = 0.25  # of the columns: least background in a row with text
+_PICTURE = 0.5  # of the columns: most background in the row before
 _LETTERS = 8  # separate marks that make a text
 _ON_A_LINE = 4  # letters that end on the same row; half of all letters must lie on such a line
 _FRAME_LINES = 3
@@ -43,7 +44,7 @@ def find_banner(intensity: NDArray[np.float32]) -> Exclusion | None:
     -----
     All of these must hold, so that a horizontal layer, resin or substrate is not taken for a banner:
     the strip begins with a row of one grey value while less than half of the row before it has that value (frame
-    lines apart), every row keeps at least half of its pixels at that value, and within it lie at least eight small
+    lines apart), every row keeps at least a quarter of its pixels at that value, and within it lie at least eight small
     separate marks that begin and end within the strip, half of them standing on shared lines (letters).
     Cannot see: text printed into the picture itself, a banner without text, a banner beside the picture.
     """
@@ -72,15 +73,19 @@ def _find_start(page: NDArray[np.float32]) -> int | None:
         paper = _most_common(strip[max(end - MIN_ROWS, 0) : end])
         same = np.abs(strip - paper) <= near
         share = same.mean(axis=1)
-        begin = end
-        while begin > 0 and share[begin - 1] >= _PAPER:
-            begin -= 1
-        if end - begin < MIN_ROWS or begin == 0 or share[begin] < _FILLED:
-            continue
-        frame = _frame_rows(strip, begin, near)
-        if begin > frame and _holds_text(~same[begin:end]):
-            return int(rows - reach + begin - frame)
+        for begin in _edges(share[:end]):
+            frame = _frame_rows(strip, begin, near)
+            if begin > frame and _holds_text(~same[begin:end]):
+                return int(rows - reach + begin - frame)
     return None
+
+
+def _edges(share: NDArray[np.float64]) -> list[int]:
+    """Rows where the paper begins at once and stays till the end, the first first."""
+    thin = np.flatnonzero(share < _PAPER)
+    lowest = int(thin[-1]) + 1 if thin.size else 0
+    begins = np.flatnonzero((share[1:] >= _FILLED) & (share[:-1] < _PICTURE)) + 1
+    return [int(row) for row in begins if lowest <= row <= share.size - MIN_ROWS]
 
 
 def _most_common(values: NDArray[np.float64]) -> float:

@@ -68,6 +68,8 @@ def decode(path: Path, page: int, folder: Path) -> dict[str, Any]:
         check_hdf5(path)
     signals = import_module(READERS[suffix]).file_reader(str(path))
     pictures = [(signal, index) for signal in signals for index in range(frame_count(signal))]
+    if not pictures and suffix == ".emi":
+        raise RefusedError("an .emi file only describes pictures; give the .ser file beside it, such as NAME_1.ser")
     if not pictures:
         raise RefusedError("it holds no picture, only other data")
     if not 0 <= page < len(pictures):

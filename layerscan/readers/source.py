@@ -74,6 +74,8 @@ def plain_errors(path: Path, kind: str) -> Iterator[None]:
 
 def check_page(path: Path, page: int, page_count: int) -> None:
     """Raise ``InputError`` where the page does not exist."""
+    if page_count < 1:
+        raise InputError(f"'{path.name}' has no page: it is damaged or cut short. Copy or export it again.")
     if not 0 <= page < page_count:
         have = "page 0 only" if page_count == 1 else f"pages 0 to {page_count - 1}"
         raise InputError(f"Page {page} of '{path.name}' does not exist: it has {have}. Give one of these.")
