@@ -1,0 +1,198 @@
+"""From one mean profile to its layers: segmentation, then the joint fit, then tests of layers missed or invented."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from layerscan.measurement.boundaries import SHARED, EdgeFit, fit_boundaries, model_profile
+from layerscan.measurement.segmentation import BRIGHT, DARK, OTHER, segment_profile
+
+if TYPE_CHECKING:
+    from layerscan.records import FloatArray, IntArray
+
+
+@dataclass(frozen=True, kw_only=True, eq=False)
+class Stack:
+    """Boundaries of a profile [samples] and what lies between them.
+
+    ``phase`` (boundaries + 1,) is DARK, BRIGHT or OTHER for each segment, the ones before the first and behind the last
+    boundary included; ``dark`` and ``bright`` (N,) are the phases' slowly varying levels.
+    """
+
+    fit: EdgeFit
+    phase: IntArray
+    dark: FloatArray
+    bright: FloatArray
+    weight: FloatArray
+
+    @property
+    def position(self) -> FloatArray:
+        """Boundary positions [samples]."""
+        return self.fit.position
+
+    @property
+    def contrast(self) -> float:
+        """Median difference of the phases' levels."""
+        return float(np.median(self.bright - self.dark))
+
+
+def fill_gaps(profile: FloatArray) -> FloatArray:
+    """Linear interpolation over samples that are not finite."""
+    seen = np.isfinite(profile)
+    if seen.all():
+        return profile.astype(np.float64)
+    at = np.arange(len(profile))
+    return np.interp(at, at[seen], profile[seen])
+
+
+def find_stack(
+    profile: FloatArray,
+    *,
+    variance: FloatArray,
+    period: float,
+    layered: tuple[int, int] | None = None,
+    nuisance: bool = True,
+    blur: float | None = None,
+) -> Stack | None:
+    """Find the layers of a mean profile.
+
+    Parameters
+    ----------
+    profile : (N,) float array
+        Mean intensity against depth in samples; NaN where nothing was recorded.
+    variance : (N,) float array
+        Variance of each sample's mean; its scale is checked against the residuals.
+    period : float
+        Dominant spacing [samples].
+    layered : (int, int), optional
+        Samples between which layers were detected.
+    nuisance : bool
+        Try the nuisance models.
+    blur : float, optional
+        Edge blur to start from [samples].
+
+    Returns
+    -------
+    Stack or None
+        None where no two boundaries were found.
+    """
+    count = len(profile)
+    filled = fill_gaps(profile)
+    if layered is None:
+        layered = (0, count)
+    factor = max(1, int(period // 24))
+    edges, phase, dark, bright = _segment(filled, period, layered, factor, variance)
+    if len(edges) < 4:
+        return None
+    contrast = bright - dark
+    value = (filled - dark) / contrast
+    weight = np.where(np.isfinite(profile) & (variance > 0), contrast**2 / np.maximum(variance, 1e-30), 0.0)
+    position = edges[1:-1]
+    margin = 0.6 * period
+    at = np.arange(count)
+    weight[(at < position[0] - margin) | (at > position[-1] + margin)] = 0.0
+    other = (bool(phase[0] == OTHER), bool(phase[-1] == OTHER))
+    first_bright = bool((phase[1] == DARK) if other[0] else (phase[0] == BRIGHT))
+    start_blur = _start_blur(value, weight, position, first_bright, period) if blur is None else blur
+    fit = fit_boundaries(
+        value, weight=weight, position=position, bright_first=first_bright, other=other, blur=start_blur, nuisance=False
+    )
+    for _ in range(4):
+        changed = _revise(value, weight, fit, first_bright, other)
+        if changed is None:
+            break
+        fit = fit_boundaries(
+            value, weight=weight, position=changed, bright_first=first_bright, other=other,
+            blur=float(fit.shared[0]), nuisance=False,
+        )  # fmt: skip
+    if len(fit.position) < 2:
+        return None
+    if nuisance:
+        fit = fit_boundaries(
+            value, weight=weight, position=fit.position, bright_first=first_bright, other=other,
+            blur=float(fit.shared[0]), nuisance=True,
+        )  # fmt: skip
+    segments = len(fit.position) + 1
+    alternating = np.where(np.arange(segments) % 2 == 0, int(first_bright), int(not first_bright))
+    if other[0]:
+        alternating[0] = OTHER
+    if other[1]:
+        alternating[-1] = OTHER
+    return Stack(fit=fit, phase=alternating, dark=dark, bright=bright, weight=weight)
+
+
+def _segment(
+    filled: FloatArray, period: float, layered: tuple[int, int], factor: int, variance: FloatArray
+) -> tuple[FloatArray, IntArray, FloatArray, FloatArray]:
+    count = len(filled)
+    if factor > 1:
+        blocks = count // factor
+        coarse = filled[: blocks * factor].reshape(blocks, factor).mean(axis=1)
+    else:
+        blocks, coarse = count, filled
+    low = min(max(layered[0] // factor, 0), max(blocks - 4, 0))
+    high = max(min(-(-layered[1] // factor), blocks), low + 4)
+    noise = math.sqrt(float(np.median(variance[variance > 0])) / factor) if (variance > 0).any() else 0.0
+    found = segment_profile(coarse, period=period / factor, layered=(low, min(high, blocks)), noise=noise)
+    edges = found.edge * factor - 0.5
+    edges[0], edges[-1] = -0.5, count - 0.5
+    if factor == 1:
+        return edges, found.phase, found.level[0], found.level[1]
+    centres = (np.arange(blocks) + 0.5) * factor - 0.5
+    at = np.arange(count)
+    return edges, found.phase, np.interp(at, centres, found.level[0]), np.interp(at, centres, found.level[1])
+
+
+def _start_blur(value: FloatArray, weight: FloatArray, position: FloatArray, bright_first: bool, period: float) -> float:
+    """Blur, from a geometric grid, whose plain model lies nearest the profile."""
+    segments = len(position) + 1
+    level = np.where(np.arange(segments) % 2 == 0, float(bright_first), float(not bright_first))
+    depth = np.arange(len(value), dtype=np.float64)
+    active = np.zeros(SHARED, bool)
+    active[0] = True
+    inside = (depth > position[0]) & (depth < position[-1]) & (weight > 0)
+    best = (math.inf, 1.0)
+    for blur in np.geomspace(0.6, max(0.2 * period, 1.0), 6):
+        shared = np.array([blur, 0.0, 0.0, 0.0, 0.0, 2.0])
+        off = (value - model_profile(depth, position, level, shared, active))[inside]
+        cost = float(np.mean(np.minimum(off**2, 0.25))) if len(off) else 0.0
+        best = min(best, (cost, float(blur)))
+    return best[1]
+
+
+def _revise(
+    value: FloatArray, weight: FloatArray, fit: EdgeFit, bright_first: bool, other: tuple[bool, bool]
+) -> FloatArray | None:
+    """Positions with a pair of boundaries taken out or put in, or None where the layers stand."""
+    position, blur = fit.position, float(fit.shared[0])
+    segments = len(position) + 1
+    nominal = np.where(np.arange(segments) % 2 == 0, float(bright_first), float(not bright_first))
+    inner = np.arange(1, segments - 1)
+    if len(inner) > 1:
+        width = np.diff(position)
+        own = np.abs(fit.level[inner] - (1 - nominal[inner]))  # contrast against the other phase
+        shown = own * np.array([math.erf(w / blur / (2 * math.sqrt(2))) for w in width])
+        worst = int(np.argmin(shown))
+        if shown[worst] < 0.12 and len(position) > 3:
+            return np.delete(position, [worst, worst + 1])
+    depth = np.arange(len(value), dtype=np.float64)
+    off = np.where(weight > 0, value - model_profile(depth, position, fit.level, fit.shared, fit.active), 0.0)
+    half = max(int(round(blur)), 1)
+    kernel = np.ones(2 * half + 1) / (2 * half + 1)
+    smooth = np.convolve(off, kernel, mode="same")
+    index = np.searchsorted(position, depth)
+    sign = np.where(nominal[index] > 0.5, -1.0, 1.0)
+    gap = np.minimum(
+        np.abs(depth - position[np.clip(index, 0, len(position) - 1)]), np.abs(depth - position[np.clip(index - 1, 0, None)])
+    )
+    allowed = (weight > 0) & (gap > 1.2 * blur) & (index > 0) & (index < len(position))
+    score = np.where(allowed, smooth * sign, 0.0)
+    at = int(np.argmax(score))
+    if score[at] > 0.2:
+        reach = max(1.0 * blur, 0.8)
+        return np.sort(np.concatenate([position, [at - reach, at + reach]]))
+    return None

@@ -1,0 +1,338 @@
+"""From a straightened field to followed layers: mean profile, boundaries, traces, and the profile again along the traces."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+from numba import njit
+
+from layerscan.measurement.boundaries import RIM_DECAY
+from layerscan.measurement.profile import Stack, find_stack
+from layerscan.measurement.traces import (
+    RoughnessModel,
+    Traces,
+    fit_roughness,
+    mark_outliers,
+    match_columns,
+    pooled_covariance,
+    smooth_traces,
+)
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+    from layerscan.measurement.field import StraightField
+    from layerscan.records import BoolArray, FloatArray
+
+LEAST_COVERAGE = 0.35  # a depth counts where at least this part of the widest depth's stations shows it
+
+
+@dataclass(frozen=True, kw_only=True, eq=False)
+class FollowedStack:
+    """Boundaries of a field and where they run.
+
+    ``depth`` (boundaries, stations) is the depth in the frame [px], NaN where not traced; ``u`` its standard
+    uncertainty; ``cosine`` takes a difference of frame depths to a distance along the local normal; ``first`` is the
+    first depth sample that was used, ``profile`` the mean along the traces from there on.
+    """
+
+    stack: Stack
+    traces: Traces
+    depth: FloatArray
+    cosine: FloatArray
+    valid: BoolArray
+    first: int
+    profile: FloatArray
+    variance: FloatArray
+
+
+@njit(cache=True)  # type: ignore[untyped-decorator]
+def mean_profile(field, moved, position):  # type: ignore[no-untyped-def]
+    """Mean over the stations along the traces, outliers beyond 4 sd left out: (mean, variance of one, number).
+
+    ``moved`` (boundaries, stations) is followed at the boundaries and linear in between.
+    """
+    count, stations = field.shape
+    edges = position.size
+    straight = np.full((count, stations), np.nan, np.float32)
+    for j in range(stations):
+        b = 0
+        for d in range(count):
+            if edges == 0:
+                shift = 0.0
+            else:
+                while b < edges and position[b] <= d:
+                    b += 1
+                if b == 0:
+                    shift = moved[0, j]
+                elif b == edges:
+                    shift = moved[edges - 1, j]
+                else:
+                    part = (d - position[b - 1]) / max(position[b] - position[b - 1], 1e-6)
+                    shift = moved[b - 1, j] + part * (moved[b, j] - moved[b - 1, j])
+            at = d + shift
+            low = int(math.floor(at))
+            x = at - low
+            if low < 0 or low > count - 1 or (low == count - 1 and x > 0):
+                continue
+            if x < 1e-9:
+                straight[d, j] = field[low, j]
+                continue
+            if 1 <= low < count - 2:
+                x2 = x * x
+                value = (
+                    x * (-0.5 + x - 0.5 * x2) * field[low - 1, j]
+                    + (1 + x2 * (-2.5 + 1.5 * x)) * field[low, j]
+                    + x * (0.5 + 2 * x - 1.5 * x2) * field[low + 1, j]
+                    + 0.5 * x2 * (x - 1) * field[low + 2, j]
+                )
+                if value == value:
+                    straight[d, j] = value
+                    continue
+            straight[d, j] = (1 - x) * field[low, j] + x * field[low + 1, j]
+    mean = np.full(count, np.nan)
+    variance = np.full(count, np.nan)
+    number = np.zeros(count)
+    for d in range(count):
+        low, high = -1e30, 1e30
+        for _ in range(3):
+            n, s1 = 0, 0.0
+            for j in range(stations):
+                value = straight[d, j]
+                if value == value and low <= value <= high:
+                    n += 1
+                    s1 += value
+            if n < 1:
+                break
+            m = s1 / n
+            s2 = 0.0
+            for j in range(stations):
+                value = straight[d, j]
+                if value == value and low <= value <= high:
+                    s2 += (value - m) ** 2
+            mean[d], number[d] = m, n
+            variance[d] = s2 / max(n - 1, 1)
+            sd = math.sqrt(variance[d])
+            if n < 12 or sd == 0:
+                break
+            low, high = m - 4.0 * sd, m + 4.0 * sd
+    return mean, variance, number
+
+
+@njit(cache=True)  # type: ignore[untyped-decorator]
+def local_gain(field, moved, position, profile, dark, bright, node_step, half, spread):  # type: ignore[no-untyped-def]
+    """Offset and gain of each station against the mean profile in overlapping depth windows, smoothed along stations.
+
+    Returns what brings the field to 0 (dark) and 1 (bright) at each sample: centre and gain (depth, stations).
+    """
+    count, stations = field.shape
+    nodes = max(int(count / node_step), 1)
+    start = 0.5 * (count - (nodes - 1) * node_step)
+    sums = np.zeros((nodes, stations, 5))
+    for z in range(nodes):
+        low = max(int(start + z * node_step) - half, 0)
+        high = min(int(start + z * node_step) + half + 1, count)
+        for j in range(stations):
+            n, sx, sy, sxx, sxy = 0.0, 0.0, 0.0, 0.0, 0.0
+            b = 0
+            for d in range(low, high):
+                while b < position.size and position[b] + moved[b, j] <= d:
+                    b += 1
+                if position.size == 0:
+                    at = float(d)
+                elif b == 0:
+                    at = d - moved[0, j]
+                elif b == position.size:
+                    at = d - moved[b - 1, j]
+                else:
+                    left = position[b - 1] + moved[b - 1, j]
+                    part = (d - left) / max(position[b] + moved[b, j] - left, 1e-6)
+                    at = position[b - 1] + part * (position[b] - position[b - 1])
+                i = int(math.floor(at))
+                if i < 0 or i >= count - 1:
+                    continue
+                x, y = profile[i] + (at - i) * (profile[i + 1] - profile[i]), field[d, j]
+                if x == x and y == y:
+                    n += 1
+                    sx += x
+                    sy += y
+                    sxx += x * x
+                    sxy += x * y
+            sums[z, j, 0], sums[z, j, 1], sums[z, j, 2], sums[z, j, 3], sums[z, j, 4] = n, sx, sy, sxx, sxy
+    slope = np.ones((nodes, stations))
+    offset = np.zeros((nodes, stations))
+    total = np.zeros(5)
+    for z in range(nodes):
+        total[:] = 0.0
+        for j in range(min(spread, stations)):
+            total += sums[z, j]
+        for j in range(stations):
+            if j + spread < stations:
+                total += sums[z, j + spread]
+            if j - spread - 1 >= 0:
+                total -= sums[z, j - spread - 1]
+            n = total[0]
+            if n < 4:
+                continue
+            xx = total[3] - total[1] * total[1] / n
+            xy = total[4] - total[1] * total[2] / n
+            ridge = 0.05 * xx + 1e-12
+            slope[z, j] = min(max((xy + ridge) / (xx + ridge), 0.3), 3.0)
+            offset[z, j] = (total[2] - slope[z, j] * total[1]) / n
+    centre = np.empty((count, stations), np.float32)
+    gain = np.empty((count, stations), np.float32)
+    for d in range(count):
+        at = (d - start) / node_step
+        z = min(max(int(at), 0), max(nodes - 2, 0))
+        y = min(z + 1, nodes - 1)
+        part = min(max(at - z, 0.0), 1.0)
+        for j in range(stations):
+            a = slope[z, j] * (1 - part) + slope[y, j] * part
+            b = offset[z, j] * (1 - part) + offset[y, j] * part
+            centre[d, j] = b + a * dark[d]
+            gain[d, j] = a * (bright[d] - dark[d])
+    return centre, gain
+
+
+def usable_depth(field: NDArray[np.float32]) -> tuple[int, int]:
+    """First and last + 1 depth sample that enough stations show."""
+    number = np.isfinite(field).sum(axis=1)
+    enough = np.flatnonzero(number >= max(LEAST_COVERAGE * number.max(), 1))
+    return int(enough[0]), int(enough[-1]) + 1
+
+
+def follow_layers(
+    straight: StraightField, *, period: float, layered: tuple[float, float] | None = None, rounds: int = 3
+) -> FollowedStack | None:
+    """Find the boundaries of a straightened field and follow each across it.
+
+    Parameters
+    ----------
+    straight : StraightField
+    period : float
+        Dominant spacing [px].
+    layered : (float, float), optional
+        Depths [samples of the field] between which layers were detected.
+    rounds : int
+        Rounds of matching and smoothing.
+
+    Returns
+    -------
+    FollowedStack or None
+        None where no two boundaries were found.
+    """
+    low, high = usable_depth(straight.intensity)
+    field = np.ascontiguousarray(straight.intensity[low:high])
+    stations = field.shape[1]
+    flat = np.zeros((0, stations))
+    mean, single, number = mean_profile(field, flat, np.zeros(0))
+    inside = None
+    if layered is not None:
+        inside = (max(int(layered[0]) - low, 0), min(int(math.ceil(layered[1])) - low, high - low))
+        if inside[1] - inside[0] < 2 * period:
+            inside = None
+    stack = find_stack(mean, variance=_variance(single, number), period=period, layered=inside, nuisance=False)
+    if stack is None:
+        return None
+    spread = max(int(period / straight.station_step / 2), 2)
+    moved = np.zeros((len(stack.position), stations))
+    traces = None
+    for turn in range(2):
+        level_dark, level_bright = stack.dark, stack.bright
+        centre, gain = local_gain(
+            field, moved, stack.position, mean, level_dark, level_bright, 2.0 * period, int(2 * period), spread
+        )
+        traces = _trace(field, centre, gain, stack, moved, rounds if turn == 0 else 2, period)
+        if turn == 1:
+            break
+        moved = traces.smooth
+        mean, single, number = mean_profile(field, moved, stack.position)
+        again = find_stack(
+            mean, variance=_variance(single, number), period=period, layered=inside, blur=float(stack.fit.shared[0])
+        )
+        if again is None:
+            break
+        if len(again.position) != len(stack.position):
+            moved = np.stack([np.interp(again.position, stack.position, column) for column in moved.T], axis=1)
+        else:
+            moved = moved + 0.0
+        stack = again
+    assert traces is not None
+    return _followed(straight, stack, traces, low, mean, _variance(single, number), period)
+
+
+def _variance(single: FloatArray, number: FloatArray) -> FloatArray:
+    """Variance of each mean; the single-station variance is smoothed because edges raise it for other reasons."""
+    seen = np.isfinite(single) & (number > 1)
+    if not seen.any():
+        return np.where(number > 0, 1.0, 0.0)
+    typical = float(np.median(single[seen])) or 1e-12
+    return np.where(number > 0, np.clip(typical, 1e-12, None) / np.maximum(number, 1), 0.0)
+
+
+def _trace(
+    field: NDArray[np.float32],
+    centre: NDArray[np.float32],
+    gain: NDArray[np.float32],
+    stack: Stack,
+    moved: FloatArray,
+    rounds: int,
+    period: float,
+) -> Traces:
+    edges, stations = moved.shape
+    raw = np.zeros_like(moved)
+    information = np.zeros_like(moved)
+    misfit = np.zeros_like(moved)
+    fit = stack.fit
+    limit = max(1.5 * float(fit.shared[0]), 1.0)
+    prior = np.full(edges, 1e-3)
+    now = moved.copy()
+    longest = int(min(max(stations // 4, 4), 64))
+    for _ in range(rounds):
+        match_columns(
+            field, centre, gain, fit.position, fit.level, fit.shared, bool(fit.active[RIM_DECAY]), now, prior, limit,
+            raw, information, misfit,
+        )  # fmt: skip
+        valid = mark_outliers(misfit, information)
+        centred = np.where(valid, raw, np.nan)
+        level = np.array([np.mean(r[v]) if v.any() else 0.0 for r, v in zip(raw, valid, strict=True)])
+        own, cross = pooled_covariance(np.where(valid, centred - level[:, None], 0.0), valid, longest)
+        model = fit_roughness(own, cross)
+        smooth, u = smooth_traces(raw, valid, model)
+        widths = 0.5 * np.diff(fit.position, prepend=fit.position[0] - period, append=fit.position[-1] + period)
+        bound = np.minimum(widths[:-1], widths[1:])[:, None]
+        now = np.clip(smooth, -bound, bound)
+    return Traces(raw=raw, smooth=now, u=u, valid=valid, model=model)
+
+
+def _followed(
+    straight: StraightField, stack: Stack, traces: Traces, low: int, mean: FloatArray, variance: FloatArray, period: float
+) -> FollowedStack:
+    stations = np.arange(traces.raw.shape[1])
+    valid = traces.valid
+    deviation = traces.smooth - np.array([np.mean(r[v]) if v.any() else 0.0 for r, v in zip(traces.smooth, valid, strict=True)])[:, None]  # noqa: E501
+    aligned = low + stack.position[:, None] + deviation
+    depth = straight.frame_depth(aligned, np.broadcast_to(stations, aligned.shape))
+    base = straight.frame_depth(low + stack.position[:, None] + np.zeros_like(deviation), np.broadcast_to(stations, aligned.shape))  # noqa: E501
+    slope = _slope(base, straight.station_step, max(int(0.5 * period / straight.station_step), 1))
+    slope = slope / np.maximum(1 - straight.frame.curvature * base, 0.05)
+    cosine = 1 / np.sqrt(1 + slope**2)
+    return FollowedStack(
+        stack=stack, traces=traces, depth=np.where(valid, depth, np.nan), cosine=cosine, valid=valid, first=low,
+        profile=mean, variance=variance,
+    )  # fmt: skip
+
+
+def _slope(depth: FloatArray, step: float, reach: int) -> FloatArray:
+    """Slope along the stations over ``reach`` stations to either side (fewer at the ends)."""
+    stations = depth.shape[1]
+    at = np.arange(stations)
+    left, right = np.maximum(at - reach, 0), np.minimum(at + reach, stations - 1)
+    out: FloatArray = (depth[:, right] - depth[:, left]) / (np.maximum(right - left, 1) * step)
+    return out
+
+
+__all__ = ["FollowedStack", "RoughnessModel", "follow_layers", "mean_profile", "usable_depth"]
