@@ -356,6 +356,7 @@ class Medium:
     doi: str | None = None
     status: str = ""  # published, second-hand, convention, user
     note: str = ""
+    kind: str = ""  # what the index is made of: formula, table, constant
 
 
 @dataclass(frozen=True, kw_only=True, eq=False)

@@ -14,7 +14,7 @@ from __future__ import annotations
 from typing import Any
 
 import numpy as np
-from llvmlite import ir
+from llvmlite import ir  # type: ignore[import-untyped]
 from numba import njit, types
 from numba.extending import intrinsic
 
@@ -47,7 +47,8 @@ LN2_HIGH, LN2_LOW = 0.6931471803691238, 1.9082149292705877e-10  # k * LN2_HIGH i
 SHIFTER = 6755399441055744.0  # 1.5 * 2^52: adding it rounds to an integer and leaves that in the low bits
 EXP_MIN = -708.0
 
-OPTIONS = {"error_model": "numpy", "fastmath": {"contract"}}  # fused multiply-add; nothing that reorders
+# fused multiply-add, but nothing that reorders or assumes finite numbers
+OPTIONS: dict[str, Any] = {"error_model": "numpy", "fastmath": {"contract"}}
 
 
 def compile_cached(*signature: Any) -> Any:
@@ -57,11 +58,13 @@ def compile_cached(*signature: Any) -> Any:
     moves it.
     """
 
+    options: dict[str, Any] = {"nogil": True, **OPTIONS}
+
     def decorate(function: Any) -> Any:
         try:
-            return njit(*signature, cache=True, nogil=True, **OPTIONS)(function)
+            return njit(*signature, **{"cache": True, **options})(function)
         except RuntimeError:  # neither folder can be written
-            return njit(*signature, nogil=True, **OPTIONS)(function)
+            return njit(*signature, **options)(function)
 
     return decorate
 
@@ -117,7 +120,7 @@ def _expm1(y: float) -> float:
     p = p * r + E2
     p = p * r + E1
     p = p * r + E0
-    power = _power_of_two(shifted)
+    power: float = _power_of_two(shifted)  # type: ignore[call-arg]
     return power * (p * r * r + r) + (power - 1.0)
 
 
@@ -273,7 +276,7 @@ def _finish(front: Any, state: Any, field: int, count: int, reflectance: Any, tr
         transmittance[i] = top[i] * bottom[i] * kept[i] / forward
 
 
-@compile_cached(
+@compile_cached(  # type: ignore[untyped-decorator]
     "void(float64[:,::1], float64[:,::1], boolean[::1], int64[:,::1], float64[:,::1], int64, int64,"
     " float64[:,:,::1], float64[:,:,::1])"
 )
@@ -313,9 +316,7 @@ def run_tile(
             if real[medium]:
                 _rotate_real(state, count)
                 for p in range(polarisations):
-                    _advance_real(
-                        own, (ETA + p * ETA_ROWS) * STRIDE, state, (FIELD + p * FIELD_ROWS) * STRIDE, count
-                    )
+                    _advance_real(own, (ETA + p * ETA_ROWS) * STRIDE, state, (FIELD + p * FIELD_ROWS) * STRIDE, count)
             else:
                 _rotate_complex(own, state, count, d)
                 for p in range(polarisations):

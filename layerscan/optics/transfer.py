@@ -2,9 +2,11 @@
 
 from __future__ import annotations
 
+import itertools
 import os
 from collections.abc import Callable, Sequence
 from concurrent.futures import ThreadPoolExecutor
+from functools import partial
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -93,7 +95,9 @@ def reflectance_transmittance(
     angles = check_angles(aoi_deg)
     for name in polarisations:
         if name not in POLARISATIONS:
-            raise SettingsError(f"Polarisation '{name}' is not known. Give 's' or 'p' (their mean is unpolarised light).")
+            raise SettingsError(
+                f"Polarisation '{name}' is not known. Give 's' or 'p' (their mean is unpolarised light)."
+            )
     if not len(polarisations):
         raise SettingsError("No polarisation was given. Give 's', 'p' or both.")
     shape = (order.shape[0], angles.size, len(polarisations), wavelength.size)
@@ -134,11 +138,17 @@ def check_stacks(
     if wavelength.ndim != 1 or not wavelength.size:
         raise InputError(f"wavelength_nm has shape {wavelength.shape}; a non-empty one-dimensional array is needed.")
     if not (np.isfinite(wavelength).all() and wavelength.min() > 0):
-        raise InputError("wavelength_nm holds values that are not finite and positive. Give wavelengths in vacuum in nm.")
+        raise InputError(
+            "wavelength_nm holds values that are not finite and positive. Give wavelengths in vacuum in nm."
+        )
     if n.ndim != 2 or n.shape[1] != wavelength.size or not n.shape[0]:
-        raise InputError(f"index has shape {n.shape}; (materials, {wavelength.size}) is needed, one n + ik per wavelength.")
+        raise InputError(
+            f"index has shape {n.shape}; (materials, {wavelength.size}) is needed, one n + ik per wavelength."
+        )
     if order.ndim != 2 or order.shape[1] < 2 or not order.shape[0]:
-        raise InputError(f"sequence has shape {order.shape}; (stacks, layers + 2) is needed, incident and substrate included.")
+        raise InputError(
+            f"sequence has shape {order.shape}; (stacks, layers + 2) is needed, incident and substrate included."
+        )
     if order.dtype.kind not in "iu":
         raise InputError(f"sequence holds {order.dtype}; whole material numbers are needed.")
     if thickness.shape != (order.shape[0], order.shape[1] - 2):
@@ -276,7 +286,7 @@ def _jobs(
             out[0][where, :, start:stop] = r[:, :, : stop - start]
             out[1][where, :, start:stop] = t[:, :, : stop - start]
 
-        jobs += [lambda a=int(a), b=int(b), job=job: job(a, b) for a, b in zip(edges[:-1], edges[1:], strict=True)]
+        jobs += [partial(job, int(a), int(b)) for a, b in itertools.pairwise(edges)]
     return jobs
 
 

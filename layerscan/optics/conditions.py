@@ -1,0 +1,206 @@
+"""How the specimen is lit and looked at: cone of illumination, polarisation, bandwidth of the instrument."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Literal
+
+import numpy as np
+
+from layerscan.errors import SettingsError
+from layerscan.optics.transfer import reflectance_transmittance
+
+if TYPE_CHECKING:
+    from layerscan.records import ComplexArray, FloatArray, IntArray
+
+Polarisation = Literal["s", "p", "unpolarised", "left", "right"]
+CONE_TOLERANCE = 5e-4  # of reflectance, between the rule used and one of half as many directions
+CONE_NODES = (8, 16, 32, 64, 128)
+SLIT_STEPS = 6  # points of calculation per bandwidth
+
+
+@dataclass(frozen=True, kw_only=True, eq=False)
+class Cone:
+    """Directions of a cone of light: angles of incidence and their weights, which sum to 1."""
+
+    aoi_deg: FloatArray
+    weight: FloatArray
+
+
+def make_cone(*, aoi_deg: float, aperture: float, incident_index: float, nodes: int = 16) -> Cone:
+    """Directions and weights of a uniformly filled cone.
+
+    Parameters
+    ----------
+    aoi_deg : float
+        Angle of the axis of the cone to the layer normal.
+    aperture : float
+        Effective numerical aperture of the illumination in the incident medium: n sin(half angle). The engraved
+        aperture of an objective is no measure of it; the condenser or the back aperture that is really filled is.
+    incident_index : float
+        Refractive index of the incident medium.
+    nodes : int
+        Directions per dimension.
+
+    Returns
+    -------
+    Cone
+        One direction where the aperture is 0.
+
+    Raises
+    ------
+    SettingsError
+        The aperture exceeds the index of the incident medium.
+
+    Notes
+    -----
+    A uniformly bright source fills the cone with weight sin(b) cos(b) in the angle b to its axis. With v = cos b that
+    is v dv, in which reflectance is smooth up to grazing incidence, so Gauss-Legendre nodes in v converge fast; the
+    hemispherical limit is Walsh's diffuse Fresnel reflectance. Around an oblique axis the azimuth is sampled evenly;
+    rays beyond 90 degrees do not reach the surface and are left out.
+
+    References
+    ----------
+    .. [1] J. W. T. Walsh, Illum. Eng. Res. Tech. Paper 2 (1926); S. Q. Duntley, J. Opt. Soc. Am. 32, 61 (1942):
+       diffuse reflectance of a smooth surface.
+    """
+    if aperture <= 0:
+        return Cone(aoi_deg=np.array([aoi_deg]), weight=np.array([1.0]))
+    if aperture > incident_index:
+        raise SettingsError(
+            f"An aperture of {aperture:g} is more than the index {incident_index:.4g} of the incident medium allows. "
+            "Give the effective NA of the illumination in that medium, or the immersion medium as incident."
+        )
+    lowest = float(np.sqrt(max(1 - (aperture / incident_index) ** 2, 0.0)))
+    x, w = np.polynomial.legendre.leggauss(nodes)
+    v = lowest + (1 - lowest) * (x + 1) / 2
+    weight = w * v
+    if aoi_deg == 0:
+        return Cone(aoi_deg=np.degrees(np.arccos(np.minimum(v, 1.0))), weight=weight / weight.sum())
+    azimuth = np.pi * (np.arange(nodes) + 0.5) / nodes
+    axis = np.radians(aoi_deg)
+    sine = np.sqrt(np.maximum(1 - v * v, 0.0))
+    cosine = np.cos(axis) * v[:, None] - np.sin(axis) * sine[:, None] * np.cos(azimuth)
+    all_weights = np.broadcast_to(weight[:, None], cosine.shape)
+    used = cosine > 0
+    aoi = np.degrees(np.arccos(np.clip(cosine[used], 0.0, 1.0)))
+    chosen = all_weights[used]
+    return Cone(aoi_deg=aoi, weight=chosen / chosen.sum())
+
+
+def observe_stacks(
+    index: ComplexArray,
+    sequence: IntArray,
+    thickness_nm: FloatArray,
+    wavelength_nm: FloatArray,
+    *,
+    cone: Cone,
+    polarisation: Polarisation = "unpolarised",
+    tick: Callable[[float], None] | None = None,
+) -> tuple[FloatArray, FloatArray]:
+    """Reflectance and transmittance of stacks in a cone of light, (stacks, wavelengths) each.
+
+    Notes
+    -----
+    Unpolarised light is the mean of s and p. So is circular light, left or right: isotropic layers turn neither into
+    the other's favour. Within a cone about the layer normal linear light is s for some rays and p for others; s and p
+    are then taken as the polarisation of each ray's own plane of incidence only where the axis is oblique.
+    """
+    names = polarisations_needed(cone, polarisation)
+    shape = (sequence.shape[0], wavelength_nm.size)
+    reflectance, transmittance = np.zeros(shape), np.zeros(shape)
+    for number, (angle, weight) in enumerate(zip(cone.aoi_deg, cone.weight, strict=True)):
+        r, t = reflectance_transmittance(
+            index, sequence, thickness_nm, wavelength_nm, aoi_deg=(float(angle),), polarisations=names
+        )
+        reflectance += (weight / len(names)) * r[:, 0].sum(axis=1)
+        transmittance += (weight / len(names)) * t[:, 0].sum(axis=1)
+        if tick is not None:
+            tick((number + 1) / cone.weight.size)
+    return reflectance, transmittance
+
+
+def polarisations_needed(cone: Cone, polarisation: Polarisation) -> tuple[str, ...]:
+    """Which linear polarisations make up the light."""
+    if cone.aoi_deg.size == 1 and cone.aoi_deg[0] == 0:
+        return ("s",)
+    return (polarisation,) if polarisation in ("s", "p") else ("s", "p")
+
+
+def converged_cone(
+    index: ComplexArray,
+    sequence: IntArray,
+    thickness_nm: FloatArray,
+    wavelength_nm: FloatArray,
+    *,
+    aoi_deg: float,
+    aperture: float,
+    incident_index: float,
+    polarisation: Polarisation = "unpolarised",
+) -> tuple[Cone, float]:
+    """Smallest cone rule that this stack needs, and the error of its quadrature.
+
+    Returns
+    -------
+    cone : Cone
+    error : float
+        Largest difference of reflectance between this rule and that of half as many directions; an upper estimate.
+    """
+    if aperture <= 0:
+        return make_cone(aoi_deg=aoi_deg, aperture=0.0, incident_index=incident_index), 0.0
+    before, error = None, np.inf
+    most = CONE_NODES if aoi_deg == 0 else CONE_NODES[:3]
+    cone = make_cone(aoi_deg=aoi_deg, aperture=aperture, incident_index=incident_index, nodes=most[0] // 2)
+    for nodes in (most[0] // 2, *most):
+        cone = make_cone(aoi_deg=aoi_deg, aperture=aperture, incident_index=incident_index, nodes=nodes)
+        now, _ = observe_stacks(index, sequence, thickness_nm, wavelength_nm, cone=cone, polarisation=polarisation)
+        if before is not None:
+            error = float(abs(now - before).max())
+            if error <= CONE_TOLERANCE:
+                break
+        before = now
+    return cone, error
+
+
+def slit_grid(wavelength_nm: FloatArray, *, bandwidth_nm: float) -> FloatArray:
+    """Wavelengths at which to calculate so that a slit of this bandwidth has what it needs at both ends too."""
+    if bandwidth_nm <= 0:
+        return wavelength_nm
+    step = float(np.diff(wavelength_nm).min()) if wavelength_nm.size > 1 else bandwidth_nm
+    parts = max(int(np.ceil(step * SLIT_STEPS / bandwidth_nm)), 1)
+    fine = step / parts
+    margin = int(np.ceil(bandwidth_nm / fine))
+    count = round((wavelength_nm[-1] - wavelength_nm[0]) / fine)
+    grid: FloatArray = wavelength_nm[0] + fine * np.arange(-margin, count + margin + 1)
+    return grid[grid > 0]
+
+
+def slit_weights(
+    grid_nm: FloatArray,
+    wavelength_nm: FloatArray,
+    *,
+    bandwidth_nm: float,
+    shape: Literal["triangular", "gaussian"] = "triangular",
+) -> FloatArray:
+    """Weights, (wavelengths, grid), of an instrument's slit function; each row sums to 1.
+
+    Notes
+    -----
+    The slit function of a monochromator with equal slits is a triangle of full width at half maximum
+    ``bandwidth_nm``; a Gaussian of that width is the usual stand-in for an array spectrometer.
+    """
+    offset = (grid_nm[None, :] - wavelength_nm[:, None]) / bandwidth_nm
+    if shape == "triangular":
+        weights = np.maximum(1 - abs(offset), 0.0)
+    else:
+        weights = np.where(abs(offset) <= 1.0, np.exp(-4 * np.log(2) * offset**2), 0.0)
+    result: FloatArray = weights / weights.sum(axis=1, keepdims=True)
+    return result
+
+
+def absorbance(transmittance: FloatArray) -> FloatArray:
+    """Decadic absorbance -lg T, as spectrometers state it (reflection losses included); inf where T is 0."""
+    with np.errstate(divide="ignore"):
+        result: FloatArray = -np.log10(transmittance)
+    return result
