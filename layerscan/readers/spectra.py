@@ -33,7 +33,7 @@ _KINDS: tuple[tuple[str, SpectrumKind], ...] = (
 )
 _EMPTY_CELLS = {"", "nan", "na", "n/a", "-", "--", "inf", "-inf", "#n/a"}
 _UNCERTAINTY = re.compile(
-    r"^(u|sd|s\.d\.|std|stdev|st\.? ?dev\.?|sigma|uncertainty|error|err|se)\b|[_ ](u|sd|std|sigma)$"
+    r"^(u|sd|s\.d\.|std|stdev|st\.? ?dev\.?|sigma|uncertainty|error|err|se)($|[_ .(\[])|[_ ](u|sd|std|sigma)$"
 )
 _LAYOUTS: tuple[tuple[str | None, str], ...] = (
     ("\t", "."), ("\t", ","), (";", "."), (";", ","), (",", "."), (None, "."), (None, ","),

@@ -4,10 +4,11 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from layerscan.readers.banner import find_banner
-from layerscan.readers.images import from_array, open_image
 from PIL import Image, ImageDraw, ImageFont
 from scipy.ndimage import gaussian_filter
+
+from layerscan.readers.banner import find_banner
+from layerscan.readers.images import from_array, open_image
 
 ROWS, COLUMNS = 400, 512
 TEXT = "HV 10.00 kV   WD 5.0 mm   mag 20 000 x   1 um"

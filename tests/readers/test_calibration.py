@@ -7,6 +7,8 @@ import pytest
 import tifffile
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from PIL import Image
+
 from layerscan.errors import CalibrationError, InputError, SettingsError
 from layerscan.readers.calibration import (
     ScaleStatement,
@@ -17,7 +19,6 @@ from layerscan.readers.calibration import (
     state_resolution,
 )
 from layerscan.readers.images import from_array, open_image
-from PIL import Image
 
 PICTURE = np.arange(48 * 64, dtype=np.uint16).reshape(48, 64)
 
@@ -35,7 +36,9 @@ def test_error_names_file_and_remedy(tmp_path):
     # STYLE of the project's errors: which thing, what came, what to do next
     path = tmp_path / "shell_03.tif"
     tifffile.imwrite(path, PICTURE)
-    with pytest.raises(CalibrationError, match=r"'shell_03.tif' is unknown: the file has no scale tag. Give pixel_size"):
+    with pytest.raises(
+        CalibrationError, match=r"'shell_03.tif' is unknown: the file has no scale tag. Give pixel_size"
+    ):
         open_image(path)
 
 
@@ -253,7 +256,16 @@ def test_resolution_is_the_inverse_of_the_pixel_size(nm, unit):
 
 @pytest.mark.parametrize(
     ("unit", "nm"),
-    [("A", 0.1), ("Å", 0.1), ("Angstrom", 0.1), ("µm", 1e3), ("μm", 1e3), ("Micrometer", 1e3), ("px", None), ("", None)],
+    [
+        ("A", 0.1),
+        ("Å", 0.1),
+        ("Angstrom", 0.1),
+        ("µm", 1e3),
+        ("μm", 1e3),
+        ("Micrometer", 1e3),
+        ("px", None),
+        ("", None),
+    ],
 )
 def test_spelling_of_units(unit, nm):
     # rosettasciio#91 (Angstrom); SI brochure, 9th edition, table 7 (prefixes)

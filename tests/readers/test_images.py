@@ -9,9 +9,10 @@ import mrcfile
 import numpy as np
 import pytest
 import tifffile
+from PIL import Image
+
 from layerscan.errors import CalibrationError, InputError, MissingExtraError
 from layerscan.readers.images import from_array, open_image
-from PIL import Image
 
 RNG = np.random.default_rng(7)
 PICTURE = RNG.integers(0, 256, (37, 53)).astype(np.uint8)
