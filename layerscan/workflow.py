@@ -174,6 +174,7 @@ def compare(
         prediction = documents.read_prediction(path)
         origin = {"prediction_source": str(path), "prediction_sha256": file_sha256(path)}
     if observed is not None and not isinstance(observed, Spectrum):
+        origin["observed_source"] = str(observed)
         observed = open_spectrum(observed, quantity=chosen.quantity)
     return replace(compare_light(prediction, observed, chosen, progress=progress), **origin)
 
