@@ -46,6 +46,7 @@ FLAGS: Mapping[str, str] = {
     "few_layers": "Too few layers for a spread or a period that means much.",
     "near_nyquist": "A layer is only a few pixels wide.",
     "not_resolved": "The layer is thinner than the blur resolves on its own; its thickness leans on its neighbours.",
+    "line_taken_as_normal": "The line is too narrow to show the layers' direction; it was taken as their normal.",
     "tilt_uncorrected": "No obliquity of the section was stated; an oblique cut shows layers too thick.",
     "geometry_corrected": "Thicknesses were corrected for the stated section geometry.",
     "orientation_varies": "The layers' direction varies across the field.",

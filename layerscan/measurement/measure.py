@@ -63,11 +63,11 @@ def measure_micrograph(
             f"Pixel size of '{name}' is unknown. Give pixel_size ('VALUE [+- U] UNIT') or pixel_size_nm."
         )
     _say(progress, "reading pixels", 0.0)
-    picture = prepare_picture(micrograph, settings.region)
     if settings.line is not None:
         from layerscan.measurement.line import measure_line_of
 
-        return measure_line_of(micrograph, settings, picture, progress=progress)
+        return measure_line_of(micrograph, settings, progress=progress)
+    picture = prepare_picture(micrograph, settings.region)
     return _measure_field(micrograph, settings, picture, progress)
 
 
@@ -144,9 +144,9 @@ def _is_saturated(image: NDArray[np.float32], stored_type: str) -> bool:
     """Whether more than a hundredth of the usable pixels sit at either end of what the file can hold."""
     if not stored_type.startswith(("uint8", "uint16", "int16")):
         return False
-    finite = image[np.isfinite(image)]
-    share = max(float((finite == finite.max()).mean()), float((finite == finite.min()).mean()))
-    return share > SATURATED_SHARE and len(np.unique(finite[:: max(len(finite) // 4096, 1)])) > 2
+    low, high = np.nanmin(image), np.nanmax(image)
+    at_ends = np.count_nonzero(image == low), np.count_nonzero(image == high)
+    return max(at_ends) > SATURATED_SHARE * image.size and sum(at_ends) < image.size
 
 
 def _stretch(image: NDArray[np.float32], factor: float, axis: int) -> NDArray[np.float32]:
@@ -190,7 +190,7 @@ def _measure_field(
     if settings.edits:
         from layerscan.measurement.editing import apply_edits
 
-        found = apply_edits(found, settings.edits, unit_nm=picture.unit_nm, settings=settings)
+        found = apply_edits(found, settings, unit_nm=picture.unit_nm)
     result = build_measurement(
         micrograph, settings, detection, found, unit_nm=picture.unit_nm, flags=picture.flags
     )
@@ -374,38 +374,9 @@ def _spacing(followed: FollowedStack, seen: LayerDetection) -> tuple[float | Non
     """Dominant spacing [px] from the strongest line of the profile's spectrum near the detected one, and its spread."""
     if seen.period_px is None:
         return None, None
+    from layerscan.measurement.spectrum import dominant_spacing
+
     return dominant_spacing(followed.profile, near=seen.period_px)
-
-
-def dominant_spacing(profile: FloatArray, *, near: float) -> tuple[float, float]:
-    """Strongest line of a profile's power spectrum within a factor 1.6 of ``near`` and the spread of that line.
-
-    Notes
-    -----
-    The spread is the half width of the line at half its height, so that an irregular structure states a wide one; a
-    strictly periodic profile is limited by its own length.
-    """
-    seen = np.isfinite(profile)
-    value = np.where(seen, profile, np.mean(profile[seen]))
-    n = len(value)
-    x = np.arange(n)
-    value = (value - np.polyval(np.polyfit(x, value, 1), x)) * np.hanning(n)
-    size = 1
-    while size < 16 * n:
-        size *= 2
-    power = np.abs(np.fft.rfft(value, size)) ** 2
-    low, high = max(int(size / near / 1.6), 1), min(int(size / near * 1.6) + 1, len(power) - 2)
-    if high <= low:
-        return near, 0.3 * near
-    best = low + int(np.argmax(power[low : high + 1]))
-    half = 0.5 * power[best]
-    left, right = best, best
-    while left > 0 and power[left] > half:
-        left -= 1
-    while right < len(power) - 1 and power[right] > half:
-        right += 1
-    frequency = best / size
-    return 1 / frequency, 0.25 * (right - left) / size / frequency**2
 
 
 __all__ = ["MeasurementError", "Picture", "measure_micrograph", "prepare_picture"]

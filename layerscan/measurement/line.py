@@ -1,0 +1,416 @@
+"""A line instead of a field: the same estimators on a band of given width, fast enough to answer while it is dragged.
+
+The band is sampled inside the picture only. Its columns are sheared so that layers which cross it at an angle are not
+blurred, and lengths are given along the layer normal wherever the band is wide enough to show its direction.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+from numba import njit
+
+from layerscan.errors import InputError, MeasurementError
+from layerscan.measurement.field import Frame, sample_field
+from layerscan.measurement.profile import find_stack
+from layerscan.measurement.result import FoundLayers, build_measurement, empty_measurement
+from layerscan.measurement.segmentation import OTHER
+from layerscan.records import Detection
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+    from layerscan.measurement.measure import Picture
+    from layerscan.records import FloatArray, Measurement, Micrograph, Phase, Progress, Region
+    from layerscan.settings import MeasureSettings
+
+LEAST_SAMPLES = 12
+LEAST_Z = 4.0  # of the correlation between the two halves of the band
+MOST_SLOPE = 1.2
+
+
+@dataclass(frozen=True, kw_only=True, eq=False)
+class Band:
+    """A sampled band: ``intensity`` (depth, column) at steps of one pixel, NaN outside the picture.
+
+    Depth 0 lies at ``start``; depth grows along ``angle_rad`` (from +column towards +row).
+    """
+
+    intensity: NDArray[np.float32]
+    start: tuple[float, float]
+    angle_rad: float
+
+
+def sample_band(
+    image: NDArray[np.float32], *, start: tuple[float, float], stop: tuple[float, float], width_px: float
+) -> Band:
+    """Sample a band along a line on square pixels.
+
+    Parameters
+    ----------
+    image : (rows, columns) float32 array
+        NaN where a pixel must not be used.
+    start, stop : (row, column)
+        Ends of the line [px]; either may lie outside the picture.
+    width_px : float
+        Width of the band; one column per pixel.
+
+    Returns
+    -------
+    Band
+        Samples outside the picture are NaN: no zeros are pulled in.
+    """
+    length = math.hypot(stop[0] - start[0], stop[1] - start[1])
+    angle = math.atan2(stop[0] - start[0], stop[1] - start[1])
+    columns = max(int(round(width_px)), 1)
+    count = int(math.floor(length + 1e-9)) + 1
+    frame = Frame(row=start[0], column=start[1], angle_rad=angle, curvature=0.0)
+    shift = np.zeros((1, columns))
+    field = sample_field(
+        np.ascontiguousarray(image, dtype=np.float32), frame.vector(), 0.0, 1.0, count, -0.5 * (columns - 1), 1.0, 1,
+        shift, 0.0, 1.0,
+    )  # fmt: skip
+    return Band(intensity=field, start=start, angle_rad=angle)
+
+
+@njit(cache=True)  # type: ignore[untyped-decorator]
+def sheared_mean(field, slope, group):  # type: ignore[no-untyped-def]
+    """Mean profile with column j moved by slope times its distance from the middle; columns joined by ``group`` first.
+
+    Returns (mean, variance of one sample about it, number).
+    """
+    count, columns = field.shape
+    total = np.zeros(count)
+    square = np.zeros(count)
+    number = np.zeros(count)
+    groups = (columns + group - 1) // group
+    for g in range(groups):
+        j0, j1 = g * group, min((g + 1) * group, columns)
+        middle = 0.5 * (j0 + j1 - 1) - 0.5 * (columns - 1)
+        shift = slope * middle
+        whole = int(math.floor(shift + 1e-9))
+        x = shift - whole
+        if x < 1e-6:
+            x = 0.0
+        x2 = x * x
+        w0 = x * (-0.5 + x - 0.5 * x2)
+        w1 = 1 + x2 * (-2.5 + 1.5 * x)
+        w2 = x * (0.5 + 2 * x - 1.5 * x2)
+        w3 = 0.5 * x2 * (x - 1)
+        for d in range(count):
+            at = d + whole
+            if at < 0 or at >= count:
+                continue
+            for j in range(j0, j1):
+                if x == 0.0:
+                    value = float(field[at, j])
+                elif 1 <= at < count - 2:
+                    value = w0 * field[at - 1, j] + w1 * field[at, j] + w2 * field[at + 1, j] + w3 * field[at + 2, j]
+                elif at + 1 < count:
+                    value = (1 - x) * field[at, j] + x * field[at + 1, j]
+                else:
+                    continue
+                if value == value:
+                    total[d] += value
+                    square[d] += value * value
+                    number[d] += 1
+    mean = np.empty(count)
+    variance = np.empty(count)
+    for d in range(count):
+        n = number[d]
+        mean[d] = total[d] / n if n > 0 else np.nan
+        variance[d] = max(square[d] - total[d] * total[d] / n, 0.0) / (n - 1) if n > 1 else np.nan
+    return mean, variance, number
+
+
+@njit(cache=True)  # type: ignore[untyped-decorator]
+def _energy(field, slope):  # type: ignore[no-untyped-def]
+    """Energy of the sheared mean profile: what is common to all columns."""
+    count, columns = field.shape
+    total = 0.0
+    n = 0
+    s1 = 0.0
+    for d in range(count):
+        value = 0.0
+        number = 0
+        for j in range(columns):
+            at = d + slope * (j - 0.5 * (columns - 1))
+            low = int(math.floor(at))
+            if low < 0 or low + 1 >= count:
+                continue
+            v = field[low, j] + (at - low) * (field[low + 1, j] - field[low, j])
+            if v == v:
+                value += v
+                number += 1
+        if number == columns:
+            value /= number
+            total += value * value
+            s1 += value
+            n += 1
+    return total / n - (s1 / n) ** 2 if n > 0.5 * count else -1.0
+
+
+@njit(cache=True)  # type: ignore[untyped-decorator]
+def find_slope(field, most):  # type: ignore[no-untyped-def]
+    """Slope of the layers across the band (depth per column) that leaves the mean profile most energy."""
+    count, columns = field.shape
+    step = min(0.5 / columns * 4, 0.25)
+    steps = int(most / step)
+    best, slope = _energy(field, 0.0), 0.0
+    floor = best * (1 + 1e-9)
+    for i in range(1, steps + 1):
+        for sign in (-1.0, 1.0):
+            value = _energy(field, sign * i * step)
+            if value > floor and value > best:
+                best, slope = value, sign * i * step
+    width = step
+    while width > 2e-4:
+        left, right = _energy(field, slope - width), _energy(field, slope + width)
+        if left > best:
+            best, slope = left, slope - width
+        elif right > best:
+            best, slope = right, slope + width
+        else:
+            width *= 0.5
+    return slope, best
+
+
+def measure_line_of(
+    micrograph: Micrograph, settings: MeasureSettings, *, progress: Progress | None = None
+) -> Measurement:
+    """Measure along ``settings.line``: the same record as for a field.
+
+    Parameters
+    ----------
+    micrograph : Micrograph
+    settings : MeasureSettings
+        ``line`` ROW0, COL0, ROW1, COL1 in pixels of the page and ``width`` (10 px where it is not given).
+    progress : callable, optional
+
+    Returns
+    -------
+    Measurement
+        ``layered`` False where nothing along the line stands out of its noise.
+
+    Raises
+    ------
+    InputError
+        The line lies outside the image.
+    MeasurementError
+        Too little of the line lies in the image.
+    """
+    from layerscan.measurement.measure import prepare_picture
+    from layerscan.settings import parse_width
+
+    assert settings.line is not None and micrograph.pixel_size is not None
+    size = micrograph.pixel_size
+    unit = min(size.row_nm, size.column_nm)
+    value, of = parse_width(settings.width) if settings.width else (10.0, "px")
+    width = value if of == "px" else value / unit
+    box = _bounding_box(settings, micrograph.shape, width)
+    picture = prepare_picture(micrograph, box)
+    start, stop = _ends_on_grid(settings.line, picture)
+    measured = measure_line(picture, start=start, stop=stop, width_px=width)
+    found, z, region = measured
+    detection = Detection(
+        layered=found is not None,
+        periodic=found is not None,
+        statistic=z,
+        p_value=None if z is None else 0.5 * math.erfc(z / math.sqrt(2)),
+        region=picture.region_to_page(region),
+    )
+    if found is None:
+        return empty_measurement(micrograph, settings, detection, flags=picture.flags)
+    if settings.edits:
+        from layerscan.measurement.editing import apply_edits
+
+        found = apply_edits(found, settings, unit_nm=picture.unit_nm)
+    if progress is not None:
+        progress("measured", 1.0)
+    return build_measurement(micrograph, settings, detection, found, unit_nm=picture.unit_nm, flags=picture.flags)
+
+
+def _bounding_box(settings: MeasureSettings, shape: tuple[int, int], width: float) -> Region:
+    """Part of the page that the band needs.
+
+    Raises
+    ------
+    InputError
+        None of the line lies in the image (or in the region that was asked for).
+    """
+    assert settings.line is not None
+    r0, c0, r1, c1 = settings.line
+    rows, columns = shape
+    low_row, low_column, high_row, high_column = settings.region or (0, 0, rows, columns)
+    high_row, high_column = min(high_row, rows), min(high_column, columns)
+    # coarser axis of anisotropic pixels: the width is counted on the finer one, so this margin is ample
+    margin = 0.5 * width + 3
+    if not _crosses((r0, c0), (r1, c1), (low_row, low_column, high_row - 1, high_column - 1)):
+        raise InputError(
+            f"The line {r0:g},{c0:g},{r1:g},{c1:g} lies outside the image of {rows} rows and {columns} columns. "
+            "Give R0,C0,R1,C1 with a part of the line inside it."
+        )
+    return (
+        max(math.floor(min(r0, r1) - margin), low_row),
+        max(math.floor(min(c0, c1) - margin), low_column),
+        min(math.ceil(max(r0, r1) + margin) + 1, high_row),
+        min(math.ceil(max(c0, c1) + margin) + 1, high_column),
+    )
+
+
+def _crosses(a: tuple[float, float], b: tuple[float, float], box: tuple[float, float, float, float]) -> bool:
+    """Whether a segment has a part of some length inside a box (Liang and Barsky's clipping)."""
+    low, high = 0.0, 1.0
+    for p, d, lower, upper in ((a[0], b[0] - a[0], box[0], box[2]), (a[1], b[1] - a[1], box[1], box[3])):
+        if d == 0:
+            if not lower <= p <= upper:
+                return False
+            continue
+        t0, t1 = sorted(((lower - p) / d, (upper - p) / d))
+        low, high = max(low, t0), min(high, t1)
+    return high > low
+
+
+def _ends_on_grid(
+    line: tuple[float, float, float, float], picture: Picture
+) -> tuple[tuple[float, float], tuple[float, float]]:
+    """Ends of the line on the picture's grid, in the order in which depth grows along 0 <= angle < 180 degrees."""
+    ends = [
+        ((r - picture.row0) / picture.row_scale, (c - picture.column0) / picture.column_scale)
+        for r, c in ((line[0], line[1]), (line[2], line[3]))
+    ]
+    rise, run = ends[1][0] - ends[0][0], ends[1][1] - ends[0][1]
+    if rise < 0 or (rise == 0 and run < 0):
+        ends.reverse()
+    return ends[0], ends[1]
+
+
+def measure_line(
+    picture: Picture, *, start: tuple[float, float], stop: tuple[float, float], width_px: float
+) -> tuple[FoundLayers | None, float | None, Region]:
+    """Find the layers along a line: (layers or None, how far they stand out of the noise, region of the band).
+
+    Raises
+    ------
+    MeasurementError
+        Fewer than twelve samples of the line lie in the image.
+    """
+    band = sample_band(picture.intensity, start=start, stop=stop, width_px=width_px)
+    field = band.intensity
+    count, columns = field.shape
+    group = max(1, columns // 8)
+    joined = _join(field, group)
+    slope = 0.0
+    sure = columns >= 4 and joined.shape[1] >= 2
+    if sure:
+        slope = find_slope(joined, MOST_SLOPE * group)[0] / group
+    mean, single, number = sheared_mean(field, slope, 1)
+    enough = np.flatnonzero(number >= 0.5 * columns)
+    if len(enough) < LEAST_SAMPLES:
+        raise MeasurementError(
+            f"Only {len(enough)} samples of the line lie in the image; at least {LEAST_SAMPLES} are needed. "
+            "Move the line into the image or make it longer."
+        )
+    low, high = int(enough[0]), int(enough[-1]) + 1
+    mean = np.where(number[low:high] >= 0.5 * columns, mean[low:high], np.nan)
+    variance = _variance_of_mean(mean, single[low:high], number[low:high], columns)
+    region = _band_region(picture, start, stop, width_px)
+    period = profile_period(mean)
+    z = _stands_out(field[low:high], slope, mean)
+    if period is None or z < LEAST_Z:
+        return None, z, region
+    stack = find_stack(mean, variance=variance, period=period)
+    if stack is None:
+        return None, z, region
+    cosine = 1 / math.sqrt(1 + slope * slope)
+    position = low + stack.position
+    row = start[0] + position * math.sin(band.angle_rad)
+    column = start[1] + position * math.cos(band.angle_rad)
+    row, column = picture.to_page(row, column)
+    depth = (stack.position - stack.position[0]) * cosine
+    u = np.sqrt(np.maximum(np.diag(stack.fit.covariance), 0.0)) * cosine
+    phases: tuple[Phase, ...] = tuple(("dark", "bright", "other")[k] for k in stack.phase)  # type: ignore[misc]
+    nothing = np.full(len(depth), np.nan)
+    from layerscan.measurement.spectrum import dominant_spacing
+
+    spacing, u_spacing = dominant_spacing(mean, near=period)
+    orientation = band.angle_rad - math.atan(slope)
+    found = FoundLayers(
+        depth=depth, covariance=stack.fit.covariance * cosine**2, phase=phases,
+        ends=(float(stack.position[0]) * cosine, float(high - low - 1 - stack.position[-1]) * cosine),
+        blur=float(math.hypot(stack.fit.shared[0], stack.fit.shared[1] / math.sqrt(12))) * cosine,
+        orientation_rad=orientation % math.pi, u_orientation_rad=None,
+        spacing=spacing * cosine, u_spacing=u_spacing * cosine,
+        spacing_method="power spectrum of the line profile",
+        profile_depth=(np.arange(high - low) - float(stack.position[0])) * cosine, profile=mean,
+        station_depth=depth[:, None], u_station=u[:, None], row=row[:, None], column=column[:, None],
+        station_step=1.0, roughness=nothing, correlation_length=nothing, lateral_noise=u,
+        flags=() if sure else ("line_taken_as_normal",),
+    )  # fmt: skip
+    return found, z, region
+
+
+def _join(field: NDArray[np.float32], group: int) -> NDArray[np.float32]:
+    """Mean of every ``group`` columns, NaN where one of them has none."""
+    if group == 1:
+        return field
+    whole = field.shape[1] // group
+    joined = field[:, : whole * group].reshape(field.shape[0], whole, group).mean(axis=2)
+    return np.ascontiguousarray(joined, dtype=np.float32)
+
+
+def _variance_of_mean(mean: FloatArray, single: FloatArray, number: FloatArray, columns: int) -> FloatArray:
+    """Variance of each sample of the mean; for a line of one column, that of what white noise leaves in it."""
+    if columns >= 4:
+        typical = float(np.nanmedian(single)) if np.isfinite(single).any() else 0.0
+    else:
+        second = np.diff(mean[np.isfinite(mean)], n=2)
+        typical = (1.4826 * float(np.median(np.abs(second)))) ** 2 / 6 * columns if len(second) else 0.0
+    typical = max(typical, 1e-12 * max(float(np.nanvar(mean)), 1e-300))
+    return np.where(np.isfinite(mean), typical / np.maximum(number, 1), 0.0)
+
+
+def _stands_out(field: NDArray[np.float32], slope: float, mean: FloatArray) -> float:
+    """Fisher's z of the correlation between odd and even columns; for one column, between neighbouring samples."""
+    if field.shape[1] >= 2:
+        first = sheared_mean(np.ascontiguousarray(field[:, ::2]), 2 * slope, 1)[0]
+        second = sheared_mean(np.ascontiguousarray(field[:, 1::2]), 2 * slope, 1)[0]
+    else:
+        first, second = mean[:-1], mean[1:]
+    good = np.isfinite(first) & np.isfinite(second)
+    n = int(good.sum())
+    if n < LEAST_SAMPLES:
+        return 0.0
+    a, b = first[good] - first[good].mean(), second[good] - second[good].mean()
+    norm = math.sqrt(float(a @ a) * float(b @ b))
+    if not norm > 0:
+        return 0.0
+    r = min(max(float(a @ b) / norm, -0.999999), 0.999999)
+    return math.atanh(r) * math.sqrt(max(n / 4 - 3, 1))
+
+
+def profile_period(mean: FloatArray) -> float | None:
+    """Dominant spacing of a profile [samples]; None where it holds less than 1.5 of them."""
+    from layerscan.measurement.spectrum import strongest_spacing
+
+    return strongest_spacing(mean)
+
+
+def _band_region(
+    picture: Picture, start: tuple[float, float], stop: tuple[float, float], width: float
+) -> Region:
+    """Region of the picture that holds the band."""
+    rows, columns = picture.intensity.shape
+    half = 0.5 * width
+    low_r, high_r = sorted((start[0], stop[0]))
+    low_c, high_c = sorted((start[1], stop[1]))
+    return (
+        min(max(math.floor(low_r - half), 0), rows - 1), min(max(math.floor(low_c - half), 0), columns - 1),
+        min(max(math.ceil(high_r + half) + 1, 1), rows), min(max(math.ceil(high_c + half) + 1, 1), columns),
+    )  # fmt: skip
+
+
+__all__ = ["OTHER", "Band", "measure_line", "measure_line_of", "sample_band"]
