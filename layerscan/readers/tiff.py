@@ -45,6 +45,8 @@ def plan_tiff(path: Path, page: int) -> ImagePlan:
         shape = _check_layout(path, chosen, tif.filehandle.size)
         found = read_scales(chosen, first, shape)
         doubts = [*found.doubts, *_page_doubts(chosen)]
+        if found.images is not None and found.images > count:
+            doubts.append(f"The description speaks of {found.images} images; the file lists {count}, which are read.")
         return ImagePlan(
             shape=shape,
             stored_type=str(chosen.dtype),

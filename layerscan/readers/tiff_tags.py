@@ -29,6 +29,7 @@ class TagFindings:
     no_scale: list[str] = field(default_factory=list)
     doubts: list[str] = field(default_factory=list)
     banner: Region | None = None
+    images: int | None = None  # how many pages a description speaks of
     metadata: dict[str, str] = field(default_factory=dict)
 
 
@@ -207,7 +208,7 @@ def _description(page: Any) -> str:
 
 def _has_unit_in_description(description: str) -> bool:
     """Whether the resolution tag counts pixels per unit of the description, not per inch or cm."""
-    return bool(re.search(r"^(ImageJ=|unit=)", description, re.MULTILINE))
+    return bool(re.search(r"^unit=", description, re.MULTILINE))
 
 
 def _read_description(found: TagFindings, text: str, page: Any, shape: tuple[int, int]) -> None:
@@ -220,18 +221,19 @@ def _read_description(found: TagFindings, text: str, page: Any, shape: tuple[int
             _read_ome(found, root, shape)
         else:
             _read_magnification(found, root, page)
-    elif _has_unit_in_description(text):
+        return
+    images = re.search(r"^images=(\d{1,9})\s*$", text, re.MULTILINE)
+    found.images = int(images[1]) if images else None
+    if _has_unit_in_description(text):
         _read_unit_line(found, text, page)
 
 
 def _read_unit_line(found: TagFindings, text: str, page: Any) -> None:
     """A line ``unit=NAME``: the resolution tags count pixels per that unit; a z spacing is of no interest here."""
-    match = re.search(r"^unit=(.*)$", text, re.MULTILINE)
-    unit = match[1].strip() if match else ""
+    unit = "".join(re.findall(r"^unit=(.*)$", text, re.MULTILINE)[:1]).strip()
     column, row = page.get_resolution(1, 1) if 282 in page.tags and 283 in page.tags else (None, None)
-    if not unit or length_nm(unit) is None:
-        named = f"is '{unit}', no length" if unit else "is missing"
-        found.no_scale.append(f"the unit in its description {named}")
+    if length_nm(unit) is None:
+        found.no_scale.append(f"the unit in its description is '{unit}', no length")
         return
     if not (column and row):
         found.no_scale.append("its description names a unit, but there is no resolution tag to go with it")
@@ -240,9 +242,6 @@ def _read_unit_line(found: TagFindings, text: str, page: Any) -> None:
         row, column, unit_nm=length_nm(unit), source="description unit with resolution tag", unit_name=unit
     )
     _take(found, stated)
-    images = re.search(r"^images=(\d+)$", text, re.MULTILINE)
-    if images:
-        found.metadata["images in description"] = images[1][:12]
 
 
 def _read_ome(found: TagFindings, root: ElementTree.Element, shape: tuple[int, int]) -> None:

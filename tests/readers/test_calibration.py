@@ -65,7 +65,7 @@ def test_resolution_without_unit_is_no_calibration(tmp_path):
 
 @pytest.mark.parametrize(("unit", "per_unit"), [(2, 2.54e7 / 2.5), (3, 1e7 / 2.5)])
 def test_resolution_tag_in_inch_and_cm(tmp_path, unit, per_unit):
-    # TIFF 6.0: XResolution pixels per ResolutionUnit; 1 inch = 25.4 mm exactly; ome/bioformats#3676 was a factor 1e4 here
+    # TIFF 6.0: XResolution pixels per ResolutionUnit; 1 inch = 25.4 mm exactly; ome/bioformats#3676
     path = tmp_path / "a.tif"
     tifffile.imwrite(path, PICTURE, resolution=(per_unit, per_unit), resolutionunit=unit)
     size = open_image(path).pixel_size
@@ -303,3 +303,13 @@ def test_from_array_refuses(array, match):
     # issue 2, bad input
     with pytest.raises(InputError, match=match):
         from_array(array, pixel_size_nm=2.0)
+
+
+def test_description_without_unit_leaves_the_resolution_tag(tmp_path):
+    # a description of that style without a unit line: the resolution tag keeps its own unit
+    path = tmp_path / "a.tif"
+    description = "ImageJ=1.53\nimages=5\n"
+    tifffile.imwrite(path, PICTURE, description=description, resolution=(4e6, 4e6), resolutionunit=3, metadata=None)
+    image = open_image(path)
+    assert image.pixel_size.row_nm == pytest.approx(2.5)
+    assert any("speaks of 5 images; the file lists 1" in doubt for doubt in image.doubts)

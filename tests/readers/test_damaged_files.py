@@ -1,4 +1,4 @@
-"""Damaged and hostile files: a valid image or an error in plain words, never another exception, never all the memory."""
+"""Damaged and hostile files: a valid image or an error in plain words, never another exception."""
 
 from __future__ import annotations
 
@@ -76,9 +76,7 @@ def try_to_open(path, page):
         image = open_image(path, page=page, require_pixel_size=False)
         pixels = image.load()
     except LayerscanError as error:
-        assert str(error).strip()
-        assert "Traceback" not in str(error)
-        return "refused"
+        return "refused" if path.name in str(error) else "refused without a name"
     assert pixels.shape == image.shape
     assert pixels.dtype == np.float32
     assert np.isfinite(pixels).any()
@@ -104,6 +102,7 @@ def test_200_damaged_files(tmp_path):
     outcomes = run_fuzz(tmp_path, 200, seed=1)
     assert outcomes["refused"] >= 40
     assert outcomes["opened"] >= 20
+    assert outcomes["refused"] + outcomes["opened"] == 200
 
 
 @pytest.mark.slow
@@ -112,6 +111,7 @@ def test_3000_damaged_files(tmp_path):
     outcomes = run_fuzz(tmp_path, 3000, seed=2)
     assert outcomes["refused"] >= 600
     assert outcomes["opened"] >= 300
+    assert outcomes["refused"] + outcomes["opened"] == 3000
 
 
 @pytest.mark.parametrize("name", ["plain.tif", "lzw.tif", "a.png", "a.mrc", "unit.tif"])

@@ -294,7 +294,7 @@ def test_missing_empty_folder_and_other_files(tmp_path):
     fake.write_text("not a picture")
     with pytest.raises(InputError, match="no TIFF file: it begins otherwise"):
         open_plain(fake)
-    with pytest.raises(InputError, match="cannot be opened|no file"):
+    with pytest.raises(InputError, match=r"cannot be opened|no file"):
         open_plain("a\0b.tif")
 
 

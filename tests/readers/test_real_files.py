@@ -71,7 +71,7 @@ def test_series_with_and_without_a_pixel_size():
     # tag 33560: 23.928 pm in the second series, none in the first (72 per inch is no calibration)
     path = REAL / "readers" / "tem_tag33560.tif"
     assert open_image(path, page=1).pixel_size.column_nm == pytest.approx(0.023928, rel=1e-4)
-    with pytest.raises(CalibrationError, match="72 per inch .* no calibration"):
+    with pytest.raises(CalibrationError, match=r"72 per inch .* no calibration"):
         open_image(path)
 
 
@@ -124,7 +124,7 @@ def test_banners():
 
 def test_coatings_have_no_scale():
     # INDEX.md: none, pixels only
-    with pytest.raises(CalibrationError, match="'coating_a.tif' is unknown: the file has no scale tag"):
+    with pytest.raises(CalibrationError, match=r"'coating_a.tif' is unknown: the file has no scale tag"):
         open_image(REAL / "sem-coating" / "coating_a.tif")
 
 
