@@ -20,6 +20,9 @@ PRINT_PIXEL_NM = 10_000.0
 Common practice, no source: 72, 96, 300 or 600 per inch are written by programs that know of no specimen.
 """
 
+SCANNER_PIXEL_NM = 2_000.0
+"""A resolution tag with pixels this coarse (12700 per inch or fewer) may be that of a scanner; common practice too."""
+
 COARSE_PIXEL_NM = 20_000.0
 FINE_PIXEL_NM = 0.001
 AGREEMENT = 0.01
@@ -71,7 +74,10 @@ def state_resolution(
             f"its {source} of {column:g} per {unit_name} is that of a screen or a print ({column_nm / 1e3:.0f} um per "
             "pixel), which is no calibration"
         )
-    return ScaleStatement(row_nm=row_nm, column_nm=column_nm, source=source)
+    doubts: tuple[str, ...] = ()
+    if max(row_nm, column_nm) >= SCANNER_PIXEL_NM and unit_nm >= LENGTH_NM["cm"]:
+        doubts = (f"The {source} of {column:g} per {unit_name} may be that of a scanner, not of the specimen.",)
+    return ScaleStatement(row_nm=row_nm, column_nm=column_nm, source=source, doubts=doubts)
 
 
 def fit_to_picture(
@@ -152,7 +158,7 @@ def settle_pixel_size(
                     f"You gave {_say(given.row_nm, given.column_nm)}, but {statement.source} states "
                     f"{_say(statement.row_nm, statement.column_nm)}; yours was used."
                 )
-        return replace(given, doubts=(*given.doubts, *doubts, *_axis_doubts(given.row_nm, given.column_nm)))
+        return replace(given, doubts=(*given.doubts, *doubts))
     if not usable:
         return None
     chosen = usable[0]
@@ -163,7 +169,10 @@ def settle_pixel_size(
                 f"{chosen.source} states {_say(chosen.row_nm, chosen.column_nm)}, but {other.source} states "
                 f"{_say(other.row_nm, other.column_nm)}; the former was used."
             )
-    doubts += _axis_doubts(chosen.row_nm, chosen.column_nm)
+    if not 0.999 <= chosen.row_nm / chosen.column_nm <= 1.001:
+        doubts.append(
+            f"Rows ({chosen.row_nm:.6g} nm) and columns ({chosen.column_nm:.6g} nm) have different pixel sizes."
+        )
     if chosen.column_nm > COARSE_PIXEL_NM:
         doubts.append(f"A pixel of {chosen.column_nm / 1e3:.3g} um is unusually large for an electron micrograph.")
     if chosen.column_nm < FINE_PIXEL_NM:
@@ -250,13 +259,6 @@ def _plausible(statement: ScaleStatement) -> bool:
 
 def _agree(statement: ScaleStatement, row_nm: float, column_nm: float) -> bool:
     return abs(statement.row_nm / row_nm - 1) <= AGREEMENT and abs(statement.column_nm / column_nm - 1) <= AGREEMENT
-
-
-def _axis_doubts(row_nm: float, column_nm: float) -> list[str]:
-    ratio = row_nm / column_nm
-    if 0.999 <= ratio <= 1.001:
-        return []
-    return [f"Rows ({row_nm:.6g} nm) and columns ({column_nm:.6g} nm) have different pixel sizes."]
 
 
 def _say(row_nm: float, column_nm: float) -> str:

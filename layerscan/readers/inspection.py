@@ -5,10 +5,15 @@ from __future__ import annotations
 import numpy as np
 
 from layerscan._version import __version__
+from layerscan.readers.source import positive
 from layerscan.records import ImageSource, Inspection, Micrograph
 
 SATURATED_ADVICE = 0.01
 """Share of pixels at the ends of the stored range from which saturation is told (common practice, no source)."""
+
+
+SMALL_TILT_DEG = 2.0
+"""A tilt below this changes lengths by less than 0.1 % (1 - cos 2 deg = 0.0006)."""
 
 
 def inspect_image(micrograph: Micrograph) -> Inspection:
@@ -111,14 +116,21 @@ def _advise(micrograph: Micrograph, flags: tuple[str, ...], values: np.ndarray) 
     elif "calibration_uncertainty_unknown" in flags:
         size = micrograph.pixel_size.column_nm
         advice.append(
-            f"State how well the pixel size is known, such as --pixel-size '{size:.6g} +- {size * 0.02:.2g} nm': "
-            "without it no comparison with a spectrum can reach a conclusion."
+            f"State how well the pixel size is known: --pixel-size '{size:.6g} +- U nm', U being its standard uncertainty "
+            "from a calibration specimen or certificate. Without it no comparison with a spectrum reaches a conclusion."
         )
     if "pixel_size_doubtful" in flags:
         advice.append("The pixel size is doubtful: check it against the scale bar or a specimen of known spacing.")
     if micrograph.page_count > 1:
         advice.append(
             f"The file has {micrograph.page_count} pages and page {micrograph.page} was read; choose with --page."
+        )
+    tilt, corrected = (micrograph.metadata.get(k, "") for k in ("stage tilt", "tilt corrected by the microscope"))
+    if positive(tilt.removesuffix(" deg").lstrip("-")) and abs(float(tilt.removesuffix(" deg"))) >= SMALL_TILT_DEG:
+        said = f" (tilt corrected by the microscope: {corrected})" if corrected else ""
+        advice.append(
+            f"The header states a stage tilt of {tilt}{said}: give --stage-tilt unless "
+            "the picture is corrected already."
         )
     for exclusion in micrograph.excluded:
         row0, _, row1, _ = exclusion.region

@@ -71,7 +71,15 @@ def plan_instrument(path: Path, page: int) -> ImagePlan:
 
 def _run_worker(path: Path, page: int, folder: Path) -> dict[str, Any]:
     limit = MEMORY_BYTES + 10 * path.stat().st_size
-    command = [sys.executable, "-m", "layerscan.readers.container_worker", str(path.resolve()), str(page), str(folder)]
+    command = [
+        sys.executable,
+        "-P",
+        "-m",
+        "layerscan.readers.container_worker",
+        str(path.resolve()),
+        str(page),
+        str(folder),
+    ]
     try:
         subprocess.run(
             [*command, str(limit)],

@@ -12,7 +12,7 @@ import numpy as np
 
 from layerscan.errors import InputError
 from layerscan.readers.calibration import JPEG_FIELD_MAX, ScaleStatement, state_resolution
-from layerscan.readers.source import MAX_PIXELS, ImagePlan, check_page, check_size, plain_errors, to_grey
+from layerscan.readers.source import ImagePlan, check_page, check_size, plain_errors, to_grey
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -61,14 +61,15 @@ def _open(path: Path) -> Iterator[Any]:
     from PIL import Image
 
     with warnings.catch_warnings():
-        warnings.simplefilter("ignore")  # the size is checked here against MAX_PIXELS instead
-        former = Image.MAX_IMAGE_PIXELS
-        Image.MAX_IMAGE_PIXELS = MAX_PIXELS
+        warnings.simplefilter("ignore")  # Pillow warns from half its limit on and raises above it
         try:
-            with Image.open(path, formats=["PNG", "JPEG", "BMP"]) as image:
-                yield image
-        finally:
-            Image.MAX_IMAGE_PIXELS = former
+            image = Image.open(path, formats=["PNG", "JPEG", "BMP"])
+        except Image.DecompressionBombError:
+            raise InputError(
+                f"'{path.name}' claims more pixels than are read from PNG, JPEG or BMP. Save it as TIFF."
+            ) from None
+        with image:
+            yield image
 
 
 def _read_scale(image: Any, kind: str) -> tuple[list[ScaleStatement], list[str]]:

@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import logging
+from collections.abc import Iterator
+from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -61,11 +63,19 @@ def plan_tiff(path: Path, page: int) -> ImagePlan:
         )
 
 
-def _open(path: Path) -> Any:
+@contextmanager
+def _open(path: Path) -> Iterator[Any]:
+    """The file without any other that it names; what tifffile would log is said here in errors and doubts."""
     import tifffile
 
-    logging.getLogger("tifffile").setLevel(logging.CRITICAL)  # it logs what this module says in errors and doubts
-    return tifffile.TiffFile(path, _multifile=False)
+    logger = logging.getLogger("tifffile")
+    level = logger.level
+    logger.setLevel(logging.CRITICAL)
+    try:
+        with tifffile.TiffFile(path, _multifile=False) as tif:
+            yield tif
+    finally:
+        logger.setLevel(level)
 
 
 def _check_layout(path: Path, page: Any, file_bytes: int) -> tuple[int, int]:

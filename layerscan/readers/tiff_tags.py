@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import re
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
@@ -100,7 +101,12 @@ def _read_34118(found: TagFindings, page: Any, shape: tuple[int, int]) -> None:
     unnamed = entries.get("", ())
     exact = positive(unnamed[3]) if len(unnamed) > 3 else None
     exact_nm = exact * 1e9 if exact else None
-    rounded_nm = _length_entry(entries, "ap_image_pixel_size") or _length_entry(entries, "ap_pixel_size")
+    field_nm = _length_entry(entries, "ap_width")
+    rounded_nm = (
+        _length_entry(entries, "ap_image_pixel_size")
+        or (field_nm / stated_shape[1] if field_nm else None)
+        or _length_entry(entries, "ap_pixel_size")
+    )
     size_nm = rounded_nm or exact_nm
     if rounded_nm and exact_nm:
         scaled = next(
@@ -117,9 +123,16 @@ def _read_34118(found: TagFindings, page: Any, shape: tuple[int, int]) -> None:
         return
     statement = ScaleStatement(row_nm=size_nm, column_nm=size_nm, source="tag 34118")
     found.scales.append(fit_to_picture(statement, stated_shape=stated_shape, shape=shape))
-    magnification = _entry(entries, "ap_mag", 1)
-    if magnification is not None:
-        found.metadata["magnification"] = str(magnification)
+    _note(found, "magnification", _entry(entries, "ap_mag", 1))
+    _note(found, "stage tilt", _entry(entries, "ap_stage_at_t", 1), unit=" deg")
+    _note(found, "tilt corrected by the microscope", _entry(entries, "dp_tilt_correction", 1))
+    _note(found, "voltage", _entry(entries, "ap_actualkv", 1), unit=" kV")
+
+
+def _note(found: TagFindings, name: str, value: Any, *, unit: str = "") -> None:
+    if value is not None and str(value).strip():
+        said = {True: "yes", False: "no"}[value] if isinstance(value, bool) else str(value).strip()
+        found.metadata[name] = f"{said[:100]}{unit}"
 
 
 def _entry(entries: Mapping[str, Any], key: str, index: int) -> Any:
@@ -157,12 +170,12 @@ def _read_34682(found: TagFindings, page: Any, shape: tuple[int, int]) -> None:
             found.banner = (stated[0], 0, shape[0], shape[1])
     else:
         found.scales.append(statement)
-    angle = positive(sections.get("Stage", {}).get("StageT"))
-    if angle:
-        found.metadata["stage tilt"] = f"{angle * 180 / 3.141592653589793:.2f} deg"
-    voltage = positive(sections.get("Beam", {}).get("HV"))
-    if voltage:
-        found.metadata["voltage"] = f"{voltage:g} V"
+    stage = sections.get("Stage", {})
+    tilt = next((stage[key] for key in ("StageT", "StageTa") if isinstance(stage.get(key), (int, float))), None)
+    if tilt is not None:
+        _note(found, "stage tilt", f"{math.degrees(tilt):.2f}", unit=" deg")
+    _note(found, "tilt corrected by the microscope", sections.get("EBeam", {}).get("TiltCorrectionIsOn"))
+    _note(found, "voltage", sections.get("Beam", {}).get("HV"), unit=" V")
 
 
 def _read_33560(found: TagFindings, page: Any, shape: tuple[int, int]) -> None:

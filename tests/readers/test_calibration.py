@@ -313,3 +313,12 @@ def test_description_without_unit_leaves_the_resolution_tag(tmp_path):
     image = open_image(path)
     assert image.pixel_size.row_nm == pytest.approx(2.5)
     assert any("speaks of 5 images; the file lists 1" in doubt for doubt in image.doubts)
+
+
+def test_fine_resolution_tag_of_a_scanner_is_doubted(tmp_path):
+    # 9600 per inch is a film scanner's resolution and 2.6 um per pixel; common practice, no source
+    path = tmp_path / "a.tif"
+    tifffile.imwrite(path, PICTURE, resolution=(9600, 9600), resolutionunit=2)
+    assert any("scanner" in doubt for doubt in open_image(path).pixel_size.doubts)
+    tifffile.imwrite(path, PICTURE, resolution=(4e6, 4e6), resolutionunit=3)
+    assert not open_image(path).pixel_size.doubts

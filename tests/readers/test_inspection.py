@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 import tifffile
@@ -26,7 +28,7 @@ def test_field_of_view_and_extremes():
     found = inspect_image(from_array(RAMP, pixel_size_nm=(2.0, 3.0)))
     assert found.field_of_view_nm == (80.0, 192.0)
     assert (found.minimum, found.maximum) == (10.0, 73.0)
-    assert set(found.flags) == {"calibration_uncertainty_unknown", "anisotropic_pixels", "pixel_size_doubtful"}
+    assert set(found.flags) == {"calibration_uncertainty_unknown", "anisotropic_pixels"}
     assert set(found.flags) <= set(FLAGS)
 
 
@@ -90,3 +92,10 @@ def test_pages_of_a_file(tmp_path):
     found = inspect_image(open_image(tmp_path / "a.tif", pixel_size_nm=2.0, page=1))
     assert (found.page_count, found.image.page) == (3, 1)
     assert any("3 pages and page 1" in line for line in found.advice)
+
+
+@pytest.mark.parametrize(("tilt", "told"), [("52.6 deg", True), ("-37.0 deg", True), ("0.0 deg", False), ("x", False)])
+def test_stage_tilt_of_the_header(tilt, told):
+    # a tilt shortens lengths across its axis by its cosine; below 2 degrees by less than 0.1 %
+    image = replace(from_array(RAMP, pixel_size_nm=2.0, u_relative=0.01), metadata={"stage tilt": tilt})
+    assert any("stage tilt" in line for line in inspect_image(image).advice) == told
