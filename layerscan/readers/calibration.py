@@ -244,7 +244,8 @@ def _user_pixel_size(*, pixel_size_nm: float | tuple[float, float] | None, pixel
         raise SettingsError(f"Pixel size {pixel_size_nm!r} is no number. Give nm such as 2.5, or '2.5 nm'.") from None
     for value in (row_nm, column_nm):
         check_pixel_size(value, given=f"{value:g} nm")
-    return PixelSize(row_nm=row_nm, column_nm=column_nm, u_relative=None, source="given by the user")
+    stated = f"{row_nm!r} nm" if row_nm == column_nm else f"{row_nm!r} nm, {column_nm!r} nm"
+    return PixelSize(row_nm=row_nm, column_nm=column_nm, u_relative=None, source="given by the user", stated=stated)
 
 
 def _plausible(statement: ScaleStatement) -> bool:

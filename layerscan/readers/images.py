@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import hashlib
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from importlib import import_module
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -197,13 +197,7 @@ def from_array(
         if not (np.isfinite(u_relative) and u_relative >= 0):
             raise CalibrationError(f"u_relative of '{name}' is {u_relative}. Give a relative uncertainty such as 0.01.")
         if size is not None:
-            size = PixelSize(
-                row_nm=size.row_nm,
-                column_nm=size.column_nm,
-                u_relative=float(u_relative),
-                source=size.source,
-                doubts=size.doubts,
-            )
+            size = replace(size, u_relative=float(u_relative), stated=_state_with_u(size, float(u_relative)))
     return Micrograph(
         load=lambda: pixels,
         shape=shape,
@@ -263,6 +257,11 @@ def hash_file(path: Path) -> str:
     """SHA-256 of a file as 64 hexadecimal digits."""
     with path.open("rb") as file:
         return hashlib.file_digest(file, "sha256").hexdigest()
+
+
+def _state_with_u(size: PixelSize, u_relative: float) -> str:
+    row, column = (f"{value!r} +- {value * u_relative!r} nm" for value in (size.row_nm, size.column_nm))
+    return row if row == column else f"{row}, {column}"
 
 
 def _checked_page(page: int) -> int:

@@ -98,7 +98,7 @@ def _flags(micrograph: Micrograph, *, holes: bool, saturated: float | None) -> t
             flags.append("calibration_uncertainty_unknown")
         if size.doubts:
             flags.append("pixel_size_doubtful")
-        if abs(size.row_nm / size.column_nm - 1) > 1e-3:
+        if abs(size.row_nm / size.column_nm - 1) > 1e-6:
             flags.append("anisotropic_pixels")
     if micrograph.excluded:
         flags.append("banner_excluded")
@@ -116,8 +116,8 @@ def _advise(micrograph: Micrograph, flags: tuple[str, ...], values: np.ndarray) 
     elif "calibration_uncertainty_unknown" in flags:
         size = micrograph.pixel_size.column_nm
         advice.append(
-            f"State how well the pixel size is known: --pixel-size '{size:.6g} +- U nm', U being its standard uncertainty "
-            "from a calibration specimen or certificate. Without it no comparison with a spectrum reaches a conclusion."
+            f"State how well the pixel size is known: --pixel-size '{size:.6g} +- U nm', U being its standard "
+            "uncertainty from a calibration specimen or certificate. No comparison concludes without it."
         )
     if "pixel_size_doubtful" in flags:
         advice.append("The pixel size is doubtful: check it against the scale bar or a specimen of known spacing.")

@@ -322,3 +322,13 @@ def test_fine_resolution_tag_of_a_scanner_is_doubted(tmp_path):
     assert any("scanner" in doubt for doubt in open_image(path).pixel_size.doubts)
     tifffile.imwrite(path, PICTURE, resolution=(4e6, 4e6), resolutionunit=3)
     assert not open_image(path).pixel_size.doubts
+
+
+@settings(deadline=None, derandomize=True)
+@given(st.floats(1e-3, 1e5), st.floats(1e-3, 1e5), st.none() | st.floats(1e-4, 0.2))
+def test_stated_text_gives_the_same_pixel_size_again(row_nm, column_nm, u_relative):
+    # a saved measurement is run again from the user's words
+    size = from_array(np.zeros((2, 2)), pixel_size_nm=(row_nm, column_nm), u_relative=u_relative).pixel_size
+    again = settle_pixel_size("a", (), pixel_size=size.stated)
+    assert (again.row_nm, again.column_nm) == (row_nm, column_nm)
+    assert again.u_relative == (None if u_relative is None else pytest.approx(u_relative, rel=1e-12))
