@@ -46,6 +46,8 @@ LOG2_E = 1.4426950408889634
 LN2_HIGH, LN2_LOW = 0.6931471803691238, 1.9082149292705877e-10  # k * LN2_HIGH is exact for |k| < 2^20
 SHIFTER = 6755399441055744.0  # 1.5 * 2^52: adding it rounds to an integer and leaves that in the low bits
 EXP_MIN = -708.0
+FLUX_FROM = 0.01  # transmittance from which on it is taken from the flux at the front
+SPLITTER = 134217729.0  # 2^27 + 1 cuts a number into two of at most 26 bits (Dekker, Numer. Math. 18, 224, 1971)
 
 # fused multiply-add, but nothing that reorders or assumes finite numbers
 OPTIONS: dict[str, Any] = {"error_model": "numpy", "fastmath": {"contract"}}
@@ -130,53 +132,45 @@ def _row(buffer: Any, start: int) -> Any:
 
 
 @njit(**OPTIONS)  # type: ignore[untyped-decorator]
-def _turn_thick(constants: Any, state: Any, count: int, thickness: float) -> None:
-    """Phase of a thick layer in half-turns, reduced: thickness and rate are split so that the large part is exact."""
-    high, low = _row(constants, RATE_HIGH * STRIDE), _row(constants, RATE_LOW * STRIDE)
-    phase = _row(state, COS_RE * STRIDE)
-    split = thickness * 134217729.0  # 2^27 + 1, Dekker's split
-    thick_high = split - (split - thickness)
-    thick_low = thickness - thick_high
-    for i in range(count):
-        x = high[i] * thick_high
-        x -= np.rint(x)
-        x += high[i] * thick_low + low[i] * thickness
-        phase[i] = x - np.rint(x)
-
-
-@njit(**OPTIONS)  # type: ignore[untyped-decorator]
 def _turn(constants: Any, state: Any, count: int, thickness: float) -> None:
-    """Phase of a layer in half-turns, reduced to at most half of one."""
+    """Cosine and sine of the real part of a layer's phase."""
     rate = _row(constants, RATE * STRIDE)
-    phase = _row(state, COS_RE * STRIDE)
-    for i in range(count):
-        x = rate[i] * thickness
-        phase[i] = x - np.rint(x)
-
-
-@njit(**OPTIONS)  # type: ignore[untyped-decorator]
-def _rotate_real(state: Any, count: int) -> None:
-    """Cosine and sine of the phase of a layer with real kz."""
     cos, sin = _row(state, COS_RE * STRIDE), _row(state, SIN_RE * STRIDE)
     for i in range(count):
-        x = cos[i]
+        x = rate[i] * thickness
+        x -= np.rint(x)
         z = x * x
         cos[i] = _cos(z)
         sin[i] = _sin(x, z)
 
 
 @njit(**OPTIONS)  # type: ignore[untyped-decorator]
-def _rotate_complex(constants: Any, state: Any, count: int, thickness: float) -> None:
-    """Cosine and sine of a complex phase, both times the decay of the amplitude, and that decay squared."""
+def _turn_thick(constants: Any, state: Any, count: int, thickness: float) -> None:
+    """The same for many half-turns: rate and thickness are split so that the large product is exact."""
+    high, low = _row(constants, RATE_HIGH * STRIDE), _row(constants, RATE_LOW * STRIDE)
+    cos, sin = _row(state, COS_RE * STRIDE), _row(state, SIN_RE * STRIDE)
+    scaled = thickness * SPLITTER
+    thick_high = scaled - (scaled - thickness)
+    thick_low = thickness - thick_high
+    for i in range(count):
+        x = high[i] * thick_high
+        x -= np.rint(x)
+        x += high[i] * thick_low + low[i] * thickness
+        x -= np.rint(x)
+        z = x * x
+        cos[i] = _cos(z)
+        sin[i] = _sin(x, z)
+
+
+@njit(**OPTIONS)  # type: ignore[untyped-decorator]
+def _damp(constants: Any, state: Any, count: int, thickness: float) -> None:
+    """Make cosine and sine complex, both times the decay of the amplitude, and keep the square of that decay."""
     rate = _row(constants, DECAY_RATE * STRIDE)
     c_re, c_im = _row(state, COS_RE * STRIDE), _row(state, COS_IM * STRIDE)
     s_re, s_im = _row(state, SIN_RE * STRIDE), _row(state, SIN_IM * STRIDE)
     decay = _row(state, DECAY * STRIDE)
     for i in range(count):
-        x = c_re[i]
-        z = x * x
-        c = _cos(z)
-        s = _sin(x, z)
+        c, s = c_re[i], s_re[i]
         y = -abs(rate[i]) * thickness
         lost = _expm1(max(y, EXP_MIN))
         cosh = 1.0 + 0.5 * lost
@@ -261,24 +255,36 @@ def _start(constants: Any, eta: int, state: Any, field: int, count: int) -> None
 
 
 @njit(**OPTIONS)  # type: ignore[untyped-decorator]
-def _finish(front: Any, state: Any, field: int, count: int, reflectance: Any, transmittance: Any) -> None:
-    """Reflectance and transmittance from the fields at the front; eta0 of the incident medium is front[0]/front[1]."""
+def _finish(front: Any, state: Any, field: int, count: int, lossless: bool, amplitude: bool, result: Any) -> None:
+    """From the fields at the front: R and T, or real and imaginary part of the reflected amplitude.
+
+    The admittance of the incident medium is front[0]/front[1], so that it may be infinite. Without loss the flux at
+    the front is the transmitted one; taking it there keeps R + T = 1 however many layers there are. Where little is
+    transmitted it would come out of a difference, and the attenuation booked on the way is the better one.
+    """
     top, bottom = _row(front, 0), _row(front, STRIDE)
     kept = _row(state, field + 4 * STRIDE)
     b_re, b_im = _row(state, field), _row(state, field + STRIDE)
     c_re, c_im = _row(state, field + 2 * STRIDE), _row(state, field + 3 * STRIDE)
+    first, second = _row(result, 0), _row(result, STRIDE)
     for i in range(count):
         br, bi = b_re[i] * top[i], b_im[i] * top[i]
         cr, ci = c_re[i] * bottom[i], c_im[i] * bottom[i]
-        forward = (br + cr) * (br + cr) + (bi + ci) * (bi + ci)
-        backward = (br - cr) * (br - cr) + (bi - ci) * (bi - ci)
-        reflectance[i] = backward / forward
-        transmittance[i] = top[i] * bottom[i] * kept[i] / forward
+        sum_re, sum_im, rest_re, rest_im = br + cr, bi + ci, br - cr, bi - ci
+        forward = sum_re * sum_re + sum_im * sum_im
+        if amplitude:
+            first[i] = (rest_re * sum_re + rest_im * sum_im) / forward
+            second[i] = (rest_im * sum_re - rest_re * sum_im) / forward
+        else:
+            first[i] = (rest_re * rest_re + rest_im * rest_im) / forward
+            flux = 4.0 * (br * cr + bi * ci) / forward
+            booked = top[i] * bottom[i] * kept[i] / forward
+            second[i] = flux if lossless and flux > FLUX_FROM else booked
 
 
 @compile_cached(  # type: ignore[untyped-decorator]
-    "void(float64[:,::1], float64[:,::1], boolean[::1], int64[:,::1], float64[:,::1], int64, int64,"
-    " float64[:,:,::1], float64[:,:,::1])"
+    "void(float64[:,::1], float64[:,::1], boolean[::1], int64[:,::1], float64[:,::1], int64, int64, boolean,"
+    " float64[:,:,::1])"
 )
 def run_tile(
     constants: Any,
@@ -288,50 +294,41 @@ def run_tile(
     thickness: Any,
     polarisations: int,
     count: int,
-    reflectance: Any,
-    transmittance: Any,
+    amplitude: bool,
+    result: Any,
 ) -> None:
-    """Reflectance and transmittance of stacks over one tile of wavelengths at one angle.
+    """Reflectance and transmittance (or the amplitude) of stacks over one tile of wavelengths at one angle.
 
-    ``constants`` is (materials, rows x STRIDE), ``front`` (polarisations, 2 STRIDE), ``real`` says which materials
-    have real kz over the whole tile, results are (stacks, polarisations, STRIDE).
+    ``constants`` is (materials, rows x STRIDE), ``front`` (polarisations, 2 STRIDE); ``real`` says which materials
+    have real kz over the whole tile; ``result`` is (stacks, polarisations, 2 STRIDE).
     """
     state = np.zeros(STATE_ROWS * STRIDE)
     layers = thickness.shape[1]
     for stack in range(sequence.shape[0]):
+        lossless = True
         substrate = constants[sequence[stack, layers + 1]]
         for p in range(polarisations):
             _start(substrate, (ETA + p * ETA_ROWS) * STRIDE, state, (FIELD + p * FIELD_ROWS) * STRIDE, count)
         for step in range(layers):
-            layer = layers - 1 - step
-            d = thickness[stack, layer]
+            d = thickness[stack, layers - 1 - step]
             if d == 0.0:
                 continue
-            medium = sequence[stack, layer + 1]
+            medium = sequence[stack, layers - step]
             own = constants[medium]
-            if own[0] * d > THICK:
+            if own[0] * d > THICK or own[count - 1] * d > THICK:
                 _turn_thick(own, state, count, d)
             else:
                 _turn(own, state, count, d)
-            if real[medium]:
-                _rotate_real(state, count)
-                for p in range(polarisations):
-                    _advance_real(own, (ETA + p * ETA_ROWS) * STRIDE, state, (FIELD + p * FIELD_ROWS) * STRIDE, count)
-            else:
-                _rotate_complex(own, state, count, d)
-                for p in range(polarisations):
-                    _advance_complex(
-                        own, (ETA + p * ETA_ROWS) * STRIDE, state, (FIELD + p * FIELD_ROWS) * STRIDE, count
-                    )
-            if step % RENORMALISE == RENORMALISE - 1:
-                for p in range(polarisations):
-                    _renormalise(state, (FIELD + p * FIELD_ROWS) * STRIDE, count)
+            if not real[medium]:
+                lossless = False
+                _damp(own, state, count, d)
+            for p in range(polarisations):
+                eta, field = (ETA + p * ETA_ROWS) * STRIDE, (FIELD + p * FIELD_ROWS) * STRIDE
+                if real[medium]:
+                    _advance_real(own, eta, state, field, count)
+                else:
+                    _advance_complex(own, eta, state, field, count)
+                if step % RENORMALISE == RENORMALISE - 1:
+                    _renormalise(state, field, count)
         for p in range(polarisations):
-            _finish(
-                front[p],
-                state,
-                (FIELD + p * FIELD_ROWS) * STRIDE,
-                count,
-                reflectance[stack, p],
-                transmittance[stack, p],
-            )
+            _finish(front[p], state, (FIELD + p * FIELD_ROWS) * STRIDE, count, lossless, amplitude, result[stack, p])

@@ -6,6 +6,7 @@ import itertools
 import os
 from collections.abc import Callable, Sequence
 from concurrent.futures import ThreadPoolExecutor
+from dataclasses import dataclass
 from functools import partial
 from typing import TYPE_CHECKING
 
@@ -14,13 +15,15 @@ import numpy as np
 from layerscan.errors import InputError, SettingsError
 
 if TYPE_CHECKING:
-    from numpy.typing import ArrayLike, NDArray
+    from numpy.typing import ArrayLike
 
     from layerscan.records import BoolArray, ComplexArray, FloatArray, IntArray
 
 POLARISATIONS = ("s", "p")
 THREAD_WORK = 4_000_000  # layers x wavelengths x angles below which a second thread does not pay
 MEMORY_LIMIT = 4 << 30  # bytes of results that one call may hold
+CONSTANTS_AT_ONCE = 200_000  # values of n over angles, materials and wavelengths prepared at once
+STACKS_AT_ONCE = 2048  # results of one call of the kernel
 KZ_FLOOR = 1e-100  # stands for kz = 0 (critical angle, grazing incidence), which enters only as sin(kz d)/kz
 
 
@@ -92,7 +95,139 @@ def reflectance_transmittance(
     0.012601
     """
     n, order, thickness, wavelength = check_stacks(index, sequence, thickness_nm, wavelength_nm, allow_gain=allow_gain)
-    angles = check_angles(aoi_deg)
+    angles, kinds = check_angles(aoi_deg), check_polarisations(polarisations)
+    check_memory(16.0 * order.shape[0] * angles.size * len(kinds) * wavelength.size)
+    return _run(n, order, thickness, wavelength, angles, kinds, threads=threads)
+
+
+def reflected_amplitude(
+    index: ArrayLike,
+    sequence: ArrayLike,
+    thickness_nm: ArrayLike,
+    wavelength_nm: ArrayLike,
+    *,
+    aoi_deg: Sequence[float] | float = (0.0,),
+    polarisations: Sequence[str] = POLARISATIONS,
+    threads: int | None = None,
+) -> ComplexArray:
+    """Calculate the reflected amplitude of many stacks, for what adds before it is squared.
+
+    Parameters
+    ----------
+    index, sequence, thickness_nm, wavelength_nm, aoi_deg, polarisations, threads
+        As in ``reflectance_transmittance``.
+
+    Returns
+    -------
+    (stacks, angles, polarisations, wavelengths) complex array
+        Reflected over incident tangential electric field at the front of the stack, fields as exp(-iwt).
+
+    Raises
+    ------
+    InputError, SettingsError
+        As in ``reflectance_transmittance``.
+    """
+    n, order, thickness, wavelength = check_stacks(index, sequence, thickness_nm, wavelength_nm)
+    angles, kinds = check_angles(aoi_deg), check_polarisations(polarisations)
+    check_memory(32.0 * order.shape[0] * angles.size * len(kinds) * wavelength.size)
+    real, imaginary = _run(n, order, thickness, wavelength, angles, kinds, amplitude=True, threads=threads)
+    return real + 1j * imaginary
+
+
+def absorbed_per_layer(
+    index: ArrayLike,
+    sequence: ArrayLike,
+    thickness_nm: ArrayLike,
+    wavelength_nm: ArrayLike,
+    *,
+    aoi_deg: Sequence[float] | float = (0.0,),
+    polarisations: Sequence[str] = POLARISATIONS,
+    allow_gain: bool = False,
+) -> FloatArray:
+    """Calculate the fraction of the incident power that each layer absorbs.
+
+    Parameters
+    ----------
+    index, sequence, thickness_nm, wavelength_nm, aoi_deg, polarisations, allow_gain
+        As in ``reflectance_transmittance``.
+
+    Returns
+    -------
+    (stacks, angles, polarisations, layers, wavelengths) float array
+        Negative in a layer with gain. With R and T it sums to 1.
+
+    Raises
+    ------
+    InputError, SettingsError
+        As in ``reflectance_transmittance``.
+
+    Notes
+    -----
+    The flux Re(B C*) below a layer over that above it, layer by layer from the front.
+    """
+    n, order, thickness, wavelength = check_stacks(index, sequence, thickness_nm, wavelength_nm, allow_gain=allow_gain)
+    angles, kinds = check_angles(aoi_deg), check_polarisations(polarisations)
+    shape = (order.shape[0], angles.size, len(kinds), thickness.shape[1], wavelength.size)
+    check_memory(8.0 * float(np.prod(np.array(shape, dtype=float))))
+    absorbed = np.empty(shape)
+    for medium in np.unique(order[:, 0]):
+        rows = np.flatnonzero(order[:, 0] == medium)
+        kz_all = tangential_rate(n, n[medium].real, angles)
+        for number, angle in enumerate(angles):
+            cosine = np.sin(np.radians(90.0 - angle))
+            for place, kind in enumerate(kinds):
+                kz = kz_all[number]
+                eta = kz if kind == 0 else n * n / kz
+                top = n[medium].real * (cosine if kind == 0 else 1.0)
+                bottom = 1.0 if kind == 0 else cosine
+                absorbed[rows, number, place] = _absorbed(
+                    n, kz / wavelength, eta, top, bottom, order[rows], thickness[rows]
+                )
+    return absorbed
+
+
+def _absorbed(
+    n: ComplexArray,
+    rate: ComplexArray,
+    eta: ComplexArray,
+    top: FloatArray,
+    bottom: FloatArray | float,
+    order: IntArray,
+    thickness: FloatArray,
+) -> FloatArray:
+    """Absorbed fractions, (stacks, layers, wavelengths), at one angle and polarisation."""
+    layers = thickness.shape[1]
+    b, c = np.ones((order.shape[0], n.shape[1]), dtype=complex), eta[order[:, -1]]
+    passed = np.ones((order.shape[0], layers, n.shape[1]))
+    for layer in range(layers - 1, -1, -1):
+        medium = order[:, layer + 1]
+        delta = 2 * np.pi * rate[medium] * thickness[:, layer, None]
+        decay = np.exp(-abs(delta.imag))
+        cos, sin = _scaled_cosine_sine(delta)
+        below = (b * c.conj()).real * decay**2
+        b, c = cos * b - 1j * sin / eta[medium] * c, cos * c - 1j * eta[medium] * sin * b
+        above = (b * c.conj()).real
+        lossy = (n[medium].imag != 0) & (above != 0)
+        np.divide(below, above, out=passed[:, layer], where=lossy)
+        size = abs(b) + abs(c)
+        b, c = b / size, c / size
+    flux = 4 * top * bottom * (b * c.conj()).real / abs(top * b + bottom * c) ** 2
+    through = np.cumprod(passed, axis=1)
+    before = np.concatenate([np.ones_like(through[:, :1]), through[:, :-1]], axis=1)
+    result: FloatArray = flux[:, None] * before * (1 - passed)
+    return result
+
+
+def _scaled_cosine_sine(delta: ComplexArray) -> tuple[ComplexArray, ComplexArray]:
+    """cos and sin of a complex phase, both times exp(-|Im|)."""
+    lost = np.expm1(-2 * abs(delta.imag))
+    cosh, sinh = 1 + lost / 2, -np.sign(delta.imag) * lost / 2
+    cos, sin = np.cos(delta.real), np.sin(delta.real)
+    return cos * cosh - 1j * sin * sinh, sin * cosh + 1j * cos * sinh
+
+
+def check_polarisations(polarisations: Sequence[str]) -> list[int]:
+    """Polarisations as numbers (0 is s, 1 is p), refused where unknown."""
     for name in polarisations:
         if name not in POLARISATIONS:
             raise SettingsError(
@@ -100,15 +235,16 @@ def reflectance_transmittance(
             )
     if not len(polarisations):
         raise SettingsError("No polarisation was given. Give 's', 'p' or both.")
-    shape = (order.shape[0], angles.size, len(polarisations), wavelength.size)
-    needed = 16.0 * float(np.prod(np.array(shape, dtype=float)))
+    return [POLARISATIONS.index(name) for name in polarisations]
+
+
+def check_memory(needed: float) -> None:
+    """Refuse a result that would not fit."""
     if needed > MEMORY_LIMIT:
         raise InputError(
-            f"{shape[0]} stacks x {shape[1]} angles x {shape[2]} polarisations x {shape[3]} wavelengths need "
-            f"{needed / 2**30:.1f} GB of results. Calculate in parts."
+            f"This many stacks, angles, polarisations and wavelengths need {needed / 2**30:.1f} GB of results; "
+            f"{MEMORY_LIMIT / 2**30:.0f} GB is the most for one call. Calculate in parts."
         )
-    kinds = [POLARISATIONS.index(name) for name in polarisations]
-    return _run(n, order, thickness, wavelength, angles, kinds, threads)
 
 
 def check_angles(aoi_deg: Sequence[float] | float) -> FloatArray:
@@ -179,25 +315,17 @@ def check_stacks(
     return n, np.ascontiguousarray(order, dtype=np.int64), thickness, wavelength
 
 
-def tangential_rate(n: ComplexArray, incident: FloatArray, aoi_deg: float) -> ComplexArray:
-    """``kz/k0`` of each medium, (materials, wavelengths), for light from a medium of real index at ``aoi_deg``.
+def tangential_rate(n: ComplexArray, incident: FloatArray, aoi_deg: FloatArray) -> ComplexArray:
+    """``kz/k0`` of each medium, (angles, materials, wavelengths), for light from a medium of real index.
 
     Formed from (n - a)(n + a) so that nothing cancels near the critical angle; never exactly zero.
     """
-    if aoi_deg == 0.0:
-        kz = n.copy()
-    else:
-        a = incident * np.sin(np.radians(aoi_deg))
-        kz = np.sqrt((n - a) * (n + a))
-        lossless = n.imag == 0
-        kz.imag[lossless] = np.abs(kz.imag[lossless])
+    a = incident * np.sin(np.radians(aoi_deg.astype(incident.dtype)))[:, None]
+    a = a[:, None, :]
+    kz: ComplexArray = np.sqrt((n - a) * (n + a))
+    kz[aoi_deg == 0] = n
     kz[kz == 0] = KZ_FLOOR
     return kz
-
-
-def _cosine(aoi_deg: float) -> float:
-    """Cosine that is exactly 0 at 90 degrees."""
-    return float(np.sin(np.radians(90.0 - aoi_deg)))
 
 
 def _run(
@@ -207,34 +335,33 @@ def _run(
     wavelength: FloatArray,
     angles: FloatArray,
     kinds: list[int],
-    threads: int | None,
+    *,
+    amplitude: bool = False,
+    threads: int | None = None,
 ) -> tuple[FloatArray, FloatArray]:
-    """Group by incident medium and angle, cut wavelengths into tiles, share the work between threads."""
+    """Group stacks by incident medium, prepare optical constants, share the work between threads."""
     distinct = sorted(set(kinds))
-    shared = bool(np.all(angles == 0.0)) and len(distinct) > 1
+    shared = bool(np.all(angles == 0.0)) and len(distinct) > 1  # at normal incidence s and p are the same
     calculated = distinct[:1] if shared else distinct
     shape = (order.shape[0], angles.size, len(calculated), wavelength.size)
-    reflectance, transmittance = np.empty(shape), np.empty(shape)
-    jobs: list[Callable[[], None]] = []
-    workers = _threads(threads, order.shape[0] * order.shape[1] * wavelength.size * angles.size * len(calculated))
-    first_media = np.unique(order[:, 0])
-    for medium in first_media:
-        rows = None if first_media.size == 1 else np.flatnonzero(order[:, 0] == medium)
-        part = (order, thickness) if rows is None else (np.ascontiguousarray(order[rows]), thickness[rows])
-        for number, angle in enumerate(angles):
-            out = (reflectance[:, number], transmittance[:, number])
-            jobs += _jobs(n, int(medium), part, rows, wavelength, float(angle), calculated, out, workers)
-    if workers > 1 and len(jobs) > 1:
-        with ThreadPoolExecutor(workers) as pool:
-            for done in [pool.submit(job) for job in jobs]:
-                done.result()
-    else:
-        for job in jobs:
-            job()
+    first, second = np.empty(shape), np.empty(shape)
+    workers = _threads(threads, order.size * wavelength.size * angles.size)
+    incident_media = np.unique(order[:, 0])
+    for medium in incident_media:
+        rows = slice(None) if incident_media.size == 1 else np.flatnonzero(order[:, 0] == medium)
+        part = np.ascontiguousarray(order[rows]), np.ascontiguousarray(thickness[rows])
+        together = max(CONSTANTS_AT_ONCE // n.size, 1)
+        for start in range(0, angles.size, together):
+            some = slice(start, start + together)
+            tables = prepare_constants(
+                n, int(medium), wavelength, angles[some], calculated, float(part[1].max(initial=0))
+            )
+            jobs = _jobs(tables, part, rows, (first[:, some], second[:, some]), amplitude, workers)
+            _share(jobs, workers)
     if calculated == kinds:
-        return reflectance, transmittance
+        return first, second
     pick = [0 if shared else calculated.index(kind) for kind in kinds]
-    return np.ascontiguousarray(reflectance[:, :, pick]), np.ascontiguousarray(transmittance[:, :, pick])
+    return np.ascontiguousarray(first[:, :, pick]), np.ascontiguousarray(second[:, :, pick])
 
 
 def _threads(threads: int | None, work: int) -> int:
@@ -249,78 +376,123 @@ def _threads(threads: int | None, work: int) -> int:
     return threads
 
 
+def _share(jobs: list[Callable[[], None]], workers: int) -> None:
+    """Run the jobs, on several threads where that was asked for; the kernel lets go of the interpreter."""
+    if workers == 1 or len(jobs) == 1:
+        for job in jobs:
+            job()
+        return
+    with ThreadPoolExecutor(workers) as pool:
+        for done in [pool.submit(job) for job in jobs]:
+            done.result()
+
+
+@dataclass(frozen=True, kw_only=True, eq=False)
+class Constants:
+    """Optical constants as the kernel takes them, cut into tiles of ``width`` wavelengths of which the last is padded.
+
+    ``media`` is (angles, tiles, materials, rows x stride), ``front`` (angles, tiles, polarisations, 2 stride), ``real``
+    (angles, tiles, materials) says which media have real kz in the whole tile.
+    """
+
+    media: FloatArray
+    front: FloatArray
+    real: BoolArray
+    width: int
+    wavelengths: int
+
+
+def prepare_constants(
+    n: ComplexArray, medium: int, wavelength: FloatArray, angles: FloatArray, kinds: list[int], thickest_nm: float
+) -> Constants:
+    """Optical constants for stacks lit from ``medium``, for each angle."""
+    from layerscan.optics import kernel
+
+    tiles = -(-wavelength.size // kernel.STRIDE)
+    width = -(-wavelength.size // (tiles * kernel.LANES)) * kernel.LANES
+    padding = tiles * width - wavelength.size
+    if padding:  # calculated and thrown away
+        wavelength = np.concatenate([wavelength, np.repeat(wavelength[-1:], padding)])
+        n = np.concatenate([n, np.repeat(n[:, -1:], padding, axis=1)], axis=1)
+    kz = tangential_rate(n, n[medium].real, angles)
+    shape = (angles.size, n.shape[0], tiles, width)
+    media = np.zeros((angles.size, tiles, n.shape[0], kernel.CONSTANT_ROWS, kernel.STRIDE))
+    rows = media.transpose(3, 0, 2, 1, 4)[..., :width]  # a view: rows, angles, materials, tiles, wavelengths
+
+    def put(row: int, values: FloatArray) -> None:
+        rows[row] = values.reshape(shape)
+
+    rate = 2.0 * kz.real / wavelength
+    put(kernel.RATE, rate)
+    if rate.max() * thickest_nm > kernel.THICK:
+        scaled = rate * kernel.SPLITTER
+        high = scaled - (scaled - rate)
+        long = n.astype(np.clongdouble)
+        exact = tangential_rate(long, long[medium].real, angles).real * 2 / wavelength
+        put(kernel.RATE_HIGH, high)
+        put(kernel.RATE_LOW, (exact - high).astype(np.float64))
+    real = (kz.imag == 0).reshape(shape).all(axis=3).transpose(0, 2, 1)
+    lossless = bool(real.all())
+    if not lossless:
+        put(kernel.DECAY_RATE, 4.0 * np.pi * kz.imag / wavelength)
+    cosine = np.sin(np.radians(90.0 - angles))[:, None, None]  # exactly 0 at 90 degrees
+    incident = n[medium].real.reshape(tiles, width)
+    front = np.ones((angles.size, tiles, len(kinds), 2, kernel.STRIDE))
+    for p, kind in enumerate(kinds):
+        eta = kz if kind == 0 else n * n / kz
+        inverse = 1.0 / eta
+        row = kernel.ETA + p * kernel.ETA_ROWS
+        put(row, eta.real)
+        put(row + 2, inverse.real)
+        if not lossless:
+            put(row + 1, eta.imag)
+            put(row + 3, inverse.imag)
+        front[:, :, p, 0, :width] = incident * cosine if kind == 0 else incident
+        front[:, :, p, 1, :width] = 1.0 if kind == 0 else cosine
+    return Constants(
+        media=media.reshape(*media.shape[:3], -1),
+        front=front.reshape(*front.shape[:3], -1),
+        real=np.ascontiguousarray(real),
+        width=width,
+        wavelengths=wavelength.size - padding,
+    )
+
+
 def _jobs(
-    n: ComplexArray,
-    medium: int,
+    tables: Constants,
     part: tuple[IntArray, FloatArray],
-    rows: NDArray[np.int64] | None,
-    wavelength: FloatArray,
-    angle: float,
-    kinds: list[int],
+    rows: slice | IntArray,
     out: tuple[FloatArray, FloatArray],
+    amplitude: bool,
     workers: int,
 ) -> list[Callable[[], None]]:
-    """One call for each share of the stacks and each tile of wavelengths."""
+    """One call of the kernel for each angle, tile of wavelengths and share of the stacks."""
     from layerscan.optics import kernel
 
     order, thickness = part
-    stacks = order.shape[0]
-    tiles = -(-wavelength.size // kernel.STRIDE)
-    width = -(-wavelength.size // (tiles * kernel.LANES)) * kernel.LANES
-    shares = 1 if workers == 1 else min(stacks, 4 * workers)
-    edges = np.linspace(0, stacks, shares + 1).astype(int)
-    jobs: list[Callable[[], None]] = []
-    for start in range(0, wavelength.size, width):
-        stop = min(start + width, wavelength.size)
-        constants, front, real = _tile(n[:, start:stop], medium, wavelength[start:stop], angle, kinds)
+    polarisations = tables.front.shape[2]
+    numbers = np.arange(out[0].shape[0])[rows]
 
-        def job(
-            first: int, last: int, start: int = start, stop: int = stop,
-            tables: tuple[FloatArray, FloatArray, BoolArray] = (constants, front, real),
-        ) -> None:  # fmt: skip
-            shape = (last - first, len(kinds), kernel.STRIDE)
-            r, t = np.empty(shape), np.empty(shape)
-            count = -(-(stop - start) // kernel.LANES) * kernel.LANES
-            kernel.run_tile(*tables, order[first:last], thickness[first:last], len(kinds), count, r, t)
-            where = slice(first, last) if rows is None else rows[first:last]
-            out[0][where, :, start:stop] = r[:, :, : stop - start]
-            out[1][where, :, start:stop] = t[:, :, : stop - start]
+    def job(angle: int, tile: int, first: int, last: int) -> None:
+        result = np.empty((last - first, polarisations, 2, kernel.STRIDE))
+        kernel.run_tile(
+            tables.media[angle, tile], tables.front[angle, tile], tables.real[angle, tile], order[first:last],
+            thickness[first:last], polarisations, tables.width, amplitude,
+            result.reshape(last - first, polarisations, -1),
+        )  # fmt: skip
+        start = tile * tables.width
+        stop = min(start + tables.width, tables.wavelengths)
+        where = slice(first, last) if isinstance(rows, slice) else numbers[first:last]
+        out[0][where, angle, :, start:stop] = result[:, :, 0, : stop - start]
+        out[1][where, angle, :, start:stop] = result[:, :, 1, : stop - start]
 
-        jobs += [partial(job, int(a), int(b)) for a, b in itertools.pairwise(edges)]
-    return jobs
-
-
-def _tile(
-    n: ComplexArray, medium: int, wavelength: FloatArray, angle: float, kinds: list[int]
-) -> tuple[FloatArray, FloatArray, BoolArray]:
-    """Optical constants of one tile as the kernel takes them: constants, front, real."""
-    from layerscan.optics import kernel
-
-    materials, count = n.shape
-    incident = n[medium].real
-    kz = tangential_rate(n, incident, angle)
-    constants = np.zeros((materials, kernel.CONSTANT_ROWS, kernel.STRIDE))
-    front = np.zeros((len(kinds), 2, kernel.STRIDE))
-    rate = 2.0 * kz.real / wavelength
-    exact = 2 * kz.real.astype(np.longdouble) / wavelength
-    split = rate * 134217729.0
-    high = split - (split - rate)
-    constants[:, kernel.RATE, :count] = rate
-    constants[:, kernel.RATE_HIGH, :count] = high
-    constants[:, kernel.RATE_LOW, :count] = exact - high
-    constants[:, kernel.DECAY_RATE, :count] = 4.0 * np.pi * kz.imag / wavelength
-    cosine = _cosine(angle)
-    for p, kind in enumerate(kinds):
-        eta = kz if kind == 0 else n * n / kz if angle else n
-        row = kernel.ETA + p * kernel.ETA_ROWS
-        inverse = 1.0 / eta
-        constants[:, row, :count] = eta.real
-        constants[:, row + 1, :count] = eta.imag
-        constants[:, row + 2, :count] = inverse.real
-        constants[:, row + 3, :count] = inverse.imag
-        front[p, 0, :count] = incident * cosine if kind == 0 else incident
-        front[p, 1, :count] = 1.0 if kind == 0 else cosine
-    constants[:, :, count:] = constants[:, :, count - 1 : count]  # padding that is calculated and thrown away
-    front[:, :, count:] = front[:, :, count - 1 : count]
-    real = np.ascontiguousarray((kz.imag == 0).all(axis=1))
-    return constants.reshape(materials, -1), front.reshape(len(kinds), -1), real
+    shares = 1 if workers == 1 else min(order.shape[0], 4 * workers)
+    shares = max(shares, -(-order.shape[0] // STACKS_AT_ONCE))
+    edges = np.linspace(0, order.shape[0], shares + 1).astype(int)
+    angles, tiles = tables.media.shape[:2]
+    return [
+        partial(job, angle, tile, int(first), int(last))
+        for angle in range(angles)
+        for tile in range(tiles)
+        for first, last in itertools.pairwise(edges)
+    ]
