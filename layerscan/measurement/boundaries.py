@@ -39,6 +39,7 @@ class EdgeFit:
     residual_rms: float
     cost: float
     scale: float
+    scatter: float
 
 
 @njit(cache=True)  # type: ignore[untyped-decorator]
@@ -240,6 +241,22 @@ def _solve(band, x):  # type: ignore[no-untyped-def]
 
 
 @njit(cache=True)  # type: ignore[untyped-decorator]
+def _solve_from(band, x, first):  # type: ignore[no-untyped-def]
+    """Solve with the banded Cholesky factor, in place, where x is zero before ``first``."""
+    n, width = band.shape
+    for i in range(first, n):
+        total = x[i]
+        for j in range(max(first, i - width + 1), i):
+            total -= band[i, i - j] * x[j]
+        x[i] = total / band[i, 0]
+    for i in range(n - 1, -1, -1):
+        total = x[i]
+        for j in range(i + 1, min(n, i + width)):
+            total -= band[j, j - i] * x[j]
+        x[i] = total / band[i, 0]
+
+
+@njit(cache=True)  # type: ignore[untyped-decorator]
 def _bordered(band, border, corner, active):  # type: ignore[no-untyped-def]
     """Factor the arrow matrix: (ok, border solved, inverse of the Schur complement)."""
     solved = np.zeros(border.shape)
@@ -268,8 +285,12 @@ def _bordered(band, border, corner, active):  # type: ignore[no-untyped-def]
 
 
 @njit(cache=True)  # type: ignore[untyped-decorator]
-def fit_edges(depth, value, weight, position, level, shared, active, target, precision, rounds):  # type: ignore[no-untyped-def]
-    """Levenberg-Marquardt on all parameters; returns (position, level, shared, cost, covariance of positions, ok)."""
+def fit_edges(depth, value, weight, position, level, shared, active, target, precision, rounds, tolerance, full):  # type: ignore[no-untyped-def]  # noqa: E501
+    """Levenberg-Marquardt on all parameters; returns (position, level, shared, cost, covariance of positions, ok).
+
+    It stops when a step gains less than ``tolerance`` of the mean cost of a sample. The covariance is worked out where
+    ``full``.
+    """
     edges = position.size
     size = 2 * edges + 1
     position, level, shared = position.copy(), level.copy(), shared.copy()
@@ -318,11 +339,9 @@ def fit_edges(depth, value, weight, position, level, shared, active, target, pre
             )
         new_position = position.copy()
         new_level = level.copy()
-        largest = 0.0
         limit = max(0.5 * shared[BLUR], 0.3)
         for b in range(edges):
             move = min(max(step[2 * b + 1], -limit), limit)
-            largest = max(largest, abs(move))
             new_position[b] = position[b] + move
         for b in range(1, edges):
             if new_position[b] < new_position[b - 1] + 0.3:
@@ -336,7 +355,7 @@ def fit_edges(depth, value, weight, position, level, shared, active, target, pre
             gain = cost - new_cost
             position, level, shared, cost = new_position, new_level, new_shared, new_cost
             damping = max(damping * 0.2, 1e-9)
-            if gain < 1e-7 * cost + 1e-12 and largest < 1e-4:
+            if gain < tolerance * cost / depth.size:
                 break
         else:
             _accumulate(depth, value, weight, position, level, shared, active, target, precision, band, border, corner, g, gs)  # noqa: E501
@@ -344,6 +363,8 @@ def fit_edges(depth, value, weight, position, level, shared, active, target, pre
             if damping > 1e6:
                 break
     covariance = np.zeros((edges, edges))
+    if not full:
+        return position, level, shared, cost, covariance, True
     _accumulate(depth, value, weight, position, level, shared, active, target, precision, band, border, corner, g, gs)
     for i in range(size):
         band[i, 0] += 1e-9 * (band[i, 0] + 1e-9)
@@ -353,16 +374,46 @@ def fit_edges(depth, value, weight, position, level, shared, active, target, pre
         for b in range(edges):
             column[:] = 0.0
             column[2 * b + 1] = 1.0
-            _solve(band, column)
+            _solve_from(band, column, 2 * b + 1)
             for a in range(edges):
                 covariance[a, b] = column[2 * a + 1]
-        used = np.flatnonzero(active)
-        for m in used:
-            for k in used:
-                for a in range(edges):
-                    for b in range(edges):
-                        covariance[a, b] += solved[2 * a + 1, m] * inverse[m, k] * solved[2 * b + 1, k]
+        shared_part = np.ascontiguousarray(solved[1::2])
+        covariance += shared_part @ inverse @ np.ascontiguousarray(shared_part.T)
     return position, level, shared, cost, covariance, ok
+
+
+@njit(cache=True)  # type: ignore[untyped-decorator]
+def score_gains(depth, value, weight, position, level, shared, active, target, precision, models):  # type: ignore[no-untyped-def]
+    """What freeing further shared parameters would lower the cost by, to first order (score test), for each model.
+
+    ``models`` (n, 6) bool; parameters that have no slope at zero must have been given a start value in ``shared``
+    through their model's own row of ``shared`` (n, 6).
+    """
+    edges = position.size
+    size = 2 * edges + 1
+    out = np.zeros(models.shape[0])
+    for row in range(models.shape[0]):
+        trial = active | models[row]
+        width = min(_band_width(position, 1.5 * _reach(shared[row], trial)), size)
+        band = np.empty((size, width))
+        border = np.empty((size, SHARED))
+        corner = np.empty((SHARED, SHARED))
+        g = np.empty(size)
+        gs = np.empty(SHARED)
+        _accumulate(depth, value, weight, position, level, shared[row], trial, target, precision, band, border, corner, g, gs)  # noqa: E501
+        for i in range(size):
+            band[i, 0] += 1e-9 * (band[i, 0] + 1e-9)
+        ok, _, inverse = _bordered(band, border, corner, trial)
+        if not ok:
+            continue
+        step = g.copy()
+        _solve(band, step)
+        right = np.zeros(SHARED)
+        for m in range(SHARED):
+            if trial[m]:
+                right[m] = gs[m] - np.sum(border[:, m] * step)
+        out[row] = np.sum(g * step) + np.sum(right * (inverse @ right))
+    return out
 
 
 @njit(cache=True)  # type: ignore[untyped-decorator]
@@ -403,6 +454,9 @@ def fit_boundaries(
     blur: float = 1.0,
     nuisance: bool = True,
     start: FloatArray | None = None,
+    level: FloatArray | None = None,
+    scatter: float | None = None,
+    full: bool = True,
 ) -> EdgeFit:
     """Fit all boundaries of a profile whose phases alternate, dark near 0 and bright near 1.
 
@@ -424,6 +478,12 @@ def fit_boundaries(
         Try projection box, gamma and edge brightening, and keep what lowers the Bayesian information criterion.
     start : (6,) float array, optional
         Shared parameters of an earlier fit to start from.
+    level : (edges + 1,) float array, optional
+        Levels of an earlier fit to start from.
+    scatter : float, optional
+        Standard deviation of the levels about their phase to start from.
+    full : bool
+        Work out the covariance.
 
     Returns
     -------
@@ -450,34 +510,24 @@ def fit_boundaries(
     active[BLUR] = True
     if start is not None:
         active |= np.array([True, start[BOX] > 0, start[GAMMA] != 0] + [start[RIM_BRIGHT] != 0] * 3)
-    state = (position.astype(np.float64), target.copy(), shared)
-    scatter = 0.15
+    state = (position.astype(np.float64), target.copy() if level is None else level.astype(np.float64), shared)
     used = int((weight > 0).sum())
-    for _ in range(3):
+    scatter = 0.15 if scatter is None else scatter
+    fit = None
+    for _ in range(2):
         precision = np.where(free, 1e-6, 1 / scatter**2)
-        fit = fit_edges(depth, profile, weight, *state, active, target, precision, 12)
+        fit = fit_edges(depth, profile, weight, *state, active, target, precision, 8, 0.3, False)
         state = fit[:3]
-        off = (state[1] - target)[~free]
-        off = off - _phase_mean(off, target[~free])
-        previous, scatter = scatter, float(np.clip(1.2 * np.sqrt(np.mean(off**2)) if len(off) > 4 else 0.15, 0.01, 0.3))
         target = target + np.where(free, 0.0, _phase_shift(state[1], target, free))
-        if abs(previous - scatter) < 0.1 * scatter:
+        off = (state[1] - target)[~free]
+        previous, scatter = scatter, float(np.clip(1.2 * np.sqrt(np.mean(off**2)) if len(off) > 4 else 0.15, 0.01, 0.3))
+        if abs(previous - scatter) < 0.2 * scatter:
             break
     precision = np.where(free, 1e-6, 1 / scatter**2)
     if nuisance and used > 40 and segments > 4:
-        fit, active = _select(depth, profile, weight, fit, active, target, precision, used)
-        state = fit[:3]
-    else:
-        fit = fit_edges(depth, profile, weight, *state, active, target, precision, 12)
-    return _finish(depth, profile, weight, fit, active, precision, used)
-
-
-def _phase_mean(value: FloatArray, phase: FloatArray) -> FloatArray:
-    out = np.zeros_like(value)
-    for k in np.unique(np.round(phase)):
-        chosen = np.round(phase) == k
-        out[chosen] = np.median(value[chosen])
-    return out
+        state, active = _select(depth, profile, weight, fit, active, target, precision, used)
+    fit = fit_edges(depth, profile, weight, *state, active, target, precision, 15, 1e-3, full)
+    return _finish(depth, profile, weight, fit, active, precision, used, scatter)
 
 
 def _phase_shift(level: FloatArray, target: FloatArray, free: BoolArray) -> FloatArray:
@@ -489,38 +539,53 @@ def _phase_shift(level: FloatArray, target: FloatArray, free: BoolArray) -> Floa
     return out
 
 
+_MODELS: tuple[tuple[int, ...], ...] = ((GAMMA,), (BOX,), (RIM_BRIGHT, RIM_DARK, RIM_DECAY))
+
+
 def _select(depth, profile, weight, fit, active, target, precision, used):  # type: ignore[no-untyped-def]
-    """Add shared parameters one model at a time while the information criterion falls."""
-    models = [((GAMMA,), {GAMMA: 0.05}), ((BOX,), {}), ((RIM_BRIGHT, RIM_DARK, RIM_DECAY), {RIM_BRIGHT: 0.05, RIM_DARK: 0.01})]  # noqa: E501
-    best = used * math.log(max(fit[3], 1e-12) / used)
-    for _ in range(2):
+    """Add shared parameters one model at a time while the information criterion falls.
+
+    A score test says first which model could gain enough, so that most profiles need no further fit.
+    """
+    state, cost = fit[:3], fit[3]
+    for _ in range(len(_MODELS)):
+        open_models = [names for names in _MODELS if not active[names[0]]]
+        if not open_models:
+            break
+        masks = np.zeros((len(open_models), SHARED), bool)
+        starts = np.tile(state[2], (len(open_models), 1))
+        for row, names in enumerate(open_models):
+            masks[row, list(names)] = True
+            if BOX in names:
+                starts[row, BOX] = 1.5 * state[2][BLUR]
+                starts[row, BLUR] = 0.9 * state[2][BLUR]
+            if RIM_DECAY in names:
+                starts[row, RIM_DECAY] = 2 * state[2][BLUR]
+                masks[row, RIM_DECAY] = False
+        unit = cost / used
+        slope = masks & (np.array([BOX not in names for names in open_models])[:, None])
+        gains = score_gains(depth, profile, weight, state[0], state[1], starts, active, target, precision, slope)
         kept = None
-        for names, values in models:
-            if active[names[0]]:
+        for row in np.argsort(-gains):
+            names = open_models[row]
+            price = (len(names) * math.log(used) + 4.0) * unit
+            if BOX not in names and gains[row] < 0.7 * price:
                 continue
             trial_active = active.copy()
-            shared = fit[2].copy()
-            for name in names:
-                trial_active[name] = True
-            for name, value in values.items():
-                shared[name] = value
-            if BOX in names:
-                shared[BOX] = 1.5 * shared[BLUR]
-            if RIM_DECAY in names:
-                shared[RIM_DECAY] = 2 * shared[BLUR]
-            trial = fit_edges(depth, profile, weight, fit[0], fit[1], shared, trial_active, target, precision, 25)
-            if not trial[5]:
-                continue
-            score = used * math.log(max(trial[3], 1e-12) / used) + len(names) * math.log(used) + 4.0
-            if score < best and (kept is None or score < kept[0]):
+            trial_active[list(names)] = True
+            trial = fit_edges(
+                depth, profile, weight, state[0], state[1], starts[row], trial_active, target, precision, 15, 0.05, False
+            )
+            score = used * math.log(max(trial[3], 1e-300) / max(cost, 1e-300)) + len(names) * math.log(used) + 4.0
+            if score < 0 and (kept is None or score < kept[0]):
                 kept = (score, trial, trial_active)
         if kept is None:
             break
-        best, fit, active = kept[0] - 4.0, kept[1], kept[2]
-    return fit, active
+        state, cost, active = kept[1][:3], kept[1][3], kept[2]
+    return state, active
 
 
-def _finish(depth, profile, weight, fit, active, precision, used):  # type: ignore[no-untyped-def]
+def _finish(depth, profile, weight, fit, active, precision, used, scatter):  # type: ignore[no-untyped-def]
     position, level, shared, cost, covariance, _ = fit
     residual = profile - model_profile(depth, position, level, shared, active)
     free_parameters = len(position) + int(active.sum()) + int((precision < 1e-3).sum()) + 2
@@ -538,4 +603,5 @@ def _finish(depth, profile, weight, fit, active, precision, used):  # type: igno
         residual_rms=rms,
         cost=float(cost),
         scale=scale,
+        scatter=scatter,
     )

@@ -157,22 +157,30 @@ def _energy(field, slope):  # type: ignore[no-untyped-def]
 def find_slope(field, most):  # type: ignore[no-untyped-def]
     """Slope of the layers across the band (depth per column) that leaves the mean profile most energy."""
     count, columns = field.shape
-    step = min(0.5 / columns * 4, 0.25)
+    step = min(2.0 / columns, 0.35)
     steps = int(most / step)
     best, slope = _energy(field, 0.0), 0.0
-    floor = best * (1 + 1e-9)
     for i in range(1, steps + 1):
         for sign in (-1.0, 1.0):
             value = _energy(field, sign * i * step)
-            if value > floor and value > best:
+            if value > best * (1 + 1e-9):
                 best, slope = value, sign * i * step
-    width = step
-    while width > 2e-4:
+    width = 0.5 * step
+    for _ in range(7):
         left, right = _energy(field, slope - width), _energy(field, slope + width)
-        if left > best:
+        bend = left - 2 * best + right
+        if left > best and left >= right:
             best, slope = left, slope - width
         elif right > best:
             best, slope = right, slope + width
+        elif bend < 0 and width < 0.4 * step:
+            moved = 0.5 * width * (left - right) / bend
+            value = _energy(field, slope + moved)
+            if value > best:
+                best, slope = value, slope + moved
+            width *= 0.25
+            if width < 2e-3:
+                break
         else:
             width *= 0.5
     return slope, best
@@ -301,7 +309,7 @@ def measure_line(
     band = sample_band(picture.intensity, start=start, stop=stop, width_px=width_px)
     field = band.intensity
     count, columns = field.shape
-    group = max(1, columns // 8)
+    group = max(1, columns // 6)
     joined = _join(field, group)
     slope = 0.0
     sure = columns >= 4 and joined.shape[1] >= 2

@@ -251,38 +251,43 @@ def _unique(flags: tuple[str, ...] | list[str]) -> tuple[str, ...]:
 
 def _boundaries(found: FoundLayers, scale: float, u_scale: float | None) -> tuple[Boundary, ...]:
     out = []
+    edges, stations = found.station_depth.shape
     seen = found.seen
-    covered = found.row == found.row  # where the frame shows the boundary
-    for b in range(len(found.depth)):
-        depth = float(found.depth[b]) * scale
-        u_fit = math.sqrt(max(float(found.covariance[b, b]), 0.0)) * scale
-        where = np.flatnonzero(seen[b])
+    traced = seen.sum(axis=1).tolist()
+    shown = np.isfinite(found.row).sum(axis=1).tolist()
+    depth = (found.depth * scale).tolist()
+    u_fit = (np.sqrt(np.maximum(np.diag(found.covariance), 0.0)) * scale).tolist()
+    local, u_local = found.station_depth * scale, found.u_station * scale
+    rough, length = (found.roughness * scale).tolist(), (found.correlation_length * scale).tolist()
+    ended = found.terminations.tolist() if len(found.terminations) else [0] * edges
+    edited = [False] * edges if found.edited is None else found.edited.tolist()
+    every = np.arange(stations)
+    for b in range(edges):
+        where = every if traced[b] == stations else np.flatnonzero(seen[b])
+        pick = slice(None) if traced[b] == stations else where
         flags = []
-        if where.size < 0.8 * max(int(covered[b].sum()), 1):
+        if traced[b] < 0.8 * max(shown[b], 1):
             flags.append("boundary_incomplete")
-        ended = int(found.terminations[b]) if len(found.terminations) else 0
-        if ended:
+        if ended[b]:
             flags.append("termination")
-        edited = bool(found.edited[b]) if found.edited is not None else False
-        if edited:
+        if edited[b]:
             flags.append("edited_by_hand")
-        rough, length = float(found.roughness[b]), float(found.correlation_length[b])
         out.append(
             Boundary(
                 index=b,
-                depth_nm=depth,
-                u_nm=u_fit if u_scale is None else math.hypot(u_fit, depth * u_scale),
-                roughness_nm=rough * scale if math.isfinite(rough) else None,
-                correlation_length_nm=length * scale if math.isfinite(length) else None,
+                depth_nm=depth[b],
+                u_nm=u_fit[b] if u_scale is None else math.hypot(u_fit[b], depth[b] * u_scale),
+                roughness_nm=rough[b] if math.isfinite(rough[b]) else None,
+                correlation_length_nm=length[b] if math.isfinite(length[b]) else None,
                 trace=Trace(
-                    station=where.astype(np.int64),
-                    row_px=found.row[b, where],
-                    column_px=found.column[b, where],
-                    depth_nm=found.station_depth[b, where] * scale,
-                    u_depth_nm=found.u_station[b, where] * scale,
+                    station=where,
+                    row_px=found.row[b, pick],
+                    column_px=found.column[b, pick],
+                    depth_nm=local[b, pick],
+                    u_depth_nm=u_local[b, pick],
                 ),
-                terminations=ended,
-                edited=edited,
+                terminations=int(ended[b]),
+                edited=edited[b],
                 flags=tuple(flags),
             )
         )
@@ -291,13 +296,14 @@ def _boundaries(found: FoundLayers, scale: float, u_scale: float | None) -> tupl
 
 def _layers(found: FoundLayers, scale: float, u_scale: float | None) -> tuple[Layer, ...]:
     out: list[Layer] = []
-    count = len(found.depth)
+    width = np.diff(found.depth)
+    variance = np.diag(found.covariance)
+    variance = variance[1:] + variance[:-1] - 2 * np.diag(found.covariance, 1)
+    u_fit = (np.sqrt(np.maximum(variance, 0.0)) * scale).tolist()
+    lateral = _lateral_spread(found, scale)
     if found.phase[0] != "other":
         out.append(Layer(index=0, phase=found.phase[0], thickness_nm=found.ends[0] * scale, complete=False))
-    for i in range(count - 1):
-        thickness = float(found.depth[i + 1] - found.depth[i])
-        variance = found.covariance[i, i] + found.covariance[i + 1, i + 1] - 2 * found.covariance[i, i + 1]
-        u_fit = math.sqrt(max(float(variance), 0.0)) * scale
+    for i, thickness in enumerate(width.tolist()):
         flags = []
         if thickness < NOT_RESOLVED * found.blur:
             flags.append("not_resolved")
@@ -308,8 +314,8 @@ def _layers(found: FoundLayers, scale: float, u_scale: float | None) -> tuple[La
                 index=len(out),
                 phase=found.phase[i + 1],
                 thickness_nm=thickness * scale,
-                u_nm=u_fit if u_scale is None else math.hypot(u_fit, thickness * scale * u_scale),
-                sd_lateral_nm=_lateral_spread(found, i, scale),
+                u_nm=u_fit[i] if u_scale is None else math.hypot(u_fit[i], thickness * scale * u_scale),
+                sd_lateral_nm=lateral[i],
                 complete=True,
                 flags=tuple(flags),
             )
@@ -319,14 +325,19 @@ def _layers(found: FoundLayers, scale: float, u_scale: float | None) -> tuple[La
     return tuple(out)
 
 
-def _lateral_spread(found: FoundLayers, i: int, scale: float) -> float | None:
-    """Spread of a layer's thickness along it: that of the smoothed traces and what their smoothing has left out."""
-    local = found.station_depth[i + 1] - found.station_depth[i]
-    local = local[np.isfinite(local)]
-    if len(local) < 8:
-        return None
-    hidden = float(found.lateral_noise[i] ** 2 + found.lateral_noise[i + 1] ** 2)
-    return math.sqrt(float(local.var()) + hidden) * scale
+def _lateral_spread(found: FoundLayers, scale: float) -> list[float | None]:
+    """Spread of each layer's thickness along it: that of the smoothed traces and what their smoothing has left out."""
+    if found.station_depth.shape[1] < 8:
+        return [None] * (len(found.depth) - 1)
+    local = np.diff(found.station_depth, axis=0)
+    good = np.isfinite(local)
+    number = good.sum(axis=1)
+    filled = np.where(good, local, 0.0)
+    mean = filled.sum(axis=1) / np.maximum(number, 1)
+    variance = (np.where(good, local - mean[:, None], 0.0) ** 2).sum(axis=1) / np.maximum(number, 1)
+    hidden = found.lateral_noise[1:] ** 2 + found.lateral_noise[:-1] ** 2
+    spread = np.sqrt(variance + hidden) * scale
+    return [float(s) if n >= 8 else None for s, n in zip(spread, number, strict=True)]
 
 
 def _period(

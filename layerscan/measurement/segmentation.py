@@ -72,6 +72,11 @@ def _viterbi(profile, level, noise, scatter, density, survival, start_level, end
         before[j + 1] = before[j] - 0.5 * min(e * e, 16.0)
         e = (profile[j] - end_level) / noise[j]
         behind[j + 1] = behind[j] - 0.5 * min(e * e, 16.0)
+    occam = np.zeros(longest + 1)
+    shrink = np.zeros(longest + 1)
+    for d in range(1, longest + 1):
+        occam[d] = -0.5 * math.log(1 + d * scatter * scatter)
+        shrink[d] = 1.0 / (scatter * scatter + 1.0 / d)
     best = np.full((2, count + 1), -1e18)
     back = np.zeros((2, count + 1), np.int64)  # start of the segment; negative: the first one
     has_start, has_end = start_level == start_level, end_level == end_level
@@ -81,11 +86,9 @@ def _viterbi(profile, level, noise, scatter, density, survival, start_level, end
             for d in range(1, min(longest, j) + 1):
                 i = j - d
                 s1 = sum1[k, j] - sum1[k, i]
-                s2 = sum2[k, j] - sum2[k, i]
                 mean = s1 / d
-                within = s2 - s1 * mean
-                off = mean * mean / (scatter * scatter + 1.0 / d)
-                fit = -0.5 * within - 0.5 * min(off, 20.0) - 0.5 * math.log(1 + d * scatter * scatter)
+                within = sum2[k, j] - sum2[k, i] - s1 * mean
+                fit = -0.5 * (within + min(mean * mean * shrink[d], 20.0)) + occam[d]
                 if i > 0:
                     value = best[1 - k, i] + fit + density[k, d]
                     if value > top:
@@ -110,8 +113,7 @@ def _viterbi(profile, level, noise, scatter, density, survival, start_level, end
             s1 = sum1[k, count] - sum1[k, i]
             s2 = sum2[k, count] - sum2[k, i]
             mean = s1 / d
-            off = mean * mean / (scatter * scatter + 1.0 / d)
-            fit = -0.5 * (s2 - s1 * mean) - 0.5 * min(off, 20.0) - 0.5 * math.log(1 + d * scatter * scatter)
+            fit = -0.5 * (s2 - s1 * mean + min(mean * mean * shrink[d], 20.0)) + occam[d]
             value = best[1 - k, i] + fit + survival[k, d]
             if value > top:
                 top, last, last_phase, tail_start = value, i, k, count
@@ -173,16 +175,32 @@ def _smooth_levels(profile, edge, phase, length, low, high, level):  # type: ign
         if weight0 == 0:
             continue
         base /= weight0
-        for j in range(level.shape[1]):
+        count = level.shape[1]
+        step = max(int(length / 5), 1)  # worked out at nodes, linear in between
+        previous, at = 0.0, 0
+        begin = 0
+        while True:
+            while begin < n and centre[begin] < at - 3 * length:
+                begin += 1
             total, norm = 0.3 * base, 0.3
-            for i in range(n):
+            for i in range(begin, n):
+                if centre[i] > at + 3 * length:
+                    break
                 if phase[i] == k:
-                    z = (j - centre[i]) / length
-                    if abs(z) < 3:
-                        part = math.exp(-0.5 * z * z)
-                        total += part * mean[i]
-                        norm += part
-            level[k, j] = total / norm
+                    z = (at - centre[i]) / length
+                    part = math.exp(-0.5 * z * z)
+                    total += part * mean[i]
+                    norm += part
+            value = total / norm
+            if at == 0:
+                level[k, 0] = value
+            else:
+                for j in range(at - step + 1, min(at + 1, count)):
+                    level[k, j] = previous + (value - previous) * (j - at + step) / step
+            if at >= count - 1:
+                break
+            previous = value
+            at += step
     for j in range(level.shape[1]):
         gap = level[1, j] - level[0, j]
         if gap < low:
