@@ -19,7 +19,7 @@ if TYPE_CHECKING:
     from layerscan.records import FloatArray, SpectrumKind
 
 MIN_ROWS = 5
-MAX_BYTES = 1 << 25
+MAX_BYTES = 1 << 23
 PERCENT_ABOVE = 2.0
 """Values above this, where no unit is stated, are taken as percent: no surface sends back twice the light."""
 
@@ -27,7 +27,7 @@ MICROMETRES_BELOW = 50.0
 """Wavelengths below this, where no unit is stated, are taken as um."""
 
 _KINDS: tuple[tuple[str, SpectrumKind], ...] = (
-    (r"reflect|\brfl\b|%\s*r\b|^r\s*[\[(]?%?[\])]?$", "reflectance"),
+    (r"reflect|reflex|\brfl\b|%\s*r\b|^r\s*[\[(]?%?[\])]?$", "reflectance"),
     (r"transm|%\s*t\b|^t\s*[\[(]?%?[\])]?$", "transmittance"),
     (r"absorb|\babs\b|\boptical density\b|^a$", "absorbance"),
 )
@@ -78,9 +78,8 @@ def open_spectrum(
 
     Notes
     -----
-    Percent is taken from the header, and where the header is silent from the values (the 90th percentile over
-    400 to 700 nm above 2). Wavelengths may be nm, um or wave numbers in 1/cm by the header; where it is silent, below
-    50 they are um.
+    Values are percent where the column's name says so or their 98th percentile over 400 to 700 nm is above 2.
+    Wavelengths are um where all are below 50, wave numbers in 1/cm where the header says so, else nm.
     """
     path = Path(path)
     if quantity is not None and quantity not in ("reflectance", "transmittance", "absorbance"):
@@ -256,6 +255,7 @@ def _column_names(header: list[str], separator: str | None, width: int) -> tuple
     """Names from the one or two lines above the numbers that have as many cells as there are columns."""
     found: list[list[str]] = []
     for line in reversed([line for line in header if line.strip()][-3:]):
+        line = line.strip(" ").lstrip("#!")
         cells = _split(line, separator)
         if separator is None and len(cells) != width:
             cells = [cell for cell in re.split(r"\s{2,}|\t", line.strip()) if cell]
@@ -380,25 +380,31 @@ def _kind(table: Table, chosen: int, quantity: SpectrumKind | None, doubts: list
 
 
 def _to_nm(table: Table, axis: int, name: str, doubts: list[str]) -> FloatArray:
+    """Wavelengths in nm: wave numbers where the header says so, else um or nm by the size of the numbers.
+
+    Numbers decide between nm and um, since a header may also name a slit in um; a stated unit that they contradict
+    is a doubt.
+    """
     values = table.cells[:, axis]
     title = table.names[axis].lower() or table.header.lower()
-    if re.search(r"cm\s*\^?\s*[-⁻]\s*[1¹]|1/cm|wave ?number", title):
+    says_nm = bool(re.search(r"(^|[^a-z])(nm|nanomet(er|re)s?)([^a-z]|$)", title))
+    says_um = bool(re.search(r"(^|[^a-z])(um|µm|μm|microns?|micromet(er|re)s?)([^a-z]|$)", title))
+    if not says_nm and re.search(r"cm\s*\^?\s*[-⁻]\s*[1¹]|1/cm|wave ?number", title):
         with np.errstate(divide="ignore"):
             wavelength_nm = 1e7 / values
-    elif re.search(r"(^|[^a-z])(um|µm|μm|microns?|micromet(er|re)s?)([^a-z]|$)", title):
-        wavelength_nm = values * 1e3
-    elif re.search(r"(^|[^a-z])(nm|nanomet(er|re)s?)([^a-z]|$)", title):
-        wavelength_nm = values * 1.0
     elif np.nanmax(values) < MICROMETRES_BELOW:
-        doubts.append("No unit of wavelength is stated; values this small were taken as um.")
         wavelength_nm = values * 1e3
+        if not says_um:
+            doubts.append(f"The wavelengths ({np.nanmin(values):.4g} to {np.nanmax(values):.4g}) were taken as um.")
     else:
         wavelength_nm = values * 1.0
+        if says_um and not says_nm and table.names[axis]:
+            doubts.append(f"The header says um, but wavelengths up to {np.nanmax(values):.4g} were taken as nm.")
     finite = wavelength_nm[np.isfinite(wavelength_nm)]
     if not finite.size or finite.min() < 50 or finite.max() > 100_000:
         raise InputError(
-            f"The first column of '{name}' runs from {np.nanmin(values):.4g} to {np.nanmax(values):.4g}, which is no "
-            "range of wavelengths in nm, um or 1/cm. Put the wavelength first, with its unit in the header."
+            f"The wavelengths of '{name}' run from {np.nanmin(values):.4g} to {np.nanmax(values):.4g}, which is no "
+            "range in nm, um or 1/cm. Put the wavelength first, with its unit in the header."
         )
     return wavelength_nm
 
@@ -406,16 +412,18 @@ def _to_nm(table: Table, axis: int, name: str, doubts: list[str]) -> FloatArray:
 def _scale(
     table: Table, chosen: int, kind: SpectrumKind, wavelength_nm: FloatArray, value: FloatArray, doubts: list[str]
 ) -> float:
-    """Factor to a fraction: 0.01 for percent by the header or by the values, 1 for a fraction or absorbance."""
+    """Factor to a fraction: 0.01 for percent by the column's name or by the values, 1 for a fraction or absorbance."""
     if kind == "absorbance":
         return 1.0
-    if re.search(r"%|percent", table.names[chosen].lower() or table.header.lower()):
+    if re.search(r"%|percent", table.names[chosen].lower()):
         return 0.01
     visible = (wavelength_nm >= 400) & (wavelength_nm <= 700)
-    high = float(np.percentile(np.abs(value[visible] if visible.any() else value), 90))
+    high = float(np.percentile(np.abs(value[visible] if visible.any() else value), 98))
     if high > PERCENT_ABOVE:
-        doubts.append(f"No unit is stated; values up to about {high:.3g} were taken as percent.")
+        doubts.append(f"The values, up to about {high:.3g}, were taken as percent.")
         return 0.01
+    if re.search(r"%|percent", table.header.lower()):
+        doubts.append(f"The header mentions percent, but values up to about {high:.3g} were taken as fractions.")
     return 1.0
 
 

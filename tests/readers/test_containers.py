@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
+
 from layerscan.errors import CalibrationError, InputError
 from layerscan.readers import instruments
 from layerscan.readers.container_worker import describe_axis, frame_count

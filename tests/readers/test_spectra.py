@@ -53,6 +53,8 @@ def test_separators_and_decimals(tmp_path, separator, decimal, form, end):
         ("Wavelength,Transmittance percent", 100, "transmittance"),
         ("wavelength_nm,reflectance", 1, "reflectance"),
         ("wavelength nm,Absorbance", 1, "absorbance"),
+        ("# wavelength_nm, reflectance", 1, "reflectance"),
+        ("Wellenlänge (nm),Reflexion (%)", 100, "reflectance"),
     ],
 )
 def test_header_says_quantity_and_unit(tmp_path, header, factor, kind):
@@ -179,8 +181,8 @@ def test_gaps_are_left_out(tmp_path):
         ("".join(f"{w},nan\n" for w in range(400, 500)), "no finite value"),
         ("400,0.1\n" * 9, "1 different wavelengths"),
         ("".join(f"{w},0,{w - 370}\n" for w in range(400, 500)), "commas may separate columns or decimals"),
-        ("".join(f"{w},0.5\n" for w in range(-50, 50)), "no range of wavelengths"),
-        ("".join(f"{w}e9,0.5\n" for w in range(1, 50)), "no range of wavelengths"),
+        ("".join(f"{w},0.5\n" for w in range(-50, 50)), "which is no range in nm"),
+        ("".join(f"{w}e9,0.5\n" for w in range(1, 50)), "which is no range in nm"),
         ("nm,counts\n" + "".join(f"{w},{w * 10}\n" for w in range(400, 500)), "holds counts"),
         ("nm,u\n" + "".join(f"{w},0.1\n" for w in range(400, 500)), "no column of values"),
         (b"\x89PNG\r\n\x1a\n" + bytes(range(256)), "no table of numbers"),
@@ -269,3 +271,32 @@ def test_any_bytes_give_a_spectrum_or_a_clear_error(tmp_path_factory, raw):
     assert found.value.size >= 5
     assert np.isfinite(found.value).all()
     assert (np.diff(found.wavelength_nm) > 0).all()
+
+
+def test_percent_and_um_in_passing_do_not_scale(tmp_path):
+    # a header may name humidity in percent and a slit in um: the numbers decide, and that is said
+    header = "humidity 45 %\nslit 25 um\n"
+    found = open_spectrum(write(tmp_path, header + lines(WAVELENGTH, VALUE, separator="\t")))
+    np.testing.assert_allclose(found.wavelength_nm, WAVELENGTH)
+    np.testing.assert_allclose(found.value, VALUE, atol=6e-5)
+    assert any("mentions percent" in doubt for doubt in found.doubts)
+
+
+def test_wavelength_unit_that_the_numbers_contradict(tmp_path):
+    # nothing is visible at 400 um
+    found = open_spectrum(write(tmp_path, "wavelength (um),reflectance\n" + lines(WAVELENGTH, VALUE)))
+    np.testing.assert_allclose(found.wavelength_nm, WAVELENGTH)
+    assert any("says um" in doubt for doubt in found.doubts)
+
+
+def test_small_percentages_are_trusted_to_their_name(tmp_path):
+    # 0.2 to 0.35 percent: the column's name decides, not the size
+    found = open_spectrum(write(tmp_path, "nm,reflectance (%)\n" + lines(WAVELENGTH, VALUE)))
+    np.testing.assert_allclose(found.value, VALUE / 100, atol=1e-6)
+
+
+def test_narrow_band_in_percent(tmp_path):
+    # a dark surface with a narrow band of 30 %: most values are below 2, the band is not
+    value = 0.5 + 30 * np.exp(-(((WAVELENGTH - 550) / 10) ** 2))
+    found = open_spectrum(write(tmp_path, lines(WAVELENGTH, value)))
+    np.testing.assert_allclose(found.value, value / 100, atol=1e-6)
