@@ -506,6 +506,7 @@ class Prediction:
     colour: Colour
     swapped: SwappedAssignment | None = None
     series: Series | None = None
+    lateral: Spectrum | None = None  # mean reflectance over the lateral positions of the traced boundaries
     materials: tuple[Mapping[str, Any], ...] = ()  # name, source, doi, status, range_nm, u_index of each medium used
     notes: tuple[str, ...] = ()
 

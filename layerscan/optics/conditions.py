@@ -15,8 +15,9 @@ if TYPE_CHECKING:
     from layerscan.records import ComplexArray, FloatArray, IntArray
 
 Polarisation = Literal["s", "p", "unpolarised", "left", "right"]
-CONE_TOLERANCE = 5e-4  # of reflectance, between the rule used and one of half as many directions
-CONE_NODES = (8, 16, 32, 64, 128)
+CONE_TOLERANCE = 5e-4  # of reflectance, between the rule used and one of twice as many directions
+CONE_NODES = (4, 8, 16, 32, 64, 128)
+FINE_NODES = 160  # points per dimension from which the rule of an oblique cone is made
 SLIT_STEPS = 6  # points of calculation per bandwidth
 
 
@@ -26,6 +27,7 @@ class Cone:
 
     aoi_deg: FloatArray
     weight: FloatArray
+    about_normal: bool = False  # its axis is the layer normal and it has a width
 
 
 def make_cone(*, aoi_deg: float, aperture: float, incident_index: float, nodes: int = 16) -> Cone:
@@ -41,7 +43,7 @@ def make_cone(*, aoi_deg: float, aperture: float, incident_index: float, nodes: 
     incident_index : float
         Refractive index of the incident medium.
     nodes : int
-        Directions per dimension.
+        Directions.
 
     Returns
     -------
@@ -57,8 +59,9 @@ def make_cone(*, aoi_deg: float, aperture: float, incident_index: float, nodes: 
     -----
     A uniformly bright source fills the cone with weight sin(b) cos(b) in the angle b to its axis. With v = cos b that
     is v dv, in which reflectance is smooth up to grazing incidence, so Gauss-Legendre nodes in v converge fast; the
-    hemispherical limit is Walsh's diffuse Fresnel reflectance. Around an oblique axis the azimuth is sampled evenly;
-    rays beyond 90 degrees do not reach the surface and are left out.
+    hemispherical limit is Walsh's diffuse Fresnel reflectance. Reflectance depends on the angle of incidence alone, so
+    a cone about an oblique axis is reduced to a Gauss rule in the cosine of that angle; rays beyond 90 degrees do not
+    reach the surface and are left out.
 
     References
     ----------
@@ -77,16 +80,39 @@ def make_cone(*, aoi_deg: float, aperture: float, incident_index: float, nodes: 
     v = lowest + (1 - lowest) * (x + 1) / 2
     weight = w * v
     if aoi_deg == 0:
-        return Cone(aoi_deg=np.degrees(np.arccos(np.minimum(v, 1.0))), weight=weight / weight.sum())
-    azimuth = np.pi * (np.arange(nodes) + 0.5) / nodes
+        directions = np.degrees(np.arccos(np.minimum(v, 1.0)))
+        return Cone(aoi_deg=directions, weight=weight / weight.sum(), about_normal=True)
+    x, w = np.polynomial.legendre.leggauss(FINE_NODES)
+    v = lowest + (1 - lowest) * (x + 1) / 2
+    azimuth = np.pi * (np.arange(FINE_NODES) + 0.5) / FINE_NODES
     axis = np.radians(aoi_deg)
     sine = np.sqrt(np.maximum(1 - v * v, 0.0))
     cosine = np.cos(axis) * v[:, None] - np.sin(axis) * sine[:, None] * np.cos(azimuth)
-    all_weights = np.broadcast_to(weight[:, None], cosine.shape)
+    fine = np.broadcast_to((w * v)[:, None], cosine.shape)
     used = cosine > 0
-    aoi = np.degrees(np.arccos(np.clip(cosine[used], 0.0, 1.0)))
-    chosen = all_weights[used]
-    return Cone(aoi_deg=aoi, weight=chosen / chosen.sum())
+    value, weight = _gauss_rule(cosine[used], fine[used], nodes)
+    return Cone(aoi_deg=np.degrees(np.arccos(np.clip(value, 0.0, 1.0))), weight=weight)
+
+
+def _gauss_rule(value: FloatArray, weight: FloatArray, nodes: int) -> tuple[FloatArray, FloatArray]:
+    """Nodes and weights that integrate polynomials up to degree 2 nodes - 1 as the given points do.
+
+    Lanczos' recurrence with reorthogonalisation, then the eigenvalues of the Jacobi matrix (Golub and Welsch, Math.
+    Comp. 23, 221, 1969).
+    """
+    basis = np.zeros((nodes, value.size))
+    basis[0] = np.sqrt(weight / weight.sum())
+    diagonal, beside = np.zeros(nodes), np.zeros(nodes - 1)
+    for k in range(nodes):
+        next_one = value * basis[k]
+        diagonal[k] = basis[k] @ next_one
+        for _ in range(2):
+            next_one = next_one - basis[: k + 1].T @ (basis[: k + 1] @ next_one)
+        if k < nodes - 1:
+            beside[k] = np.sqrt(next_one @ next_one)
+            basis[k + 1] = next_one / beside[k]
+    points, vectors = np.linalg.eigh(np.diag(diagonal) + np.diag(beside, 1) + np.diag(beside, -1))
+    return points, vectors[0] ** 2
 
 
 def observe_stacks(
@@ -104,8 +130,9 @@ def observe_stacks(
     Notes
     -----
     Unpolarised light is the mean of s and p. So is circular light, left or right: isotropic layers turn neither into
-    the other's favour. Within a cone about the layer normal linear light is s for some rays and p for others; s and p
-    are then taken as the polarisation of each ray's own plane of incidence only where the axis is oblique.
+    the other's favour. In a cone about the layer normal linear light is s for some rays and p for others, half of
+    each, so that there s and p give the mean too. In a cone about an oblique axis s and p are those of each ray's own
+    plane of incidence, which holds for cones much narrower than the tilt of their axis.
     """
     names = polarisations_needed(cone, polarisation)
     shape = (sequence.shape[0], wavelength_nm.size)
@@ -125,7 +152,9 @@ def polarisations_needed(cone: Cone, polarisation: Polarisation) -> tuple[str, .
     """Which linear polarisations make up the light."""
     if cone.aoi_deg.size == 1 and cone.aoi_deg[0] == 0:
         return ("s",)
-    return (polarisation,) if polarisation in ("s", "p") else ("s", "p")
+    if polarisation in ("s", "p") and not cone.about_normal:
+        return (polarisation,)
+    return ("s", "p")
 
 
 def converged_cone(
@@ -145,22 +174,21 @@ def converged_cone(
     -------
     cone : Cone
     error : float
-        Largest difference of reflectance between this rule and that of half as many directions; an upper estimate.
+        Largest difference of reflectance between this rule and that of twice as many directions.
     """
+    coarse = make_cone(aoi_deg=aoi_deg, aperture=aperture, incident_index=incident_index, nodes=CONE_NODES[0])
     if aperture <= 0:
-        return make_cone(aoi_deg=aoi_deg, aperture=0.0, incident_index=incident_index), 0.0
-    before, error = None, np.inf
-    most = CONE_NODES if aoi_deg == 0 else CONE_NODES[:3]
-    cone = make_cone(aoi_deg=aoi_deg, aperture=aperture, incident_index=incident_index, nodes=most[0] // 2)
-    for nodes in (most[0] // 2, *most):
-        cone = make_cone(aoi_deg=aoi_deg, aperture=aperture, incident_index=incident_index, nodes=nodes)
-        now, _ = observe_stacks(index, sequence, thickness_nm, wavelength_nm, cone=cone, polarisation=polarisation)
-        if before is not None:
-            error = float(abs(now - before).max())
-            if error <= CONE_TOLERANCE:
-                break
-        before = now
-    return cone, error
+        return coarse, 0.0
+    error = np.inf
+    before, _ = observe_stacks(index, sequence, thickness_nm, wavelength_nm, cone=coarse, polarisation=polarisation)
+    for nodes in CONE_NODES[1:]:
+        fine = make_cone(aoi_deg=aoi_deg, aperture=aperture, incident_index=incident_index, nodes=nodes)
+        now, _ = observe_stacks(index, sequence, thickness_nm, wavelength_nm, cone=fine, polarisation=polarisation)
+        error = float(abs(now - before).max())
+        if error <= CONE_TOLERANCE:
+            break
+        before, coarse = now, fine
+    return coarse, error
 
 
 def slit_grid(wavelength_nm: FloatArray, *, bandwidth_nm: float) -> FloatArray:

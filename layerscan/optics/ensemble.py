@@ -180,7 +180,7 @@ def fill_stations(station_thickness_nm: FloatArray, mean_nm: FloatArray) -> Floa
 
     Each layer is brought to the mean ``mean_nm`` that was measured for it; a layer that was traced nowhere is flat.
     """
-    filled = np.array(station_thickness_nm, dtype=float)
+    filled: FloatArray = np.array(station_thickness_nm, dtype=float)
     stations = np.arange(filled.shape[0])
     for j in range(filled.shape[1]):
         known = np.isfinite(filled[:, j])
@@ -189,7 +189,8 @@ def fill_stations(station_thickness_nm: FloatArray, mean_nm: FloatArray) -> Floa
             continue
         filled[:, j] = np.interp(stations, stations[known], filled[known, j])
         filled[:, j] += mean_nm[j] - filled[known, j].mean()
-    return np.maximum(filled, 0.0)
+    result: FloatArray = np.maximum(filled, 0.0)
+    return result
 
 
 def split_by_width(filled_nm: FloatArray, *, window_stations: float) -> Sequence[slice]:

@@ -19,7 +19,7 @@ from numba import njit, types
 from numba.extending import intrinsic
 
 STRIDE = 144  # wavelengths in a tile: whole vectors, and 1152 bytes is no multiple of a memory page
-LANES = 16  # tiles are padded to this many
+LANES = 8  # tiles are padded to a multiple of this many
 RENORMALISE = 24  # layers between two renormalisations
 THICK = 50.0  # half-turns beyond which the phase is formed in two parts
 
@@ -255,7 +255,7 @@ def _start(constants: Any, eta: int, state: Any, field: int, count: int) -> None
 
 
 @njit(**OPTIONS)  # type: ignore[untyped-decorator]
-def _finish(front: Any, state: Any, field: int, count: int, lossless: bool, amplitude: bool, result: Any) -> None:
+def _finish(front: Any, state: Any, field: int, lossless: bool, amplitude: bool, first: Any, second: Any) -> None:
     """From the fields at the front: R and T, or real and imaginary part of the reflected amplitude.
 
     The admittance of the incident medium is front[0]/front[1], so that it may be infinite. Without loss the flux at
@@ -266,8 +266,7 @@ def _finish(front: Any, state: Any, field: int, count: int, lossless: bool, ampl
     kept = _row(state, field + 4 * STRIDE)
     b_re, b_im = _row(state, field), _row(state, field + STRIDE)
     c_re, c_im = _row(state, field + 2 * STRIDE), _row(state, field + 3 * STRIDE)
-    first, second = _row(result, 0), _row(result, STRIDE)
-    for i in range(count):
+    for i in range(first.size):
         br, bi = b_re[i] * top[i], b_im[i] * top[i]
         cr, ci = c_re[i] * bottom[i], c_im[i] * bottom[i]
         sum_re, sum_im, rest_re, rest_im = br + cr, bi + ci, br - cr, bi - ci
@@ -283,8 +282,8 @@ def _finish(front: Any, state: Any, field: int, count: int, lossless: bool, ampl
 
 
 @compile_cached(  # type: ignore[untyped-decorator]
-    "void(float64[:,::1], float64[:,::1], boolean[::1], int64[:,::1], float64[:,::1], int64, int64, boolean,"
-    " float64[:,:,::1])"
+    "void(float64[:,::1], float64[:,::1], boolean[::1], int64[:,::1], float64[:,::1], int64[::1], int64, int64, int64,"
+    " int64, boolean, float64[:,:,:,::1], float64[:,:,:,::1])"
 )
 def run_tile(
     constants: Any,
@@ -292,16 +291,22 @@ def run_tile(
     real: Any,
     sequence: Any,
     thickness: Any,
-    polarisations: int,
+    rows: Any,
+    angle: int,
+    start: int,
+    stop: int,
     count: int,
     amplitude: bool,
-    result: Any,
+    first: Any,
+    second: Any,
 ) -> None:
-    """Reflectance and transmittance (or the amplitude) of stacks over one tile of wavelengths at one angle.
+    """Reflectance and transmittance (or the amplitude's parts) of stacks over one tile of wavelengths at one angle.
 
     ``constants`` is (materials, rows x STRIDE), ``front`` (polarisations, 2 STRIDE); ``real`` says which materials
-    have real kz over the whole tile; ``result`` is (stacks, polarisations, 2 STRIDE).
+    have real kz over the whole tile. ``count`` wavelengths are calculated, padding included; results go to
+    ``first`` and ``second``, (stacks, angles, polarisations, wavelengths), at ``rows``, ``angle`` and start to stop.
     """
+    polarisations = front.shape[0]
     state = np.zeros(STATE_ROWS * STRIDE)
     layers = thickness.shape[1]
     for stack in range(sequence.shape[0]):
@@ -330,5 +335,14 @@ def run_tile(
                     _advance_complex(own, eta, state, field, count)
                 if step % RENORMALISE == RENORMALISE - 1:
                     _renormalise(state, field, count)
+        row = rows[stack]
         for p in range(polarisations):
-            _finish(front[p], state, (FIELD + p * FIELD_ROWS) * STRIDE, count, lossless, amplitude, result[stack, p])
+            _finish(
+                front[p],
+                state,
+                (FIELD + p * FIELD_ROWS) * STRIDE,
+                lossless,
+                amplitude,
+                first[row, angle, p, start:stop],
+                second[row, angle, p, start:stop],
+            )

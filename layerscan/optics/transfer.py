@@ -8,7 +8,7 @@ from collections.abc import Callable, Sequence
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from functools import partial
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
@@ -23,7 +23,6 @@ POLARISATIONS = ("s", "p")
 THREAD_WORK = 4_000_000  # layers x wavelengths x angles below which a second thread does not pay
 MEMORY_LIMIT = 4 << 30  # bytes of results that one call may hold
 CONSTANTS_AT_ONCE = 200_000  # values of n over angles, materials and wavelengths prepared at once
-STACKS_AT_ONCE = 2048  # results of one call of the kernel
 KZ_FLOOR = 1e-100  # stands for kz = 0 (critical angle, grazing incidence), which enters only as sin(kz d)/kz
 
 
@@ -348,15 +347,15 @@ def _run(
     workers = _threads(threads, order.size * wavelength.size * angles.size)
     incident_media = np.unique(order[:, 0])
     for medium in incident_media:
-        rows = slice(None) if incident_media.size == 1 else np.flatnonzero(order[:, 0] == medium)
-        part = np.ascontiguousarray(order[rows]), np.ascontiguousarray(thickness[rows])
+        rows = np.flatnonzero(order[:, 0] == medium)
+        part = (order, thickness) if incident_media.size == 1 else (order[rows], thickness[rows])
         together = max(CONSTANTS_AT_ONCE // n.size, 1)
         for start in range(0, angles.size, together):
             some = slice(start, start + together)
             tables = prepare_constants(
                 n, int(medium), wavelength, angles[some], calculated, float(part[1].max(initial=0))
             )
-            jobs = _jobs(tables, part, rows, (first[:, some], second[:, some]), amplitude, workers)
+            jobs = _jobs(tables, part, rows, start, (first, second), amplitude, workers)
             _share(jobs, workers)
     if calculated == kinds:
         return first, second
@@ -427,7 +426,7 @@ def prepare_constants(
     if rate.max() * thickest_nm > kernel.THICK:
         scaled = rate * kernel.SPLITTER
         high = scaled - (scaled - rate)
-        long = n.astype(np.clongdouble)
+        long: Any = n.astype(np.clongdouble)  # 64 bits of mantissa where the machine has them
         exact = tangential_rate(long, long[medium].real, angles).real * 2 / wavelength
         put(kernel.RATE_HIGH, high)
         put(kernel.RATE_LOW, (exact - high).astype(np.float64))
@@ -461,7 +460,8 @@ def prepare_constants(
 def _jobs(
     tables: Constants,
     part: tuple[IntArray, FloatArray],
-    rows: slice | IntArray,
+    rows: IntArray,
+    first_angle: int,
     out: tuple[FloatArray, FloatArray],
     amplitude: bool,
     workers: int,
@@ -470,24 +470,16 @@ def _jobs(
     from layerscan.optics import kernel
 
     order, thickness = part
-    polarisations = tables.front.shape[2]
-    numbers = np.arange(out[0].shape[0])[rows]
 
     def job(angle: int, tile: int, first: int, last: int) -> None:
-        result = np.empty((last - first, polarisations, 2, kernel.STRIDE))
-        kernel.run_tile(
-            tables.media[angle, tile], tables.front[angle, tile], tables.real[angle, tile], order[first:last],
-            thickness[first:last], polarisations, tables.width, amplitude,
-            result.reshape(last - first, polarisations, -1),
-        )  # fmt: skip
         start = tile * tables.width
         stop = min(start + tables.width, tables.wavelengths)
-        where = slice(first, last) if isinstance(rows, slice) else numbers[first:last]
-        out[0][where, angle, :, start:stop] = result[:, :, 0, : stop - start]
-        out[1][where, angle, :, start:stop] = result[:, :, 1, : stop - start]
+        kernel.run_tile(
+            tables.media[angle, tile], tables.front[angle, tile], tables.real[angle, tile], order[first:last],
+            thickness[first:last], rows[first:last], first_angle + angle, start, stop, tables.width, amplitude, *out,
+        )  # fmt: skip
 
     shares = 1 if workers == 1 else min(order.shape[0], 4 * workers)
-    shares = max(shares, -(-order.shape[0] // STACKS_AT_ONCE))
     edges = np.linspace(0, order.shape[0], shares + 1).astype(int)
     angles, tiles = tables.media.shape[:2]
     return [
