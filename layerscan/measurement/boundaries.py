@@ -17,8 +17,8 @@ from numba import njit
 if TYPE_CHECKING:
     from layerscan.records import BoolArray, FloatArray
 
-BLUR, BOX, GAMMA, RIM_BRIGHT, RIM_DARK, RIM_DECAY = range(6)
-SHARED = 6
+BLUR, BOX, GAMMA, RIM_BRIGHT, RIM_DARK, RIM_DECAY, SKEW = range(7)
+SHARED = 7
 _ROOT2 = math.sqrt(2.0)
 _NORM = 1.0 / math.sqrt(2.0 * math.pi)
 
@@ -42,6 +42,41 @@ class EdgeFit:
     scatter: float
 
 
+@dataclass(frozen=True, kw_only=True)
+class Hints:
+    """What the noise says about the recording: it grows with the slope of a gamma curve, or with counts of electrons.
+
+    ``gamma`` and ``skew`` are the values that the ratio of the noise in both phases would mean, 0 where it says
+    nothing; the log odds say how much each is believed beforehand against a linear recording.
+    """
+
+    gamma: float = 0.0
+    skew: float = 0.0
+    log_odds_gamma: float = 0.0
+    log_odds_skew: float = 0.0
+
+
+def read_hints(log_ratio: float, *, dark: float, bright: float, full_scale: float | None) -> Hints:
+    """Hints from the logarithm of the ratio of noise variances (bright over dark) and the phases' intensities.
+
+    Notes
+    -----
+    Counts of electrons have a variance proportional to the intensity; the intensities of a transmission image follow
+    exp(-mass-thickness), so the ratio is then also the skew of a projected edge. Noise that is even before a gamma
+    curve v + g v (1 - v) is scaled by its slope, (1 + g) at dark and (1 - g) at bright.
+    """
+    if not math.isfinite(log_ratio) or abs(log_ratio) < 0.04:
+        return Hints()
+    gamma = -math.tanh(log_ratio / 4)
+    zeros = [math.log(bright / dark)] if dark > 0 else []
+    if full_scale is not None and full_scale > bright > dark:
+        zeros.append(-math.log((full_scale - dark) / (full_scale - bright)))
+    counts = any(abs(z) > 0.1 and 0.75 < log_ratio / z < 1.25 for z in zeros)
+    return Hints(
+        gamma=gamma, skew=log_ratio, log_odds_gamma=-2.0 if counts else 4.0, log_odds_skew=6.0 if counts else -4.0
+    )
+
+
 @njit(cache=True)  # type: ignore[untyped-decorator]
 def _rim(v, s, decay):  # type: ignore[no-untyped-def]
     """One-sided exponential (v > 0) blurred by a Gaussian: value and derivatives by v, s and decay."""
@@ -58,18 +93,32 @@ def _rim(v, s, decay):  # type: ignore[no-untyped-def]
 
 
 @njit(cache=True)  # type: ignore[untyped-decorator]
-def _edge(u, s, box):  # type: ignore[no-untyped-def]
-    """Blurred step: value and derivatives by u, s and box width."""
+def _edge(u, s, box, skew):  # type: ignore[no-untyped-def]
+    """Blurred step: value and derivatives by u, s, box width and skew.
+
+    The box may be skewed: its density is (1 + skew x/box)/box, which is what the projection of mass-thickness leaves
+    of it to first order (skew = the logarithm of the ratio of intensities).
+    """
     if box < 0.02 * s:
         z = u / s
         density = _NORM * math.exp(-0.5 * z * z) / s
-        return 0.5 * math.erfc(-z / _ROOT2), density, -z * density, -density * z / s * box / 12.0
+        return 0.5 * math.erfc(-z / _ROOT2), density, -z * density, -density * z / s * box / 12.0, 0.0
     h = 0.5 * box
     a, b = (u + h) / s, (u - h) / s
     pa, pb = 0.5 * math.erfc(-a / _ROOT2), 0.5 * math.erfc(-b / _ROOT2)
     da, db = _NORM * math.exp(-0.5 * a * a), _NORM * math.exp(-0.5 * b * b)
-    value = s / box * (a * pa + da - b * pb - db)
-    return value, (pa - pb) / box, (da - db) / box, (0.5 * (pa + pb) - value) / box
+    rise = a * pa + da - b * pb - db
+    value = s / box * rise
+    by_u, by_s, by_box = (pa - pb) / box, (da - db) / box, (0.5 * (pa + pb) - value) / box
+    square = box * box
+    bend = 0.5 * ((a * a - 1) * pa + a * da - (b * b - 1) * pb - b * db)
+    extra = s / square * (u * rise - s * bend)
+    if skew != 0.0:
+        value += skew * extra
+        by_u += skew * (u * (pa - pb) + s * (da - db)) / square
+        by_s += skew * (u * (da - db) + s * (pa - pb - a * da + b * db)) / square
+        by_box += skew * (-2 * extra / box + 0.25 * (pb - pa) / box)
+    return value, by_u, by_s, by_box, extra
 
 
 @njit(cache=True)  # type: ignore[untyped-decorator]
@@ -107,7 +156,8 @@ def model_profile(depth, position, level, shared, active):  # type: ignore[no-un
         b = b0
         while b < edges and position[b] - depth[j] <= reach:
             step = level[b + 1] - level[b]
-            e, _, _, _ = _edge(depth[j] - position[b], shared[BLUR], shared[BOX])
+            skew = shared[SKEW] if step > 0 else -shared[SKEW]
+            e, _, _, _, _ = _edge(depth[j] - position[b], shared[BLUR], shared[BOX], skew)
             value += step * e
             if active[RIM_DECAY]:
                 side = 1.0 if step > 0 else -1.0
@@ -151,16 +201,19 @@ def _accumulate(depth, value, weight, position, level, shared, active, target, p
             if 2 * i + 2 >= widest:
                 break
             step = level[b1 + 1] - level[b1]
-            e, du, ds, dbox = _edge(depth[j] - position[b1], s, box)
+            side = 1.0 if step > 0 else -1.0
+            e, du, ds, dbox, dskew = _edge(depth[j] - position[b1], s, box, side * shared[SKEW])
             e_value[i], e_u[i] = e, du
             total += step * e
             by_shared[BLUR] += step * ds
             by_shared[BOX] += step * dbox
+            by_shared[SKEW] += step * side * dskew
             b1 += 1
         n = b1 - b0
         slope = 1 + gamma * (1 - 2 * total)
         by_shared[BLUR] *= slope
         by_shared[BOX] *= slope
+        by_shared[SKEW] *= slope
         by_shared[GAMMA] = total * (1 - total)
         for i in range(n + 1):
             left = e_value[i - 1] if i > 0 else 1.0
@@ -329,6 +382,8 @@ def fit_edges(depth, value, weight, position, level, shared, active, target, pre
         new_shared[BLUR] = min(max(shared[BLUR] + step_shared[BLUR], 0.6 * shared[BLUR], 0.2), 1.5 * shared[BLUR])
         if active[BOX]:
             new_shared[BOX] = max(shared[BOX] + min(max(step_shared[BOX], -shared[BLUR]), shared[BLUR]), 0.03)
+        if active[SKEW]:
+            new_shared[SKEW] = min(max(shared[SKEW] + step_shared[SKEW], -1.5), 1.5)
         if active[GAMMA]:
             new_shared[GAMMA] = min(max(shared[GAMMA] + step_shared[GAMMA], -0.9), 0.9)
         if active[RIM_DECAY]:
@@ -386,8 +441,8 @@ def fit_edges(depth, value, weight, position, level, shared, active, target, pre
 def score_gains(depth, value, weight, position, level, shared, active, target, precision, models):  # type: ignore[no-untyped-def]
     """What freeing further shared parameters would lower the cost by, to first order (score test), for each model.
 
-    ``models`` (n, 6) bool; parameters that have no slope at zero must have been given a start value in ``shared``
-    through their model's own row of ``shared`` (n, 6).
+    ``models`` (n, 7) bool; parameters that have no slope at zero must have been given a start value in ``shared``
+    through their model's own row of ``shared`` (n, 7).
     """
     edges = position.size
     size = 2 * edges + 1
@@ -453,10 +508,10 @@ def fit_boundaries(
     other: tuple[bool, bool] = (False, False),
     blur: float = 1.0,
     nuisance: bool = True,
-    start: FloatArray | None = None,
     level: FloatArray | None = None,
     scatter: float | None = None,
     full: bool = True,
+    hints: Hints | None = None,
 ) -> EdgeFit:
     """Fit all boundaries of a profile whose phases alternate, dark near 0 and bright near 1.
 
@@ -475,15 +530,16 @@ def fit_boundaries(
     blur : float
         Standard deviation of the edge blur to start from [samples].
     nuisance : bool
-        Try projection box, gamma and edge brightening, and keep what lowers the Bayesian information criterion.
-    start : (6,) float array, optional
-        Shared parameters of an earlier fit to start from.
+        Try projection box, gamma and edge brightening, and average over them by their posterior odds (information
+        criterion and what the noise hints at); what they differ by enters the covariance.
     level : (edges + 1,) float array, optional
         Levels of an earlier fit to start from.
     scatter : float, optional
         Standard deviation of the levels about their phase to start from.
     full : bool
         Work out the covariance.
+    hints : Hints, optional
+        What the noise says about gamma and about counting.
 
     Returns
     -------
@@ -505,11 +561,9 @@ def fit_boundaries(
     target = np.where(np.arange(segments) % 2 == 0, float(bright_first), float(not bright_first))
     free = np.zeros(segments, bool)
     free[0], free[-1] = other
-    shared = np.array([blur, 0.0, 0.0, 0.0, 0.0, 2.0]) if start is None else start.copy()
+    shared = np.array([blur, 0.0, 0.0, 0.0, 0.0, 2.0, 0.0])
     active = np.zeros(SHARED, bool)
     active[BLUR] = True
-    if start is not None:
-        active |= np.array([True, start[BOX] > 0, start[GAMMA] != 0] + [start[RIM_BRIGHT] != 0] * 3)
     state = (position.astype(np.float64), target.copy() if level is None else level.astype(np.float64), shared)
     used = int((weight > 0).sum())
     scatter = 0.15 if scatter is None else scatter
@@ -525,9 +579,12 @@ def fit_boundaries(
             break
     precision = np.where(free, 1e-6, 1 / scatter**2)
     if nuisance and used > 40 and segments > 4:
-        state, active = _select(depth, profile, weight, fit, active, target, precision, used)
+        averaged = _average_models(depth, profile, weight, fit, target, precision, used, hints or Hints(), full)
+        return _finish(depth, profile, weight, averaged, precision, used, scatter)
     fit = fit_edges(depth, profile, weight, *state, active, target, precision, 15, 1e-3, full)
-    return _finish(depth, profile, weight, fit, active, precision, used, scatter)
+    return _finish(
+        depth, profile, weight, (*fit[:5], active, np.zeros_like(fit[4]), fit[0]), precision, used, scatter
+    )
 
 
 def _phase_shift(level: FloatArray, target: FloatArray, free: BoolArray) -> FloatArray:
@@ -539,55 +596,104 @@ def _phase_shift(level: FloatArray, target: FloatArray, free: BoolArray) -> Floa
     return out
 
 
-_MODELS: tuple[tuple[int, ...], ...] = ((GAMMA,), (BOX,), (RIM_BRIGHT, RIM_DARK, RIM_DECAY))
+@dataclass(frozen=True, kw_only=True)
+class _Model:
+    """One hypothesis about the edges: start values, which shared parameters are free, their price, prior log odds."""
+
+    start: dict[int, float]
+    free: tuple[int, ...]
+    price: float
+    log_odds: float = 0.0
 
 
-def _select(depth, profile, weight, fit, active, target, precision, used):  # type: ignore[no-untyped-def]
-    """Add shared parameters one model at a time while the information criterion falls.
+def _models(blur: float, used: int, hints: Hints) -> list[_Model]:
+    """Hypotheses beyond the plain edge; prices are half of what the information criterion asks, in natural units."""
+    each = 0.5 * math.log(used)
+    box = {BOX: 1.7 * blur, BLUR: 0.87 * blur}
+    rim = {RIM_BRIGHT: 0.05, RIM_DARK: 0.01, RIM_DECAY: 1.5 * blur}
+    rims = (RIM_BRIGHT, RIM_DARK, RIM_DECAY)
+    models = [
+        _Model(start=box, free=(BOX,), price=2.0),
+        _Model(start={GAMMA: 0.0}, free=(GAMMA,), price=each + 2),
+        _Model(start=rim, free=rims, price=3 * each + 2),
+        _Model(start={**rim, GAMMA: hints.gamma}, free=(*rims, GAMMA), price=4 * each + 4),
+    ]
+    if hints.gamma:
+        odds = hints.log_odds_gamma
+        models.append(_Model(start={GAMMA: hints.gamma}, free=(), price=0.5, log_odds=odds))
+        models.append(_Model(start={**rim, GAMMA: hints.gamma}, free=rims, price=3 * each + 2, log_odds=odds))
+        models.append(
+            _Model(start={**box, SKEW: hints.skew}, free=(BOX,), price=2.0, log_odds=hints.log_odds_skew)
+        )
+    return models
 
-    A score test says first which model could gain enough, so that most profiles need no further fit.
+
+def _average_models(depth, profile, weight, fit, target, precision, used, hints, full):  # type: ignore[no-untyped-def]
+    """Fit the hypotheses that could matter and average over them by their posterior odds.
+
+    Returns (position, level, shared, cost, covariance, active); covariance without the scale of the residuals.
     """
-    state, cost = fit[:3], fit[3]
-    for _ in range(len(_MODELS)):
-        open_models = [names for names in _MODELS if not active[names[0]]]
-        if not open_models:
-            break
-        masks = np.zeros((len(open_models), SHARED), bool)
-        starts = np.tile(state[2], (len(open_models), 1))
-        for row, names in enumerate(open_models):
-            masks[row, list(names)] = True
-            if BOX in names:
-                starts[row, BOX] = 1.5 * state[2][BLUR]
-                starts[row, BLUR] = 0.9 * state[2][BLUR]
-            if RIM_DECAY in names:
-                starts[row, RIM_DECAY] = 2 * state[2][BLUR]
-                masks[row, RIM_DECAY] = False
-        unit = cost / used
-        slope = masks & (np.array([BOX not in names for names in open_models])[:, None])
-        gains = score_gains(depth, profile, weight, state[0], state[1], starts, active, target, precision, slope)
-        kept = None
-        for row in np.argsort(-gains):
-            names = open_models[row]
-            price = (len(names) * math.log(used) + 4.0) * unit
-            if BOX not in names and gains[row] < 0.7 * price:
-                continue
-            trial_active = active.copy()
-            trial_active[list(names)] = True
-            trial = fit_edges(
-                depth, profile, weight, state[0], state[1], starts[row], trial_active, target, precision, 15, 0.05, False
-            )
-            score = used * math.log(max(trial[3], 1e-300) / max(cost, 1e-300)) + len(names) * math.log(used) + 4.0
-            if score < 0 and (kept is None or score < kept[0]):
-                kept = (score, trial, trial_active)
-        if kept is None:
-            break
-        state, cost, active = kept[1][:3], kept[1][3], kept[2]
-    return state, active
+    plain = np.zeros(SHARED, bool)
+    plain[BLUR] = True
+    models = _models(float(fit[2][BLUR]), used, hints)
+    unit = fit[3] / used
+    candidates = [(0.0, fit, plain)]
+    gains = _first_gains(depth, profile, weight, fit, plain, target, precision, models)
+    for model, gain in zip(models, gains, strict=True):
+        if model.log_odds <= 0 and 0.5 * gain / unit < 0.7 * model.price - model.log_odds:
+            continue
+        active = plain.copy()
+        active[list(model.free)] = True
+        active[RIM_DECAY] |= RIM_DECAY in model.start
+        shared = fit[2].copy()
+        for name, value in model.start.items():
+            shared[name] = value
+        trial = fit_edges(depth, profile, weight, fit[0], fit[1], shared, active, target, precision, 15, 0.05, False)
+        if trial[5]:
+            candidates.append((model.log_odds - model.price, trial, active))
+    least = min(trial[3] for _, trial, _ in candidates)
+    scores = np.array([odds - 0.5 * used * math.log(trial[3] / least) for odds, trial, _ in candidates])
+    odds = np.exp(scores - scores.max())
+    odds = np.where(odds > 0.02, odds, 0.0)
+    odds /= odds.sum()
+    best = int(np.argmax(odds))
+    kept = []
+    for i in np.flatnonzero(odds):
+        _, trial, active = candidates[i]
+        kept.append(
+            fit_edges(
+                depth, profile, weight, trial[0], trial[1], trial[2], active, target, precision,
+                15 if i == best else 4, 1e-3 if i == best else 0.05, full,
+            )  # fmt: skip
+        )
+    share = odds[odds > 0]
+    chosen = kept[int(np.argmax(share))]
+    position = sum(p * trial[0] for p, trial in zip(share, kept, strict=True))
+    covariance = sum(p * trial[4] for p, trial in zip(share, kept, strict=True))
+    between = np.zeros_like(covariance)
+    for p, trial in zip(share, kept, strict=True):
+        off = trial[0] - position
+        between += p * np.outer(off, off)
+    return position, chosen[1], chosen[2], chosen[3], covariance, candidates[best][2], between, chosen[0]
 
 
-def _finish(depth, profile, weight, fit, active, precision, used, scatter):  # type: ignore[no-untyped-def]
-    position, level, shared, cost, covariance, _ = fit
-    residual = profile - model_profile(depth, position, level, shared, active)
+def _first_gains(depth, profile, weight, fit, plain, target, precision, models):  # type: ignore[no-untyped-def]
+    """Score test of each model; infinite where its start value cannot be taken to zero (box)."""
+    masks = np.zeros((len(models), SHARED), bool)
+    starts = np.tile(fit[2], (len(models), 1))
+    for row, model in enumerate(models):
+        masks[row, list(model.free)] = True
+        if RIM_DECAY in model.start:
+            starts[row, RIM_DECAY] = model.start[RIM_DECAY]
+            masks[row, RIM_DECAY] = False
+        masks[row, BOX] = False
+    gains = score_gains(depth, profile, weight, fit[0], fit[1], starts, plain, target, precision, masks)
+    return [math.inf if BOX in model.free else gain for model, gain in zip(models, gains, strict=True)]
+
+
+def _finish(depth, profile, weight, fit, precision, used, scatter):  # type: ignore[no-untyped-def]
+    position, level, shared, cost, covariance, active, between, own_position = fit
+    residual = profile - model_profile(depth, own_position, level, shared, active)
     free_parameters = len(position) + int(active.sum()) + int((precision < 1e-3).sum()) + 2
     chi2 = float((weight * residual**2).sum()) / max(used - free_parameters, 1)
     blur = shared[BLUR]
@@ -599,7 +705,7 @@ def _finish(depth, profile, weight, fit, active, precision, used, scatter):  # t
         level=level,
         shared=shared,
         active=active,
-        covariance=covariance * scale,
+        covariance=covariance * scale + between,
         residual_rms=rms,
         cost=float(cost),
         scale=scale,

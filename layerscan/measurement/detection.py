@@ -31,13 +31,17 @@ class Evidence:
     share : float
         Part of the picture's variation at this scale that the mean profile explains.
     swings : float
-        Number of alternations between dark and bright that are at least a third of the third largest.
+        Number of alternations between dark and bright that are at least a third of what the larger ones reach.
     alone : float
         Median contrast of the tiles: the line over what the same frequency holds in other directions.
+    second : float
+        Median over the tiles of the strongest line in another direction over the strongest line (smaller is clearer).
+    rivals : float
+        Share of the tiles, on the level where it is largest, that hold a strong line in a clearly different direction.
     harmonics : float
         Energy of the second and third harmonic over that of the fundamental.
     spacing_cv : float
-        Coefficient of variation of the spacing between alternations.
+        Robust coefficient of variation of the spacing between alternations.
     """
 
     peak: float = 0.0
@@ -45,10 +49,13 @@ class Evidence:
     share: float = 0.0
     swings: float = 0.0
     alone: float = 0.0
+    second: float = 1.0
+    rivals: float = 1.0
     harmonics: float = 0.0
     spacing_cv: float = math.inf
+    height_cv: float = math.inf
     chirp: float = 0.0
-    straightness_px: float = math.inf
+    length: float = 0.0
     area: float = 0.0
 
 
@@ -105,15 +112,16 @@ class _Candidate:
 
 @dataclass(frozen=True, kw_only=True, eq=False)
 class _Straight:
-    """A candidate straightened: intensity (depth, lateral) on its level, and the blocks of columns."""
+    """A candidate straightened along its own layers and averaged over blocks of columns; arrays are (depth, blocks)."""
 
     grid: StreamGrid
-    intensity: FloatArray
-    inside: BoolArray
-    profiles: FloatArray  # (depth, blocks), aligned, high-passed, NaN where a block does not reach
-    shifts: FloatArray  # (blocks,)
-    block: int
-    period: float
+    field_map: OrientationMap
+    flat: FloatArray  # block means, high-passed along the depth; 0 where not good
+    good: BoolArray  # the frame shows it
+    member: BoolArray  # and it lies in the candidate's tiles
+    shifts: FloatArray  # (blocks,) depth shift that aligns each block
+    block: int  # level pixels
+    period: float  # level pixels
 
 
 _CONTRAST = 6.0
@@ -161,23 +169,24 @@ def detect_layers(
     if not float(usable.max()) > float(usable.min()):
         return _nothing("constant")
     levels = build_pyramid(image, mask=mask)
-    candidates = _candidates(levels, progress)
+    tiles = _tiles_of_levels(levels, progress)
+    candidates = _candidates(levels, tiles)
     best: tuple[float, _Candidate, _Straight, Evidence] | None = None
     for candidate in candidates:
         straight = _straighten(candidate)
         if straight is None:
             continue
-        evidence = _judge(candidate, straight)
+        evidence = _judge(candidate, straight, levels, tiles)
         statistic = _statistic(evidence)
         if best is None or statistic > best[0]:
             best = (statistic, candidate, straight, evidence)
-        if statistic > 3:
+        if statistic > 1:
             break
     if progress is not None:
         progress("layers looked for", 1.0)
     if best is None:
         return _nothing("no line")
-    return _answer(best, image.shape)
+    return _answer(best, levels)
 
 
 def _nothing(reason: str) -> LayerDetection:
@@ -186,15 +195,21 @@ def _nothing(reason: str) -> LayerDetection:
     )
 
 
-def _candidates(levels: tuple[Level, ...], progress: Progress | None) -> list[_Candidate]:
+def _tiles_of_levels(levels: tuple[Level, ...], progress: Progress | None) -> tuple[Tiles, ...]:
+    out = []
+    for index, level in enumerate(levels):
+        if progress is not None:
+            progress("looking for layers", 0.5 * index / len(levels))
+        hop = 32 if level.intensity.size < 2**22 else 64
+        out.append(analyse_tiles(level, hop=hop, lowest=3.2 if index < len(levels) - 1 else 2.4))
+    return tuple(out)
+
+
+def _candidates(levels: tuple[Level, ...], all_tiles: tuple[Tiles, ...]) -> list[_Candidate]:
     from scipy.ndimage import label
 
     found: list[_Candidate] = []
-    for index, level in enumerate(levels):
-        if progress is not None:
-            progress("looking for layers", index / len(levels))
-        hop = 32 if level.intensity.size < 2**22 else 64
-        tiles = analyse_tiles(level, hop=hop)
+    for level, tiles in zip(levels, all_tiles, strict=True):
         strong = tiles.contrast > _CONTRAST
         groups, count = label(strong, structure=np.ones((3, 3)))
         for number in range(1, count + 1):
@@ -205,22 +220,19 @@ def _candidates(levels: tuple[Level, ...], progress: Progress | None) -> list[_C
             order = np.argsort(tiles.frequency[member])
             total = np.cumsum(weight[order])
             frequency = float(tiles.frequency[member][order][np.searchsorted(total, total[-1] / 2)])
-            cell = tiles.hop[0] * tiles.hop[1] * level.factor**2
-            off = abs(math.log(frequency / 0.1))
-            area = float(member.sum() * cell)
+            area = float(member.mean() * level.intensity.size * level.factor**2)
+            suits = math.exp(-0.5 * abs(math.log(frequency / 0.12)))
+            score = area * float(np.median(weight) * np.median(tiles.amplitude[member])) * suits
             found.append(
-                _Candidate(
-                    level=level, tiles=tiles, member=member, frequency=frequency, area=area,
-                    score=area * float(np.median(weight)) * math.exp(-0.5 * off),
-                )
-            )  # fmt: skip
+                _Candidate(level=level, tiles=tiles, member=member, frequency=frequency, area=area, score=score)
+            )
     found.sort(key=lambda c: -c.score)
-    return found[:3]
+    return found[:4]
 
 
 def _straighten(candidate: _Candidate) -> _Straight | None:
-    """Sample the candidate's level along its layers, cut it into blocks of columns and align those."""
-    from scipy.ndimage import map_coordinates
+    """Sample the candidate's level along its layers, average blocks of columns, and align those."""
+    from layerscan.measurement.orientation_kernels import block_means
 
     level, tiles, member = candidate.level, candidate.tiles, candidate.member
     weight = np.where(member, np.log(np.maximum(tiles.contrast, 1.0)), 0.0)
@@ -229,103 +241,123 @@ def _straighten(candidate: _Candidate) -> _Straight | None:
     middle = np.average(rows, weights=weight[member]), np.average(columns, weights=weight[member])
     nearest = int(np.argmin((rows - middle[0]) ** 2 + (columns - middle[1]) ** 2))
     seed = float(tiles.row[rows[nearest]]), float(tiles.column[columns[nearest]])
-    shape = level.intensity.shape
-    grid = trace_grid(field_map, shape, seed=seed)
-    near = _member_area(candidate, grid)
-    inside = grid.inside & near
-    if level.valid is not None:
-        r = np.clip(np.rint(grid.row).astype(int), 0, shape[0] - 1)
-        c = np.clip(np.rint(grid.column).astype(int), 0, shape[1] - 1)
-        inside = inside & (level.valid[r, c] > 0.5)
-    intensity = map_coordinates(level.intensity, [grid.row, grid.column], order=1, mode="nearest", output=np.float64)
     period = 1 / candidate.frequency
-    block = max(round(2 * period), 6)
-    return _align(grid, intensity, inside, block, period)
+    grid = trace_grid(field_map, level.intensity.shape, seed=seed)
+    stations = (grid.row.shape[1] - 1) * grid.stride
+    block = max(round(min(max(2 * period, 16), stations / 8) / grid.stride), 1) * grid.stride
+    depth, count = grid.row.shape[0], stations // block
+    if count < 3 or depth < 2.2 * period:
+        return None
+    mean, number = np.zeros((depth, count)), np.zeros((depth, count))
+    usable = level.valid if level.valid is not None else level.intensity[:1, :1]
+    block_means(
+        level.intensity, usable, level.valid is not None, grid.row, grid.column, grid.stride, block, mean, number
+    )
+    good = number >= 0.5 * block
+    at = (np.arange(count) * block + block // 2) // grid.stride  # the middle of each block
+    inside = good & _member_area(candidate, grid.row[:, at], grid.column[:, at])
+    inside &= inside.sum(axis=0) >= 2.2 * period
+    if inside.any(axis=0).sum() < 3:
+        return None
+    flat = _high_pass(mean, good, period)
+    start = min(grid.origin[1] * grid.stride // block, count - 1)
+    shifts = _track(flat, inside, period, start)
+    return _Straight(
+        grid=grid, field_map=field_map, flat=flat, good=good, member=inside, shifts=shifts, block=block, period=period
+    )
 
 
-def _member_area(candidate: _Candidate, grid: StreamGrid) -> BoolArray:
-    """Where grid points lie in a member tile (its middle half)."""
+def _member_area(candidate: _Candidate, row: FloatArray, column: FloatArray) -> BoolArray:
+    """Where places (level pixels) lie nearest to a member tile."""
     tiles = candidate.tiles
-    i = np.clip(np.rint((grid.row - tiles.row[0]) / tiles.hop[0]).astype(int), 0, len(tiles.row) - 1)
-    j = np.clip(np.rint((grid.column - tiles.column[0]) / tiles.hop[1]).astype(int), 0, len(tiles.column) - 1)
+    i = np.clip(np.rint((row - tiles.row[0]) / tiles.hop[0]).astype(int), 0, len(tiles.row) - 1)
+    j = np.clip(np.rint((column - tiles.column[0]) / tiles.hop[1]).astype(int), 0, len(tiles.column) - 1)
     area: BoolArray = candidate.member[i, j]
     return area
 
 
-def _align(grid: StreamGrid, intensity: FloatArray, inside: BoolArray, block: int, period: float) -> _Straight | None:
-    """Block means along the layers, high-passed, each shifted in depth to match those before it."""
+def _high_pass(mean: FloatArray, good: BoolArray, period: float) -> FloatArray:
+    """Take away the running mean over 1.6 periods; 0 where nothing was seen."""
     from scipy.ndimage import uniform_filter1d
 
-    count = inside.shape[1] // block
-    depth = inside.shape[0]
-    if count < 3 or depth < 2.2 * period:
-        return None
-    cut = slice(0, count * block)
-    weights = inside[:, cut].reshape(depth, count, block)
-    number = weights.sum(axis=2)
-    mean = (intensity[:, cut].reshape(depth, count, block) * weights).sum(axis=2) / np.maximum(number, 1)
-    good = number >= 0.5 * block
     width = max(round(1.6 * period), 3) | 1
-    level = uniform_filter1d(np.where(good, mean, 0), width, axis=0, mode="constant")
+    level = uniform_filter1d(np.where(good, mean, 0.0), width, axis=0, mode="constant")
     share = uniform_filter1d(good.astype(float), width, axis=0, mode="constant")
-    flat = np.where(good, mean - level / np.maximum(share, 1e-6), 0.0)
-    enough = good.sum(axis=0) >= 2.2 * period
-    if enough.sum() < 3:
-        return None
-    good = good & enough
-    flat[~good] = 0
-    shifts = _track(flat, good, period, int(np.clip(grid.origin[1] // block, 0, count - 1)))
-    profiles = np.full(flat.shape, np.nan)
-    place = np.arange(depth, dtype=float)
-    for b in np.flatnonzero(enough):
-        profiles[:, b] = np.interp(place + shifts[b], place, flat[:, b])
-        seen = np.interp(place + shifts[b], place, good[:, b].astype(float), left=0, right=0) > 0.99
-        profiles[~seen, b] = np.nan
-    return _Straight(
-        grid=grid, intensity=intensity, inside=inside, profiles=profiles, shifts=shifts, block=block, period=period
-    )
+    return np.where(good, mean - level / np.maximum(share, 1e-6), 0.0)
+
+
+def _moved(column: FloatArray, shift: float) -> FloatArray:
+    """The column read at depths larger by ``shift``; 0 outside."""
+    place = np.arange(len(column), dtype=float)
+    return np.interp(place + shift, place, column, left=0.0, right=0.0)
 
 
 def _track(flat: FloatArray, good: BoolArray, period: float, start: int) -> FloatArray:
     """Depth shift of each block against a running template, from the seed outwards both ways."""
-    depth, count = flat.shape
+    count = flat.shape[1]
+    usable = np.flatnonzero(good.any(axis=0))
+    start = int(usable[np.argmin(np.abs(usable - start))])
     shifts = np.zeros(count)
-    reach = 0.25 * period
-    trials = np.linspace(-reach, reach, 9)
-    place = np.arange(depth, dtype=float)
+    trials = np.linspace(-0.25 * period, 0.25 * period, 9)
+    seen = good.astype(float)
     for way in (1, -1):
-        template, weight = flat[:, start] * good[:, start], good[:, start].astype(float)
+        template, weight = flat[:, start] * seen[:, start], seen[:, start].copy()
         last = 0.0
-        b = start + way
-        while 0 <= b < count:
-            if good[:, b].sum() < 2.2 * period:
-                b += way
+        for b in range(start + way, count if way > 0 else -1, way):
+            if not good[:, b].any():
+                shifts[b] = last
                 continue
-            score = np.empty(len(trials))
             mean = template / np.maximum(weight, 1e-6)
-            for t, trial in enumerate(trials):
-                moved = np.interp(place + last + trial, place, flat[:, b], left=0, right=0)
-                score[t] = float(moved @ mean)
+            column = flat[:, b] * seen[:, b]
+            score = np.array([_moved(column, last + trial) @ mean for trial in trials])
             best = int(np.argmax(score))
-            offset = float(trials[best])
+            last += float(trials[best])
             if 0 < best < len(trials) - 1:
-                a, m, z = score[best - 1 : best + 2]
-                offset += 0.5 * (a - z) / min(a - 2 * m + z, -1e-30) * (trials[1] - trials[0])
-            last += offset
+                before, here, after = score[best - 1 : best + 2]
+                bend = min(before - 2 * here + after, -1e-30)
+                last += 0.5 * float((before - after) / bend) * float(trials[1] - trials[0])
             shifts[b] = last
-            moved = np.interp(place + last, place, flat[:, b], left=0, right=0)
-            seen = np.interp(place + last, place, good[:, b].astype(float), left=0, right=0)
-            template = 0.85 * template + moved * seen
-            weight = 0.85 * weight + seen
-            b += way
-    return shifts
+            template = 0.85 * template + _moved(column, last)
+            weight = 0.85 * weight + _moved(seen[:, b], last)
+    return _realign(flat * seen, seen, shifts, 0.5 * trials)
 
 
-def _judge(candidate: _Candidate, straight: _Straight) -> Evidence:
+def _realign(flat: FloatArray, seen: FloatArray, shifts: FloatArray, trials: FloatArray) -> FloatArray:
+    """Shift each block once more against the mean of all others, so that errors do not add up along the layers."""
+    used = np.flatnonzero(seen.any(axis=0))
+    moved = np.column_stack([_moved(flat[:, b], shifts[b]) for b in used])
+    weight = np.column_stack([_moved(seen[:, b], shifts[b]) for b in used])
+    total, number = moved.sum(axis=1), weight.sum(axis=1)
+    out = shifts.copy()
+    for i, b in enumerate(used):
+        mean = (total - moved[:, i]) / np.maximum(number - weight[:, i], 1.0)
+        score = np.array([_moved(flat[:, b], shifts[b] + trial) @ mean for trial in trials])
+        best = int(np.argmax(score))
+        out[b] += float(trials[best])
+        if 0 < best < len(trials) - 1:
+            before, here, after = score[best - 1 : best + 2]
+            bend = min(before - 2 * here + after, -1e-30)
+            out[b] += 0.5 * float((before - after) / bend) * float(trials[1] - trials[0])
+    return out
+
+
+def _aligned(straight: _Straight) -> tuple[FloatArray, BoolArray]:
+    """Member cells with the shifts taken out: (depth, blocks) and where they are known."""
+    filled = np.zeros_like(straight.flat)
+    seen = np.zeros(straight.flat.shape, dtype=bool)
+    for b in np.flatnonzero(straight.member.any(axis=0)):
+        known = _moved(straight.member[:, b].astype(float), straight.shifts[b]) > 0.99
+        filled[known, b] = _moved(straight.flat[:, b] * straight.member[:, b], straight.shifts[b])[known]
+        seen[:, b] = known
+    return filled, seen
+
+
+def _judge(
+    candidate: _Candidate, straight: _Straight, levels: tuple[Level, ...], all_tiles: tuple[Tiles, ...]
+) -> Evidence:
     """Measure what tells layers from other patterns on the straightened candidate."""
-    profiles, period = straight.profiles, straight.period
-    seen = np.isfinite(profiles)
-    filled = np.where(seen, profiles, 0.0)
+    period = straight.period
+    filled, seen = _aligned(straight)
     number = seen.sum(axis=1)
     rows = np.flatnonzero(number >= max(2, 0.3 * number.max()))
     if len(rows) < 2.2 * period:
@@ -333,35 +365,62 @@ def _judge(candidate: _Candidate, straight: _Straight) -> Evidence:
     span = slice(int(rows[0]), int(rows[-1]) + 1)
     filled, seen = filled[span], seen[span]
     mean = filled.sum(axis=1) / np.maximum(seen.sum(axis=1), 1)
-    near, far = _lateral_covariance(filled, seen)
+    near, far = _lateral_covariance(filled, seen, math.ceil(16 * period / straight.block))
     variance = float((filled**2).sum() / max(seen.sum(), 1))
     peak, frequency, harmonics = _profile_peak(mean, 1 / period)
-    swings, cv, chirp = _alternations(mean, frequency)
+    swings, spread, uneven, chirp = _alternations(mean, frequency)
+    tiles, member = candidate.tiles, candidate.member
     return Evidence(
         peak=peak,
         persistence=float(np.clip(far / near, 0, 1)) if near > 0 and far > 0 else 0.0,
         share=far / variance if variance > 0 else 0.0,
         swings=swings,
-        alone=float(np.median(candidate.tiles.contrast[candidate.member])),
+        alone=float(np.median(tiles.contrast[member])),
+        second=float(np.median(tiles.second[member])),
+        rivals=_rivals(candidate, straight.field_map, levels, all_tiles),
         harmonics=harmonics,
-        spacing_cv=cv,
+        spacing_cv=spread,
+        height_cv=uneven,
         chirp=chirp,
+        length=float(seen.any(axis=0).sum()) * straight.block / min(8 * period, 0.6 * min(candidate.level.intensity.shape)),
         area=candidate.area,
     )
 
 
-def _lateral_covariance(filled: FloatArray, seen: BoolArray) -> tuple[float, float]:
-    """Covariance of profiles of neighbouring blocks and of blocks at least half the extent apart."""
+def _rivals(
+    candidate: _Candidate, field_map: OrientationMap, levels: tuple[Level, ...], all_tiles: tuple[Tiles, ...]
+) -> float:
+    """Largest share, over the finer levels, of tiles with a strong line more than 25 degrees off the candidate's direction."""
+    own = candidate.tiles
+    amplitude = float(np.median(own.amplitude[candidate.member]))
+    worst = 0.0
+    for level, tiles in zip(levels, all_tiles, strict=True):
+        if level.factor > candidate.level.factor:
+            break
+        row, column = np.meshgrid(tiles.row, tiles.column, indexing="ij")
+        row = candidate.level.from_page(level.to_page(row))
+        column = candidate.level.from_page(level.to_page(column))
+        i = np.clip(np.rint((row - own.row[0]) / own.hop[0]).astype(int), 0, len(own.row) - 1)
+        j = np.clip(np.rint((column - own.column[0]) / own.hop[1]).astype(int), 0, len(own.column) - 1)
+        local = np.arctan2(field_map.sin2[i, j], field_map.cos2[i, j])
+        off = np.cos(np.radians(2 * tiles.angle_deg) - local) < math.cos(math.radians(50))
+        other = (off & (tiles.contrast > 2 * _CONTRAST)) | (tiles.second > 0.5)
+        here = candidate.member[i, j]
+        if here.any():
+            worst = max(worst, float((other & here & (tiles.amplitude > 0.5 * amplitude)).sum() / here.sum()))
+    return worst
+
+
+def _lateral_covariance(filled: FloatArray, seen: BoolArray, most: int) -> tuple[float, float]:
+    """Covariance of profiles of neighbouring blocks, and of blocks half the extent or ``most`` blocks apart."""
     blocks = np.flatnonzero(seen.any(axis=0))
-    product = filled.T @ filled
-    common = seen.T.astype(float) @ seen.astype(float)
+    if len(blocks) < 3:
+        return 0.0, 0.0
+    filled, weight = filled[:, blocks], seen[:, blocks].astype(float)
+    product, common = filled.T @ filled, weight.T @ weight
     distance = np.abs(blocks[:, None] - blocks[None, :])
-    extent = int(distance.max())
-    near = np.zeros_like(product, dtype=bool)
-    far = np.zeros_like(near)
-    ix = np.ix_(blocks, blocks)
-    near[ix] = distance == 1
-    far[ix] = distance >= max(2, round(0.5 * extent))
+    near = distance == 1
+    far = distance >= max(2, min(round(0.5 * int(distance.max())), most))
     return (
         float(product[near].sum() / max(common[near].sum(), 1)),
         float(product[far].sum() / max(common[far].sum(), 1)),
@@ -375,36 +434,33 @@ def _profile_peak(mean: FloatArray, guess: float) -> tuple[float, float, float]:
     size = 4 * n
     power = np.abs(np.fft.rfft((mean - mean.mean()) * window, size)) ** 2
     frequency = np.fft.rfftfreq(size)
-    here = (frequency > guess / 1.6) & (frequency < guess * 1.6)
-    at = int(np.flatnonzero(here)[np.argmax(power[here])])
+    here = np.flatnonzero((frequency > guess / 1.6) & (frequency < guess * 1.6))
+    at = int(here[np.argmax(power[here])])
     f = float(frequency[at])
-    low = (frequency > f / 2.83) & (frequency < f / 1.5)
-    high = (frequency > 1.5 * f) & (frequency < 2.83 * f)
-    beside = [float(np.median(power[part])) for part in (low, high) if part.any()]
-    floor = max([*beside, 1e-30])
-    width = 2.0 / n
+    width = 2.0 / n  # half the width of the window's main lobe
+    low = (frequency > f / 2.83) & (frequency < min(f / 1.5, f - width))
+    high = (frequency > max(1.5 * f, f + width)) & (frequency < 2.83 * f)
+    floor = max([*(float(np.median(power[part])) for part in (low, high) if part.any()), 1e-30])
 
     def energy(centre: float) -> float:
-        part = np.abs(frequency - centre) <= width
-        return float(power[part].sum())
+        return float(power[np.abs(frequency - centre) <= width].sum())
 
-    fundamental = energy(f)
-    return float(power[at] / floor), f, (energy(2 * f) + energy(3 * f)) / max(fundamental, 1e-30)
+    return float(power[at] / floor), f, (energy(2 * f) + energy(3 * f)) / max(energy(f), 1e-30)
 
 
-def _alternations(mean: FloatArray, frequency: float) -> tuple[float, float, float]:
-    """Number of alternations of similar height, spread of their spacing, and its trend (log ratio end to end)."""
+def _alternations(mean: FloatArray, frequency: float) -> tuple[float, float, float, float]:
+    """Number of alternations of similar height, robust spread of their spacing and height, and the spacing's trend."""
     from scipy.ndimage import gaussian_filter1d
 
     smooth = gaussian_filter1d(mean, max(0.08 / frequency, 0.5), mode="nearest")
     turn = np.flatnonzero(np.diff(np.sign(np.diff(smooth))) != 0) + 1
     if len(turn) < 3:
-        return 0.0, math.inf, 0.0
+        return 0.0, math.inf, math.inf, 0.0
     height = np.abs(np.diff(smooth[turn]))
-    floor = 0.33 * float(np.sort(height)[-min(3, len(height))])
-    # drop small wiggles pair by pair, the smallest first
+    rank = max(3, round(0.5 * frequency * len(mean)))  # a quarter of the alternations that fit
+    floor = 0.33 * float(np.sort(height)[-min(rank, len(height))])
     values, places = list(smooth[turn]), list(turn)
-    while len(values) > 2:
+    while len(values) > 2:  # small wiggles go, the smallest first
         steps = np.abs(np.diff(values))
         least = int(np.argmin(steps))
         if steps[least] >= floor:
@@ -415,56 +471,53 @@ def _alternations(mean: FloatArray, frequency: float) -> tuple[float, float, flo
         else:
             del values[least : least + 2], places[least : least + 2]
     swings = len(values) - 1
-    if swings < 3:
-        return float(swings), math.inf, 0.0
-    tops = np.array(places[0::2], dtype=float)
-    bottoms = np.array(places[1::2], dtype=float)
-    spacing = np.concatenate([np.diff(tops), np.diff(bottoms)])
-    cv = float(spacing.std() / spacing.mean()) if len(spacing) > 1 else math.inf
-    order = np.diff(np.array(places, dtype=float))
-    chirp = float(np.polyfit(np.linspace(0, 1, len(order)), np.log(order), 1)[0]) if len(order) > 3 else 0.0
-    return float(swings), cv, chirp
+    if swings < 4:
+        return float(swings), math.inf, math.inf, 0.0
+    place = np.array(places, dtype=float)
+    spacing = place[2:] - place[:-2]
+    middle = float(np.median(spacing))
+    spread = float(np.median(np.abs(spacing - middle))) * 1.4826 / middle
+    order = np.diff(place)
+    chirp = float(np.polyfit(np.linspace(0, 1, len(order)), np.log(order), 1)[0])
+    steps = np.abs(np.diff(values))
+    uneven = float(np.median(np.abs(steps - np.median(steps)))) * 1.4826 / float(np.median(steps))
+    return float(swings), spread, uneven, chirp
 
 
 def _statistic(evidence: Evidence) -> float:
     """How far the weakest of the criteria is passed: above 1 is layered."""
+    irregular = math.hypot(evidence.spacing_cv / 0.3, evidence.height_cv / 0.45, evidence.chirp)
     return min(
-        evidence.peak / 12,
-        evidence.persistence / 0.6,
+        evidence.peak / 15,
+        evidence.persistence / 0.55,
         evidence.share / 0.3,
-        evidence.swings / 5,
-        evidence.alone / _CONTRAST,
+        evidence.swings / 3.9,
+        evidence.alone / 20,
+        evidence.length,
+        0.35 / max(evidence.second, 1e-6),
+        0.3 / max(evidence.rivals, 1e-6),
+        (0.8 if evidence.swings < 8 else 1.15) / max(irregular, 1e-6),
     )
 
 
-def _answer(best: tuple[float, _Candidate, _Straight, Evidence], shape: tuple[int, int]) -> LayerDetection:
+def _answer(best: tuple[float, _Candidate, _Straight, Evidence], levels: tuple[Level, ...]) -> LayerDetection:
     statistic, candidate, straight, evidence = best
-    layered = statistic > 1
-    if not layered:
+    shape = levels[0].intensity.shape
+    if statistic <= 1:
         return LayerDetection(
             layered=False, periodic=False, statistic=statistic, p_value=None, region=None, flags=("no_layers_found",),
             evidence=evidence, reason="weak",
         )  # fmt: skip
-    level, tiles = candidate.level, candidate.tiles
-    factor = level.factor
-    weight = np.where(candidate.member, np.log(np.maximum(tiles.contrast, 1.0)), 0.0)
-    field_map = smooth_map(tiles, weight)
-    angle = np.degrees(0.5 * np.arctan2(field_map.sin2, field_map.cos2)) % 180
-    double = np.radians(2 * tiles.angle_deg[candidate.member])
-    vector = complex(np.sum(weight[candidate.member] * np.exp(1j * double)))
-    orientation = math.degrees(np.angle(vector) / 2) % 180
-    step = int(round(min(tiles.hop))) * factor
-    cells = (math.ceil(shape[0] / step), math.ceil(shape[1] / step))
-    r = level.from_page((np.arange(cells[0]) + 0.5) * step)
-    c = level.from_page((np.arange(cells[1]) + 0.5) * step)
-    i = np.clip(np.rint((r - tiles.row[0]) / tiles.hop[0]).astype(int), 0, len(tiles.row) - 1)
-    j = np.clip(np.rint((c - tiles.column[0]) / tiles.hop[1]).astype(int), 0, len(tiles.column) - 1)
-    valid = candidate.member[np.ix_(i, j)]
-    rr, cc = np.nonzero(valid)
+    level, tiles, member = candidate.level, candidate.tiles, candidate.member
+    step, valid = _valid_map(candidate, straight, shape)
+    rows, columns = np.nonzero(valid)
     region = (
-        int(rr.min() * step), int(cc.min() * step),
-        int(min((rr.max() + 1) * step, shape[0])), int(min((cc.max() + 1) * step, shape[1])),
+        int(rows.min() * step), int(columns.min() * step),
+        int(min((rows.max() + 1) * step, shape[0])), int(min((columns.max() + 1) * step, shape[1])),
     )  # fmt: skip
+    field_map = straight.field_map
+    angle = np.degrees(0.5 * np.arctan2(field_map.sin2, field_map.cos2)) % 180
+    orientation, u_orientation, varies = _global_orientation(candidate, levels, step, valid)
     seed = straight.grid.origin
     return LayerDetection(
         layered=True,
@@ -475,15 +528,87 @@ def _answer(best: tuple[float, _Candidate, _Straight, Evidence], shape: tuple[in
         valid=valid,
         valid_step_px=step,
         orientation_deg=orientation,
-        u_orientation_deg=None,
+        u_orientation_deg=u_orientation,
         orientation_map_deg=angle,
-        coherence=tiles.coherence,
+        coherence=np.where(member, tiles.coherence, 0.0),
         map_row_px=level.to_page(tiles.row),
         map_column_px=level.to_page(tiles.column),
-        period_px=factor / candidate.frequency,
+        period_px=level.factor / candidate.frequency,
         u_period_px=None,
         seed_px=(
             float(level.to_page(straight.grid.row[seed])), float(level.to_page(straight.grid.column[seed])),
         ),
+        flags=("orientation_varies",) if varies else (),
         evidence=evidence,
     )  # fmt: skip
+
+
+def _valid_map(candidate: _Candidate, straight: _Straight, shape: tuple[int, int]) -> tuple[int, BoolArray]:
+    """Where neighbouring blocks show the same alternations: cell size in page pixels and the map.
+
+    The covariance of neighbouring blocks, averaged over two periods of depth, is the layers' own variance without noise.
+    Cells where it is at least a fifth of its median over the candidate are layered; so are small gaps between them.
+    """
+    from scipy.ndimage import binary_closing, binary_opening, uniform_filter
+
+    level, grid = candidate.level, straight.grid
+    flat, good = straight.flat, straight.good.astype(float)
+    relative = np.diff(straight.shifts)
+    after = np.column_stack([_moved(flat[:, b + 1], relative[b]) for b in range(len(relative))])
+    known = np.column_stack([_moved(good[:, b + 1], relative[b]) for b in range(len(relative))]) * good[:, :-1]
+    width = max(round(1.5 * straight.period), 3)
+    number = uniform_filter(known, (width, 2), mode="constant")
+    covariance = uniform_filter(flat[:, :-1] * after * known, (width, 2), mode="constant") / np.maximum(number, 1e-3)
+    reference = float(np.median(covariance[straight.member[:, :-1] & (known > 0.5)]))
+    layered = (covariance > 0.2 * reference) & (number > 0.1)
+    step = max(round(straight.period * level.factor), 8)
+    cells = (math.ceil(shape[0] / step), math.ceil(shape[1] / step))
+    yes, all_of = np.zeros(cells), np.zeros(cells)
+    at = (np.arange(layered.shape[1]) + 1) * straight.block
+    for offset in np.arange(-straight.block // 2, straight.block // 2 + 1, grid.stride):
+        j = np.clip((at + offset) // grid.stride, 0, grid.row.shape[1] - 1)
+        i_row = np.floor(level.to_page(grid.row[:, j]) / step).astype(int)
+        i_column = np.floor(level.to_page(grid.column[:, j]) / step).astype(int)
+        ok = (i_row >= 0) & (i_row < cells[0]) & (i_column >= 0) & (i_column < cells[1])
+        np.add.at(yes, (i_row[ok], i_column[ok]), layered[ok])
+        np.add.at(all_of, (i_row[ok], i_column[ok]), 1.0)
+    valid = (yes > 0.5 * all_of) & (all_of > 0)
+    if min(cells) > 3:
+        padded = np.pad(valid, 2, mode="edge")
+        valid = binary_opening(binary_closing(padded, np.ones((3, 3))), np.ones((2, 2)))[2:-2, 2:-2]
+    from scipy.ndimage import label
+
+    groups, count = label(valid, structure=np.ones((3, 3)))
+    if count == 0:
+        return step, np.ones(cells, dtype=bool)
+    sizes = np.bincount(groups.ravel())[1:]
+    return step, np.isin(groups, 1 + np.flatnonzero(sizes >= 0.1 * sizes.max()))
+
+
+def _global_orientation(
+    candidate: _Candidate, levels: tuple[Level, ...], step: int, valid: BoolArray
+) -> tuple[float, float | None, bool]:
+    """Mean direction of the normal, its standard uncertainty, and whether the direction varies over the field."""
+    tiles, member = candidate.tiles, candidate.member
+    double = np.radians(2 * tiles.angle_deg[member])
+    weight = np.log(tiles.contrast[member])
+    vector = complex(np.sum(weight * np.exp(1j * double)) / weight.sum())
+    mean = math.degrees(np.angle(vector) / 2) % 180
+    spread = math.degrees(math.sqrt(max(-2 * math.log(max(abs(vector), 1e-12)), 0.0)) / 2)
+    independent = max(member.sum() / 4, 1.0)
+    level = next((each for each in levels if each.intensity.size <= 2**21), levels[-1])
+    places = [np.floor(level.to_page(np.arange(n, dtype=float)) / step).astype(int) for n in level.intensity.shape]
+    use = valid[np.ix_(*(np.minimum(place, n - 1) for place, n in zip(places, valid.shape, strict=True)))]
+    if level.valid is not None:
+        use = use & (level.valid > 0.5)
+    period = 1 / candidate.frequency * candidate.level.factor / level.factor
+    extent = math.sqrt(float(use.sum()))
+    if spread > 6 or extent < 2 * period:
+        return mean, spread / math.sqrt(independent), spread > 6
+    from layerscan.measurement.orientation import refine_orientation
+
+    fine = refine_orientation(level.intensity, use, angle_deg=mean)
+    offset = abs((fine.angle_deg - mean + 90) % 180 - 90)
+    if not fine.converged or offset > max(3 * spread / math.sqrt(independent), 1.0):
+        return mean, spread / math.sqrt(independent), spread > 2
+    return fine.angle_deg, fine.u_deg, spread > 2

@@ -182,7 +182,9 @@ def _measure_field(
     region = _grown_region(seen, image.shape, 1.5 * period)
     straight = straighten(image, orientation=_orientation_map(seen), period=period, region=region)
     _say(progress, "finding boundaries", 0.5)
-    followed = follow_layers(straight, period=period, layered=_layered_depths(seen, straight))
+    followed = follow_layers(
+        straight, period=period, layered=_layered_depths(seen, straight), full_scale=full_scale(micrograph, image)
+    )
     if followed is None:
         return empty_measurement(micrograph, settings, detection, flags=picture.flags)
     _say(progress, "uncertainty and statistics", 0.9)
@@ -196,6 +198,14 @@ def _measure_field(
     )
     _say(progress, "measured", 1.0)
     return result
+
+
+def full_scale(micrograph: Micrograph, image: NDArray[np.float32]) -> float | None:
+    """Largest intensity that the file can hold, where its type says so."""
+    highest = float(np.nanmax(image))
+    tops = {"uint8": 255.0, "uint16": 65535.0}
+    top = tops.get(micrograph.stored_type, 1.0)
+    return top if 0.2 * top < highest <= top else None
 
 
 def _say(progress: Progress | None, what: str, fraction: float) -> None:

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from layerscan.measurement.boundaries import SHARED, EdgeFit, fit_boundaries, model_profile
+from layerscan.measurement.boundaries import SHARED, EdgeFit, Hints, fit_boundaries, model_profile
 from layerscan.measurement.segmentation import BRIGHT, DARK, OTHER, segment_profile
 
 if TYPE_CHECKING:
@@ -57,6 +57,7 @@ def find_stack(
     layered: tuple[int, int] | None = None,
     nuisance: bool = True,
     blur: float | None = None,
+    hints: Hints | None = None,
 ) -> Stack | None:
     """Find the layers of a mean profile.
 
@@ -74,6 +75,8 @@ def find_stack(
         Try the nuisance models.
     blur : float, optional
         Edge blur to start from [samples].
+    hints : Hints, optional
+        What the noise says about gamma and about counting.
 
     Returns
     -------
@@ -92,11 +95,11 @@ def find_stack(
     value = (filled - dark) / contrast
     weight = np.where(np.isfinite(profile) & (variance > 0), contrast**2 / np.maximum(variance, 1e-30), 0.0)
     position = edges[1:-1]
-    margin = 0.6 * period
     at = np.arange(count)
-    weight[(at < position[0] - margin) | (at > position[-1] + margin)] = 0.0
     other = (bool(phase[0] == OTHER), bool(phase[-1] == OTHER))
     first_bright = bool((phase[1] == DARK) if other[0] else (phase[0] == BRIGHT))
+    margin = 0.6 * period
+    weight[(at < position[0] - margin) | (at > position[-1] + margin)] = 0.0
     start_blur = _start_blur(value, weight, position, first_bright, period) if blur is None else blur
     fit = fit_boundaries(
         value, weight=weight, position=position, bright_first=first_bright, other=other, blur=start_blur,
@@ -112,9 +115,10 @@ def find_stack(
         )  # fmt: skip
     if len(fit.position) < 2:
         return None
+    weight = _trusted(value, weight, fit, other)
     fit = fit_boundaries(
         value, weight=weight, position=fit.position, bright_first=first_bright, other=other,
-        start=fit.shared, level=fit.level, scatter=fit.scatter, nuisance=nuisance,
+        blur=float(fit.shared[0]), level=fit.level, scatter=fit.scatter, nuisance=nuisance, hints=hints,
     )  # fmt: skip
     segments = len(fit.position) + 1
     alternating = np.where(np.arange(segments) % 2 == 0, int(first_bright), int(not first_bright))
@@ -157,11 +161,27 @@ def _start_blur(value: FloatArray, weight: FloatArray, position: FloatArray, bri
     inside = (depth > position[0]) & (depth < position[-1]) & (weight > 0)
     best = (math.inf, 1.0)
     for blur in np.geomspace(0.6, max(0.2 * period, 1.0), 6):
-        shared = np.array([blur, 0.0, 0.0, 0.0, 0.0, 2.0])
+        shared = np.array([blur, 0.0, 0.0, 0.0, 0.0, 2.0, 0.0])
         off = (value - model_profile(depth, position, level, shared, active))[inside]
         cost = float(np.mean(np.minimum(off**2, 0.25))) if len(off) else 0.0
         best = min(best, (cost, float(blur)))
     return best[1]
+
+
+def _trusted(value: FloatArray, weight: FloatArray, fit: EdgeFit, other: tuple[bool, bool]) -> FloatArray:
+    """Weights with samples far off the model lowered, and another material's left out beyond the reach of its edge."""
+    at = np.arange(len(value))
+    reach = 5.0 * float(fit.shared[0]) + 2.0
+    weight = weight.copy()
+    if other[0]:
+        weight[at < fit.position[0] - reach] = 0.0
+    if other[1]:
+        weight[at > fit.position[-1] + reach] = 0.0
+    used = weight > 0
+    off = np.abs(value - model_profile(at.astype(np.float64), fit.position, fit.level, fit.shared, fit.active))
+    typical = 1.4826 * float(np.median(off[used])) if used.any() else 0.0
+    with np.errstate(divide="ignore", invalid="ignore"):
+        return np.where(used & (off > 4 * typical), weight * (4 * typical / off), weight)
 
 
 def _revise(

@@ -59,7 +59,7 @@ def match_columns(field, centre, gain, position, level, shared, decay_active, mo
     """
     count, stations = field.shape
     edges = position.size
-    s, box, gamma = shared[0], shared[1], shared[2]
+    s, box, gamma, skew = shared[0], shared[1], shared[2], shared[6]
     reach = 4.0 * s + 0.5 * box
     matrix = np.zeros((edges, 3))
     right = np.zeros(edges)
@@ -97,7 +97,7 @@ def match_columns(field, centre, gain, position, level, shared, decay_active, mo
             b = first
             while b < edges and at[b] - d <= reach:
                 step = level[b + 1] - level[b]
-                e, _, _, _ = _edge(d - at[b], s, box)
+                e, _, _, _, _ = _edge(d - at[b], s, box, skew if step > 0 else -skew)
                 total += step * e
                 if decay_active:
                     side = 1.0 if step > 0 else -1.0
@@ -110,7 +110,7 @@ def match_columns(field, centre, gain, position, level, shared, decay_active, mo
             g0 = g1 = 0.0
             for b in range(first, last + 1):
                 step = level[b + 1] - level[b]
-                _, du, _, _ = _edge(d - at[b], s, box)
+                _, du, _, _, _ = _edge(d - at[b], s, box, skew if step > 0 else -skew)
                 g = -slope * step * du
                 if decay_active:
                     side = 1.0 if step > 0 else -1.0

@@ -9,8 +9,9 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numba import njit
 
-from layerscan.measurement.boundaries import RIM_DECAY
+from layerscan.measurement.boundaries import RIM_DECAY, Hints, read_hints
 from layerscan.measurement.profile import Stack, find_stack
+from layerscan.measurement.segmentation import BRIGHT, DARK
 from layerscan.measurement.traces import (
     RoughnessModel,
     Traces,
@@ -51,8 +52,9 @@ class FollowedStack:
 
 @njit(cache=True)  # type: ignore[untyped-decorator]
 def mean_profile(field, moved, position):  # type: ignore[no-untyped-def]
-    """Mean over the stations along the traces, outliers beyond 4 sd left out: (mean, variance of one, number).
+    """Mean over the stations along the traces, outliers beyond 4 sd left out: (mean, variance of one, number, noise).
 
+    ``noise`` is the variance that neighbouring stations show against each other.
     ``moved`` (boundaries, stations) is followed at the boundaries and linear in between.
     """
     count, stations = field.shape
@@ -95,8 +97,17 @@ def mean_profile(field, moved, position):  # type: ignore[no-untyped-def]
             straight[d, j] = (1 - x) * field[low, j] + x * field[low + 1, j]
     mean = np.full(count, np.nan)
     variance = np.full(count, np.nan)
+    noise = np.full(count, np.nan)
     number = np.zeros(count)
     for d in range(count):
+        pairs, square = 0, 0.0
+        for j in range(stations - 2):
+            step = straight[d, j + 2] - straight[d, j]
+            if step == step:
+                pairs += 1
+                square += step * step
+        if pairs > 0:
+            noise[d] = 0.5 * square / pairs
         low, high = -1e30, 1e30
         for _ in range(3):
             n, s1 = 0, 0.0
@@ -119,7 +130,7 @@ def mean_profile(field, moved, position):  # type: ignore[no-untyped-def]
             if n < 12 or sd == 0:
                 break
             low, high = m - 4.0 * sd, m + 4.0 * sd
-    return mean, variance, number
+    return mean, variance, number, noise
 
 
 @njit(cache=True)  # type: ignore[untyped-decorator]
@@ -205,7 +216,8 @@ def usable_depth(field: NDArray[np.float32]) -> tuple[int, int]:
 
 
 def follow_layers(
-    straight: StraightField, *, period: float, layered: tuple[float, float] | None = None, rounds: int = 3
+    straight: StraightField, *, period: float, layered: tuple[float, float] | None = None,
+    full_scale: float | None = None, rounds: int = 3,
 ) -> FollowedStack | None:
     """Find the boundaries of a straightened field and follow each across it.
 
@@ -216,6 +228,8 @@ def follow_layers(
         Dominant spacing [px].
     layered : (float, float), optional
         Depths [samples of the field] between which layers were detected.
+    full_scale : float, optional
+        Largest intensity that the file can hold.
     rounds : int
         Rounds of matching and smoothing.
 
@@ -228,7 +242,7 @@ def follow_layers(
     field = np.ascontiguousarray(straight.intensity[low:high])
     stations = field.shape[1]
     flat = np.zeros((0, stations))
-    mean, single, number = mean_profile(field, flat, np.zeros(0))
+    mean, single, number, _ = mean_profile(field, flat, np.zeros(0))
     inside = None
     if layered is not None:
         inside = (max(int(layered[0]) - low, 0), min(int(math.ceil(layered[1])) - low, high - low))
@@ -249,10 +263,11 @@ def follow_layers(
         if turn == 1:
             break
         moved = traces.smooth
-        mean, single, number = mean_profile(field, moved, stack.position)
+        mean, single, number, noise = mean_profile(field, moved, stack.position)
         again = find_stack(
-            mean, variance=_variance(single, number), period=period, layered=inside, blur=float(stack.fit.shared[0])
-        )
+            mean, variance=_variance(single, number), period=period, layered=inside, blur=float(stack.fit.shared[0]),
+            hints=_hints(stack, noise, full_scale),
+        )  # fmt: skip
         if again is None:
             break
         if len(again.position) != len(stack.position):
@@ -262,6 +277,30 @@ def follow_layers(
         stack = again
     assert traces is not None
     return _followed(straight, stack, traces, low, mean, _variance(single, number), period)
+
+
+def _hints(stack: Stack, noise: FloatArray, full_scale: float | None) -> Hints:
+    """Compare the noise inside the layers of both phases, away from their edges."""
+    position, phase = stack.position, stack.phase
+    at = np.arange(len(noise))
+    index = np.searchsorted(position, at)
+    gap = np.minimum(
+        np.abs(at - position[np.clip(index, 0, len(position) - 1)]), np.abs(at - position[np.clip(index - 1, 0, None)])
+    )
+    inside = (index > 0) & (index < len(position)) & np.isfinite(noise)
+    medians = []
+    for name in (DARK, BRIGHT):
+        own = inside & (phase[index] == name)
+        if own.sum() < 8:
+            return Hints()
+        deep = own & (gap >= np.quantile(gap[own], 0.6))
+        medians.append(float(np.median(noise[deep])))
+    if not min(medians) > 0:
+        return Hints()
+    return read_hints(
+        math.log(medians[1] / medians[0]), dark=float(np.median(stack.dark)), bright=float(np.median(stack.bright)),
+        full_scale=full_scale,
+    )  # fmt: skip
 
 
 def _variance(single: FloatArray, number: FloatArray) -> FloatArray:
