@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Any, TypeVar
 
 from layerscan_napari.budget import DragBudget
@@ -49,7 +49,17 @@ class Result:
     following: tuple[str, ...] = ()
     notes: tuple[str, ...] = ()
     final: bool = False
-    cost_ms: dict[str, float] = field(default_factory=dict)
+
+    @property
+    def origin_nm(self) -> float:
+        """Depth, in the result without corrections, of the zero of the corrected result.
+
+        Depth 0 is the first boundary, so a correction of that one moves the zero.
+        """
+        before, after = self.unedited, self.measurement
+        if before is None or after is None or before.profile is None or after.profile is None:
+            return 0.0
+        return float(before.profile.depth_nm[0] - after.profile.depth_nm[0])
 
 
 def refresh(job: Job, budget: DragBudget) -> Result:

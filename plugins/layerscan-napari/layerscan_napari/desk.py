@@ -375,7 +375,7 @@ def load_desk(path: Path | str) -> Desk:
             notes.append(f"Image '{source}' has changed since the work was saved.")
         images.append(
             OpenImage(
-                path=None if source is None else str(source),
+                path=None if source is None else str(source.resolve()),
                 sha256=entry.sha256,
                 page=entry.page,
                 pixel_size=entry.pixel_size,
@@ -397,7 +397,7 @@ def load_desk(path: Path | str) -> Desk:
                 predict=item.predict,
                 prediction=documents.read_prediction(folder / "prediction") if item.predicted else None,
                 compare=item.compare,
-                observed=None if observed is None else str(observed),
+                observed=None if observed is None else str(observed.resolve()),
                 conclusion=item.conclusion,
             )
         )
@@ -410,7 +410,7 @@ def load_desk(path: Path | str) -> Desk:
         measure=saved.measure,
         predict=saved.predict,
         compare=saved.compare,
-        observed=None if observed is None else str(observed),
+        observed=None if observed is None else str(observed.resolve()),
         kept=tuple(kept),
         notes=tuple(notes),
     )

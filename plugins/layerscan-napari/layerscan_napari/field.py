@@ -6,7 +6,7 @@ from collections.abc import Generator
 from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
-from qtpy.QtCore import QObject
+from qtpy.QtCore import QObject, Signal
 
 from layerscan_napari import compute, edits, notes, overlays, traces
 from layerscan_napari.desk import FieldResult
@@ -19,7 +19,9 @@ if TYPE_CHECKING:
 
 
 class FieldControl(QObject):
-    """Answers the tab "Layers"."""
+    """Answers the tab "Layers". ``shown`` tells that a field was measured and is shown."""
+
+    shown = Signal(object)
 
     def __init__(self, panel: LayerPanel) -> None:
         super().__init__(panel)
@@ -36,7 +38,7 @@ class FieldControl(QObject):
         tab.restore_asked.connect(self._restore)
         tab.add_asked.connect(self._add)
         panel.plots.boundary_moved.connect(self._on_handle)
-        panel.plots.depth_picked.connect(tab.depth.setValue)
+        panel.plots.depth_picked.connect(self._on_picked)
 
     # --- measuring ----------------------------------------------------------------------------------------------------
 
@@ -96,6 +98,7 @@ class FieldControl(QObject):
             if self._image is not self.panel.image:
                 self.panel.choose_image(self._image)
             self.show(result, segments)
+            self.shown.emit(result)
 
     def _on_failure(self, error: Exception) -> None:
         if self.sender() is self.task:
@@ -205,14 +208,21 @@ class FieldControl(QObject):
     def _hold(self, index: int) -> None:
         boundaries, made = self._shown()
         if 0 <= index < len(boundaries):
-            self.panel.plots.hold_boundary(boundaries[index].depth_nm + edits.shift_of(made, index=index))
+            depth = boundaries[index].depth_nm + edits.shift_of(made, index=index)
+            self.panel.plots.hold_boundary(depth - self._origin_nm())
 
     def _on_handle(self, depth_nm: float) -> None:
         boundaries, made = self._shown()
         index = self.panel.layers.boundary.value()
         if index < len(boundaries):
-            shift = depth_nm - boundaries[index].depth_nm
+            shift = depth_nm + self._origin_nm() - boundaries[index].depth_nm
             self.panel.apply_edits(edits.move_boundary(made, index=index, shift_nm=shift))
+
+    def _origin_nm(self) -> float:
+        return 0.0 if self.panel.shown is None else self.panel.shown.origin_nm
+
+    def _on_picked(self, depth_nm: float) -> None:
+        self.panel.layers.depth.setValue(depth_nm + self._origin_nm())
 
     def _move(self, index: int, shift_nm: float) -> None:
         self.panel.apply_edits(edits.move_boundary(self._shown()[1], index=index, shift_nm=shift_nm))

@@ -94,10 +94,16 @@ def line_entries(lines: Any, width: str) -> tuple[LineEntry, ...]:
 
 
 def show_marks(layer: Any, measurement: Measurement | None) -> None:
-    """Mark the boundaries of a line in the image."""
+    """Mark the boundaries of a line in the image.
+
+    The marks lie on the line, so the extent of the scene stays as it is: napari's recalculation of it, and the
+    thumbnail, would take longer than everything else in a refresh.
+    """
     ticks = np.zeros((0, 2, 2)) if measurement is None else boundary_marks(measurement)
     if len(ticks) or len(layer.data):
-        layer.data = ticks
+        with layer.events.blocker_all():
+            layer.data = ticks
+        layer.refresh(thumbnail=False, highlight=False, extent=False)
 
 
 def show_traces(viewer: Any, image: Any, micrograph: Micrograph, segments: Segments) -> Any:

@@ -442,7 +442,8 @@ class LayerPanel(QWidget):
     def show_result(self, result: compute.Result) -> None:
         """Show a result: while dragging, what fits; on release or from the field, all of it."""
         if compute.MEASURE not in result.following:
-            self.plots.show_measurement(result.measurement, result.unedited)
+            before = () if result.unedited is None else result.unedited.boundaries
+            self.plots.show_measurement(result.measurement, [b.depth_nm - result.origin_nm for b in before])
             self._mark(result)
         if compute.PREDICT not in result.following:
             self.plots.show_prediction(result.prediction)

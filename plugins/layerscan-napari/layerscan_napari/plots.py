@@ -12,9 +12,11 @@ from typing import TYPE_CHECKING
 import numpy as np
 import pyqtgraph as pg
 from qtpy.QtCore import Qt, Signal
-from qtpy.QtWidgets import QVBoxLayout, QWidget
+from qtpy.QtWidgets import QSizePolicy, QVBoxLayout, QWidget
 
 if TYPE_CHECKING:
+    from collections.abc import Sequence
+
     from layerscan.records import FloatArray, Measurement, Prediction, Spectrum
 
     from layerscan_napari.colours import PlotColours
@@ -34,17 +36,6 @@ class LivePlots(QWidget):
         self.profile = _plot("Line profile", "Intensity of the line profile against depth", "depth / nm", "intensity")
         self.thickness = _plot("Layer thickness", "Thickness against layer number", "layer", "thickness / nm")
         self.spectrum = _plot("Spectrum", "Predicted and observed spectrum", "wavelength / nm", "reflectance")
-        for plot, units in (
-            (self.profile, ("nm", None)),
-            (self.thickness, (None, "nm")),
-            (self.spectrum, ("nm", None)),
-        ):
-            for side, unit in zip(("bottom", "left"), units, strict=True):
-                axis = plot.getAxis(side)
-                axis.setLabel(axis.labelText, units=None, unitPrefix=None)
-                axis.enableAutoSIPrefix(False)
-                if unit:
-                    axis.setLabel(f"{axis.labelText} / {unit}")
         layout = QVBoxLayout(self)
         layout.setContentsMargins(0, 0, 0, 0)
         layout.setSpacing(2)
@@ -98,22 +89,20 @@ class LivePlots(QWidget):
 
     # --- data ---------------------------------------------------------------------------------------------------------
 
-    def show_measurement(self, measurement: Measurement | None, earlier: Measurement | None = None) -> None:
-        """Profile, boundaries and thicknesses of a measurement; ``earlier`` is the same without edits, dotted."""
+    def show_measurement(self, measurement: Measurement | None, earlier_nm: Sequence[float] = ()) -> None:
+        """Profile, boundaries and thicknesses; ``earlier_nm`` are the boundaries before corrections, dotted."""
         profile = None if measurement is None else measurement.profile
         if measurement is None or profile is None:
             self._profile_curve.setData(_NOTHING, _NOTHING)
             self._boundary_marks.setData(_NOTHING, _NOTHING)
+            self._earlier_marks.setData(_NOTHING, _NOTHING)
         else:
             low, high = _limits(profile.intensity)
             self._profile_curve.setData(profile.depth_nm, profile.intensity)
             self._boundary_marks.setData(*_posts([b.depth_nm for b in measurement.boundaries], low, high))
             self._keep_range(self.profile, "x", float(profile.depth_nm[0]), float(profile.depth_nm[-1]))
             self._keep_range(self.profile, "y", low, high)
-        if earlier is None or profile is None:
-            self._earlier_marks.setData(_NOTHING, _NOTHING)
-        else:
-            self._earlier_marks.setData(*_posts([b.depth_nm for b in earlier.boundaries], low, high))
+            self._earlier_marks.setData(*_posts(earlier_nm, low, high))
         self._show_thickness(measurement)
 
     def _show_thickness(self, measurement: Measurement | None) -> None:
@@ -207,7 +196,8 @@ def _plot(name: str, description: str, bottom: str, left: str) -> pg.PlotWidget:
     plot.setAccessibleName(name)
     plot.setAccessibleDescription(description)
     plot.hideButtons()
-    plot.setMinimumHeight(96)
+    plot.setMinimumSize(240, 96)
+    plot.setSizePolicy(QSizePolicy.Policy.Ignored, QSizePolicy.Policy.Expanding)
     plot.getAxis("bottom").setLabel(bottom)
     plot.getAxis("left").setLabel(left)
     plot.getAxis("left").setWidth(54)
@@ -228,6 +218,6 @@ def _limits(values: FloatArray) -> tuple[float, float]:
     return (low, high) if high > low else (low - 0.5, high + 0.5)
 
 
-def _posts(depths: list[float], low: float, high: float) -> tuple[FloatArray, FloatArray]:
+def _posts(depths: Sequence[float], low: float, high: float) -> tuple[FloatArray, FloatArray]:
     """Vertical strokes at the depths, as the pairs of points that ``connect="pairs"`` joins."""
     return np.repeat(np.array(depths, dtype=float), 2), np.tile([low, high], len(depths))

@@ -7,7 +7,7 @@ from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from qtpy.QtCore import QObject
+from qtpy.QtCore import QObject, Signal
 from qtpy.QtWidgets import QApplication, QFileDialog
 
 from layerscan_napari import calls, desk, notes, overlays, reader
@@ -20,7 +20,9 @@ if TYPE_CHECKING:
 
 
 class WorkControl(QObject):
-    """Holds the kept results and the observed spectrum of a panel."""
+    """Holds the kept results and the observed spectrum of a panel. ``done`` tells that a piece of file work is over."""
+
+    done = Signal(bool)
 
     def __init__(self, panel: LayerPanel) -> None:
         super().__init__(panel)
@@ -62,10 +64,12 @@ class WorkControl(QObject):
         self.panel.status.setText(f"{task.property('what')}: done.")
         if task.then is not None:
             task.then(result)
+        self.done.emit(True)
 
     def _on_failure(self, error: Exception) -> None:
         self.panel.status.setText(f"{self.sender().property('what')}: failed.")
         notes.tell_error(error)
+        self.done.emit(False)
 
     def _on_finished(self) -> None:
         self._tasks = [task for task in self._tasks if task is not self.sender()]
