@@ -22,8 +22,8 @@ _TOLERANCE = 0.03  # of the grey range: how constant the background is (JPEG alt
 _FILLED = 0.97  # of the columns: what a blank row of a banner shows of its background
 _PAPER = 0.25  # of the columns: least background in a row with text
 _PICTURE = 0.5  # of the columns: most background in the row before
-_LETTERS = 8  # separate marks that make a text
-_ON_A_LINE = 4  # letters that end on the same row; half of all letters must lie on such a line
+_LETTERS = 5  # separate marks that make a text
+_ON_A_LINE = 4  # letters that end on the same row, and thrice what chance gives; half of all must lie on such lines
 _FRAME_LINES = 3
 
 
@@ -44,7 +44,7 @@ def find_banner(intensity: NDArray[np.float32]) -> Exclusion | None:
     -----
     All of these must hold, so that a horizontal layer, resin or substrate is not taken for a banner:
     the strip begins with a row of one grey value while less than half of the row before it has that value (frame
-    lines apart), every row keeps at least a quarter of its pixels at that value, and within it lie at least eight small
+    lines apart), every row keeps at least a quarter of its pixels at that value, and within it lie at least five small
     separate marks that begin and end within the strip, half of them standing on shared lines (letters).
     Cannot see: text printed into the picture itself, a banner without text, a banner beside the picture.
     """
@@ -123,4 +123,5 @@ def _holds_text(marks: BoolArray) -> bool:
     if len(baselines) < _LETTERS:
         return False
     counts = np.bincount(baselines)[baselines]
-    return bool((counts >= _ON_A_LINE).mean() >= 0.5)
+    by_chance = len(baselines) / height
+    return bool((counts >= max(_ON_A_LINE, 3 * by_chance)).mean() >= 0.5)

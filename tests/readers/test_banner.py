@@ -104,7 +104,7 @@ def test_resin_and_substrate_are_specimen(level, noise, height):
 
 
 @pytest.mark.parametrize("seed", range(8))
-@pytest.mark.parametrize("count", [12, 40, 150])
+@pytest.mark.parametrize("count", [12, 40, 150, 400])
 def test_resin_with_particles_is_specimen(seed, count):
     # bright specks in a clipped black strip with a straight edge: the hardest look-alike
     rng = np.random.default_rng(seed)
@@ -136,3 +136,12 @@ def test_arrays_keep_what_the_caller_excludes():
     page = specimen()
     page[-40:] = banner(height=40, paper=0, ink=255)
     assert from_array(page, pixel_size_nm=1.0).excluded == ()
+
+
+def test_short_text_is_enough():
+    # a banner with little more than its scale
+    picture = Image.new("L", (COLUMNS, 40), 0)
+    ImageDraw.Draw(picture).text((8, 10), "500 nm  x20k", fill=255, font=ImageFont.load_default(14))
+    page = specimen()
+    page[-40:] = np.asarray(picture)
+    assert find_banner(page.astype(np.float32)).region == (ROWS - 40, 0, ROWS, COLUMNS)

@@ -5,6 +5,7 @@ from __future__ import annotations
 import gzip
 import struct
 from collections import Counter
+from pathlib import Path
 
 import mrcfile
 import numpy as np
@@ -265,3 +266,21 @@ def test_damaged_private_tag_costs_no_picture(tmp_path):
     for code in (34118, 34682, 33560, 65009):
         tifffile.imwrite(path, PICTURE, extratags=[(code, 1, len(noise), noise, True)], metadata=None)
         assert open_image(path, pixel_size_nm=2.0).load().shape == PICTURE.shape
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("name", ["decimal_comma.dm3", "series.ser", "blank_frame.emd", "tem_tag33560.tif"])
+def test_damaged_instrument_files(tmp_path, name):
+    # files that nobody here made, damaged: each decoder works in a process of its own
+    source = Path(__file__).resolve().parents[2].parent / "shared" / "real" / "readers" / name
+    if not source.is_file():
+        pytest.skip("the folder of real files is not here")
+    pytest.importorskip("rsciio", reason="RosettaSciIO is not installed")
+    rng = np.random.default_rng(8)
+    outcomes = Counter()
+    for _ in range(15):
+        path = tmp_path / f"damaged{source.suffix}"
+        path.write_bytes(damage(source.read_bytes(), rng))
+        outcomes[try_to_open(path, 0)] += 1
+    assert outcomes["refused"] + outcomes["opened"] == 15
+    assert outcomes["refused"] >= 5
