@@ -152,7 +152,7 @@ def sum_up(
     n = np.bincount(index).astype(float)
     centre = float(y.mean())
     mean = np.bincount(index, y - centre) / n
-    squares = np.bincount(index, (y - centre - mean[index]) ** 2)
+    squares = np.bincount(index, (y - centre - mean[index]) ** 2).astype(float)
     return _Sums(n, mean + centre, squares, specimen, group, y.size), list(names)
 
 

@@ -16,6 +16,7 @@ from typing import Any, Generic, TypeVar
 from pydantic import ValidationError
 
 from layerscan.errors import InputError, LayerscanError, SettingsError
+from layerscan.records import SpectrumKind
 from layerscan.settings import CompareSettings, MeasureSettings, PredictSettings, Settings, change_settings
 from layerscan.study.tables import (
     ImageEntry,
@@ -63,7 +64,7 @@ class PlannedSpectrum:
     group: str
     specimen: str
     spot: str | None
-    quantity: str | None
+    quantity: SpectrumKind | None
     reference: str | None
     column: int | str | None
     exclude: str | None

@@ -111,7 +111,8 @@ def _connect(cluster: Any, workers: int, run: RunTable) -> Iterator[Any]:
                     n_workers=workers,
                     threads_per_worker=1,
                     processes=True,
-                    dashboard_address=None,
+                    host="127.0.0.1",
+                    dashboard_address="127.0.0.1:0",  # any free port: a fixed one may be taken
                     memory_limit=int((run.memory_mib + 1024) * 2**20),
                     silence_logs=logging.CRITICAL,
                     env={"OMP_NUM_THREADS": "1", "OPENBLAS_NUM_THREADS": "1", "NUMBA_NUM_THREADS": "1"},

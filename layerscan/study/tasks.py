@@ -15,7 +15,7 @@ from layerscan.records import Progress
 from layerscan.settings import PredictSettings, Settings
 from layerscan.study.ledger import Ledger, TaskRecord, UnitRow, dump
 from layerscan.study.plan import PlannedImage, PlannedSpectrum, StudyPlan
-from layerscan.study.work import Step, Unit
+from layerscan.study.work import Illuminant, Observer, Step, Unit
 
 MATERIALS = ("dark", "middle", "bright", "incident", "substrate")
 
@@ -293,9 +293,11 @@ def _row(planned: PlannedImage | PlannedSpectrum, names: Sequence[str]) -> dict[
     return {"path": planned.name, **values}
 
 
-def _colours_wanted(plan: StudyPlan) -> tuple[tuple[str, int], ...]:
+def _colours_wanted(plan: StudyPlan) -> tuple[tuple[Illuminant, Observer], ...]:
     """Illuminant and observer of every colour that the page or a limit needs."""
-    wanted = [(plan.predict.illuminant, plan.predict.observer)] if plan.predict else [("D65", 2)]
+    wanted: list[tuple[Illuminant, Observer]] = [("D65", 2)]
+    if plan.predict:
+        wanted = [(plan.predict.illuminant, plan.predict.observer)]
     limits = plan.tables.limits
     if limits and limits.colour_difference:
         wanted.append((limits.colour_difference.illuminant, limits.colour_difference.observer))

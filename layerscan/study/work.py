@@ -7,14 +7,17 @@ import time
 from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, Literal
 
 from layerscan._version import __version__
 from layerscan.errors import LayerscanError
 from layerscan.settings import CompareSettings, MeasureSettings, PredictSettings
 
 if TYPE_CHECKING:
-    from layerscan.records import Measurement, Micrograph, Prediction, Spectrum
+    from layerscan.records import Measurement, Micrograph, Prediction, Spectrum, SpectrumKind
+
+Illuminant = Literal["D65", "D50", "A"]
+Observer = Literal[2, 10]
 
 THUMBNAIL_PX = 300
 """Longest side of a thumbnail."""
@@ -32,9 +35,9 @@ class Step:
     settings: MeasureSettings | PredictSettings | CompareSettings | None = None
     path: str | None = None  # of the spectrum that a prediction is compared with
     input_sha256: str | None = None
-    quantity: str | None = None
+    quantity: SpectrumKind | None = None
     column: int | str | None = None
-    colours: tuple[tuple[str, int], ...] = ()  # illuminant and observer of each colour wanted
+    colours: tuple[tuple[Illuminant, Observer], ...] = ()  # illuminant and observer of each colour wanted
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -212,20 +215,21 @@ class _Chain:
         from layerscan.optics.peaks import find_peaks
 
         observed = self._open(step)
-        colours = {}
+        grid, value = observed.wavelength_nm, observed.value
+        colours: dict[str, Any] = {}
+        peaks: tuple[Any, ...] = ()
         if observed.kind != "absorbance":
+            peaks = find_peaks(grid, value if observed.kind == "reflectance" else 1 - value)
             for illuminant, observer in step.colours:
-                colour = colour_of_spectrum(
-                    observed.wavelength_nm, observed.value, illuminant=illuminant, observer_deg=observer
-                )
+                colour = colour_of_spectrum(grid, value, illuminant=illuminant, observer_deg=observer)
                 colours[f"{illuminant}/{observer}"] = asdict(colour)
         document = {
             "schema": "layerscan.observed-spectrum/1",
             "kind": observed.kind,
-            "wavelength_nm": [float(v) for v in observed.wavelength_nm],
-            "value": [float(v) for v in observed.value],
+            "wavelength_nm": [float(v) for v in grid],
+            "value": [float(v) for v in value],
             "u": None if observed.u is None else [float(v) for v in observed.u],
-            "peaks": [asdict(peak) for peak in find_peaks(observed.wavelength_nm, observed.value)],
+            "peaks": [asdict(peak) for peak in peaks],  # of a transmittance: its dips
             "colours": colours,
             "doubts": list(observed.doubts),
             "flags": list(observed.flags),
@@ -314,7 +318,7 @@ def _overlay_lines(found: Measurement, block: int) -> list[list[Any]]:
 
 
 def _overlay_areas(image: Micrograph, found: Measurement, block: int) -> list[list[Any]]:
-    areas = [["rejected", *(v / block for v in e.region), e.reason] for e in image.excluded]
+    areas = [("rejected", e.region, e.reason) for e in image.excluded]
     if found.detection.region is not None:
-        areas.append(["used", *(v / block for v in found.detection.region), "measured here"])
-    return [[kind, *(round(float(v), 1) for v in box), reason] for kind, *box, reason in areas]
+        areas.append(("used", found.detection.region, "measured here"))
+    return [[kind, *(round(v / block, 1) for v in region), reason] for kind, region, reason in areas]
