@@ -113,10 +113,8 @@ def fit_to_picture(
 
 
 def settle_pixel_size(
-    name: str,
     scales: Sequence[ScaleStatement],
     *,
-    no_scale: Sequence[str] = (),
     pixel_size_nm: float | tuple[float, float] | None = None,
     pixel_size: str | None = None,
 ) -> PixelSize | None:
@@ -124,12 +122,8 @@ def settle_pixel_size(
 
     Parameters
     ----------
-    name : str
-        The image's name, for messages.
     scales : sequence of ScaleStatement
         What the file states, the most trusted first.
-    no_scale : sequence of str
-        What looked like a pixel size in the file and is none.
     pixel_size_nm : float or (row, column), optional
         Given by the user in nm; its uncertainty is unknown.
     pixel_size : str, optional
@@ -212,7 +206,7 @@ def recalibrate(micrograph: Micrograph, *, pixel_size: str) -> Micrograph:
         if former is None
         else [ScaleStatement(row_nm=former.row_nm, column_nm=former.column_nm, source=former.source)]
     )
-    return replace(micrograph, pixel_size=settle_pixel_size("image", scales, pixel_size=pixel_size))
+    return replace(micrograph, pixel_size=settle_pixel_size(scales, pixel_size=pixel_size))
 
 
 def _user_pixel_size(*, pixel_size_nm: float | tuple[float, float] | None, pixel_size: str | None) -> PixelSize | None:

@@ -12,6 +12,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from layerscan.errors import CalibrationError, InputError
+from layerscan.readers.banner import find_banner
 from layerscan.readers.calibration import settle_pixel_size, unknown_pixel_size
 from layerscan.readers.source import ImagePlan, check_type, finish
 from layerscan.records import Exclusion, Micrograph, PixelSize
@@ -105,10 +106,11 @@ def open_image(
         The format needs an optional package that is not installed.
     """
     path = Path(path)
-    settle_pixel_size(path.name, (), pixel_size_nm=pixel_size_nm, pixel_size=pixel_size)  # complain before reading
+    settle_pixel_size((), pixel_size_nm=pixel_size_nm, pixel_size=pixel_size)  # complain before reading
     check_file(path)
-    plan = find_format(path)(path, _checked_page(page))
-    size = settle_pixel_size(path.name, plan.scales, pixel_size_nm=pixel_size_nm, pixel_size=pixel_size)
+    page = _checked_page(page)
+    plan = find_format(path)(path, page)
+    size = settle_pixel_size(plan.scales, pixel_size_nm=pixel_size_nm, pixel_size=pixel_size)
     if size is None and require_pixel_size:
         raise unknown_pixel_size(path.name, plan.no_scale)
     doubts = list(plan.doubts)
@@ -121,9 +123,12 @@ def open_image(
         return finish(path, plan.decode(), plan.shape)
 
     excluded: tuple[Exclusion, ...] = ()
+    if plan.banner is not None:
+        excluded = (Exclusion(region=plan.banner, reason="information banner (stated in the header)"),)
     if plan.shape[0] * plan.shape[1] <= BANNER_PIXELS:
-        excluded = _exclude_banner(plan, load())
-    else:
+        found = find_banner(load())  # decodes once, so that a damaged file is told here
+        excluded = excluded or ((found,) if found else ())
+    elif not excluded:
         doubts.append("The page is too large to look for an information banner; give the region to measure.")
     return Micrograph(
         load=load,
@@ -192,7 +197,7 @@ def from_array(
         pixels = array
     else:
         pixels = finish(Path(name), array, shape)
-    size = settle_pixel_size(name, (), pixel_size_nm=pixel_size_nm)
+    size = settle_pixel_size((), pixel_size_nm=pixel_size_nm)
     if u_relative is not None:
         if not (np.isfinite(u_relative) and u_relative >= 0):
             raise CalibrationError(f"u_relative of '{name}' is {u_relative}. Give a relative uncertainty such as 0.01.")
@@ -268,12 +273,3 @@ def _checked_page(page: int) -> int:
     if isinstance(page, bool) or not isinstance(page, (int, np.integer)):
         raise InputError(f"Page {page!r} is no whole number. Give a page from 0.")
     return int(page)
-
-
-def _exclude_banner(plan: ImagePlan, pixels: NDArray[np.float32]) -> tuple[Exclusion, ...]:
-    if plan.banner is not None:
-        return (Exclusion(region=plan.banner, reason="information banner (stated in the header)"),)
-    from layerscan.readers.banner import find_banner
-
-    found = find_banner(pixels)
-    return () if found is None else (found,)

@@ -29,7 +29,7 @@ def statement(row_nm, column_nm=None, source="tag"):
 
 def test_no_statement_gives_no_pixel_size():
     # ome-model#177: absent is unknown, not 1
-    assert settle_pixel_size("a.tif", ()) is None
+    assert settle_pixel_size(()) is None
 
 
 def test_error_names_file_and_remedy(tmp_path):
@@ -240,7 +240,7 @@ def test_resized_picture_with_a_stated_shape():
 
 def test_impossible_statement_is_ignored_and_told():
     # a kilometre per pixel
-    size = settle_pixel_size("a", [statement(1e12, source="tag 1"), statement(2.0, source="tag 2")])
+    size = settle_pixel_size([statement(1e12, source="tag 1"), statement(2.0, source="tag 2")])
     assert (size.row_nm, size.source) == (2.0, "tag 2")
     assert any("no electron micrograph has" in doubt for doubt in size.doubts)
 
@@ -329,6 +329,6 @@ def test_fine_resolution_tag_of_a_scanner_is_doubted(tmp_path):
 def test_stated_text_gives_the_same_pixel_size_again(row_nm, column_nm, u_relative):
     # a saved measurement is run again from the user's words
     size = from_array(np.zeros((2, 2)), pixel_size_nm=(row_nm, column_nm), u_relative=u_relative).pixel_size
-    again = settle_pixel_size("a", (), pixel_size=size.stated)
+    again = settle_pixel_size((), pixel_size=size.stated)
     assert (again.row_nm, again.column_nm) == (row_nm, column_nm)
     assert again.u_relative == (None if u_relative is None else pytest.approx(u_relative, rel=1e-12))
