@@ -69,7 +69,7 @@ def describe_comparison(comparison: Comparison) -> str:
         parts.append(f"observed peaks from {span[0]:.0f} to {span[1]:.0f} nm would have passed, drawn as a band")
     if comparison.observed_colour is not None:
         parts.append(f"observed colour {style.colour_words(comparison.observed_colour)}")
-    return ". ".join(parts) + "."
+    return style.as_sentences(parts)
 
 
 def _draw_spectra(axes: Axes, comparison: Comparison, prediction: Prediction, observed: Spectrum | None) -> None:

@@ -75,7 +75,7 @@ def describe_measurement(measurement: Measurement, *, lit_side: LitSide = "start
     if unresolved:
         parts.append(f"{unresolved} layers not resolved on their own are hatched")
     parts.append(f"the {lit_side} of the stack faces the light")
-    return ". ".join(parts) + ". Below: profile, power spectrum and the distributions of thickness."
+    return style.as_sentences([*parts, "below: profile, power spectrum and the distributions of thickness"])
 
 
 def average_text(average: Average) -> str:

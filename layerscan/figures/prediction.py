@@ -72,7 +72,7 @@ def describe_prediction(prediction: Prediction) -> str:
         parts.append(
             f"dashed: dark and bright swapped, peaks {peaks}, colour {style.colour_words(prediction.swapped.colour)}"
         )
-    return ". ".join(parts) + "."
+    return style.as_sentences(parts)
 
 
 def peak_text(peak: Peak) -> str:

@@ -152,6 +152,11 @@ def prefix_names(svg: str, prefix: str) -> str:
     return _IDENTIFIER.sub(lambda match: f"{match.group(1)}{prefix}-", svg)
 
 
+def as_sentences(parts: Sequence[str]) -> str:
+    """The parts as sentences: a capital first, a stop after each."""
+    return " ".join(f"{part[0].upper()}{part[1:]}." for part in parts if part)
+
+
 def plain_text(text: str) -> str:
     """The text without the characters that XML does not allow."""
     return _NOT_XML.sub("�", text)

@@ -171,7 +171,6 @@ def _light(name: str, prediction: Prediction, svg: str, key: str) -> dict[str, A
     return {
         "name": name,
         "peak": peak,
-        "colour": prediction.colour,
         "code": words.check_swatch(prediction.colour),
         "words": words.swatch_words(prediction.colour),
         "figure": drawing(svg, key),

@@ -35,6 +35,7 @@ def page_environment() -> Environment:
     environment.filters.update(
         number=number, stated=stated, average=average_words, colour_words=colour_words, percent=percent, flag=flag_words
     )
+    environment.globals.update(unknown=NOT_KNOWN, unstated=NOT_STATED)
     return environment
 
 
