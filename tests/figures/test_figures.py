@@ -75,7 +75,7 @@ def test_figure_is_equal_small_labelled_svg(name):
 
 
 def test_measurement_shows_what_the_issue_asks_for():
-    # what figure.svg must show: numbers of both phases, scale bar, direction, lit side, profile, spectrum, distributions
+    # what figure.svg must show: numbers of both phases, scale bar, direction, lit side, profile, distributions
     text = " ".join(words(draw_measurement(*make_measurement(), lit_side="end")))
     for part in (
         "86.10 ± 0.88 nm",
@@ -98,7 +98,7 @@ def test_lit_side_moves_the_mark():
     # the mark stands at the first layer for start, at the last for end
     start, end = (draw_measurement(*make_measurement(), lit_side=side) for side in ("start", "end"))
     assert start != end
-    assert "the end of the stack faces the light" in end
+    assert "The end of the stack faces the light" in end
 
 
 def test_figure_without_layers_says_so_and_states_no_thickness():
