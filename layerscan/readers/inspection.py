@@ -125,7 +125,7 @@ def _advise(micrograph: Micrograph, flags: tuple[str, ...], values: np.ndarray) 
         advice.append(
             f"The file has {micrograph.page_count} pages and page {micrograph.page} was read; choose with --page."
         )
-    tilt, corrected = (micrograph.metadata.get(k, "") for k in ("stage tilt", "tilt corrected by the microscope"))
+    tilt, corrected = (micrograph.metadata.get(k, "") for k in ("stage tilt", "tilt corrected"))
     if positive(tilt.removesuffix(" deg").lstrip("-")) and abs(float(tilt.removesuffix(" deg"))) >= SMALL_TILT_DEG:
         said = f" (tilt corrected by the microscope: {corrected})" if corrected else ""
         advice.append(

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import warnings
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -17,10 +17,19 @@ from layerscan.readers.source import ImagePlan, check_page, check_size, plain_er
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
-_STORED = {
-    "1": "uint1", "L": "uint8", "P": "uint8 palette", "LA": "uint8 grey + alpha", "RGB": "uint8 RGB",
-    "RGBA": "uint8 RGBA", "I;16": "uint16", "I;16B": "uint16", "I": "int32", "F": "float32",
-}  # fmt: skip
+_STORED: Mapping[str, tuple[str, int]] = {
+    "1": ("uint1", 1),
+    "L": ("uint8", 1),
+    "P": ("uint8 palette", 1),
+    "LA": ("uint8 grey + alpha", 2),
+    "RGB": ("uint8 RGB", 3),
+    "RGBA": ("uint8 RGBA", 4),
+    "I;16": ("uint16", 2),
+    "I;16B": ("uint16", 2),
+    "I": ("int32", 2),
+    "F": ("float32", 4),
+}
+"""Pillow's modes that are read: what they are called here, and bytes per stored pixel."""
 
 
 def plan_raster(path: Path, page: int) -> ImagePlan:
@@ -37,7 +46,7 @@ def plan_raster(path: Path, page: int) -> ImagePlan:
         if mode not in _STORED:
             raise InputError(f"'{path.name}' holds {mode} colours, neither grey nor RGB. Save it as grey.")
         shape = (int(image.height), int(image.width))
-        check_size(path, shape, bytes_per_pixel=4, stored_bytes=path.stat().st_size)
+        check_size(path, shape, bytes_per_pixel=_STORED[mode][1], stored_bytes=path.stat().st_size)
         scales, no_scale = _read_scale(image, kind)
         doubts = []
         if kind == "JPEG":
@@ -46,7 +55,7 @@ def plan_raster(path: Path, page: int) -> ImagePlan:
             doubts.append("The 16 bit colours of this PNG were read with 8 bits.")
         return ImagePlan(
             shape=shape,
-            stored_type=_STORED[mode],
+            stored_type=_STORED[mode][0],
             page_count=1,
             file_format=kind,
             decode=lambda: _decode(path),

@@ -27,6 +27,7 @@ from layerscan.readers.tiff_tags import read_scales
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
+_JPEG = (6, 7)
 _WHITE_IS_ZERO, _BLACK_IS_ZERO, _RGB, _PALETTE, _YCBCR = 0, 1, 2, 3, 6
 
 
@@ -91,7 +92,8 @@ def _check_layout(path: Path, page: Any, file_bytes: int) -> tuple[int, int]:
     shape = (int(page.imagelength), int(page.imagewidth))
     samples = int(page.samplesperpixel)
     colour = int(page.photometric) in (_RGB, _YCBCR)
-    if (samples > 1 and int(page.photometric) not in (_WHITE_IS_ZERO, _BLACK_IS_ZERO, _RGB, _YCBCR)) or samples > 64:
+    if (samples > 1 and int(page.photometric) not in (_JPEG = (6, 7)
+_WHITE_IS_ZERO, _BLACK_IS_ZERO, _RGB, _YCBCR)) or samples > 64:
         raise InputError(
             f"'{path.name}' has {samples} samples per pixel of a kind that is neither grey nor RGB. Save it as grey."
         )
@@ -118,7 +120,8 @@ def _page_doubts(page: Any) -> list[str]:
     tag = page.tags.get(274)
     if tag is not None and int(tag.value) != 1:
         doubts.append(f"Orientation tag {int(tag.value)} was ignored: rows and columns are as stored.")
-    if int(page.samplesperpixel) > 1 and int(page.photometric) in (_WHITE_IS_ZERO, _BLACK_IS_ZERO) and not _alpha(page):
+    if int(page.samplesperpixel) > 1 and int(page.photometric) in (_JPEG = (6, 7)
+_WHITE_IS_ZERO, _BLACK_IS_ZERO) and not _alpha(page):
         doubts.append(f"The page has {page.samplesperpixel} channels; the first was read.")
     empty = sum(c == 0 for c in page.databytecounts)
     if empty:
@@ -144,6 +147,8 @@ def _grey(page: Any, pixels: NDArray[Any]) -> NDArray[Any]:
     photometric = int(page.photometric)
     if page.axes == "SYX":
         pixels = np.moveaxis(pixels, 0, -1)
+    if photometric == _YCBCR and int(page.compression) not in _JPEG:
+        return pixels[..., 0]  # luminance as stored; only JPEG is decoded to RGB
     if photometric in (_RGB, _YCBCR):
         return to_grey(pixels if _alpha(page) else pixels[..., :3])
     if photometric == _PALETTE:

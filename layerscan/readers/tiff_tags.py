@@ -125,7 +125,7 @@ def _read_34118(found: TagFindings, page: Any, shape: tuple[int, int]) -> None:
     found.scales.append(fit_to_picture(statement, stated_shape=stated_shape, shape=shape))
     _note(found, "magnification", _entry(entries, "ap_mag", 1))
     _note(found, "stage tilt", _entry(entries, "ap_stage_at_t", 1), unit=" deg")
-    _note(found, "tilt corrected by the microscope", _entry(entries, "dp_tilt_correction", 1))
+    _note(found, "tilt corrected", _entry(entries, "dp_tilt_correction", 1))
     _note(found, "voltage", _entry(entries, "ap_actualkv", 1), unit=" kV")
 
 
@@ -174,7 +174,7 @@ def _read_34682(found: TagFindings, page: Any, shape: tuple[int, int]) -> None:
     tilt = next((stage[key] for key in ("StageT", "StageTa") if isinstance(stage.get(key), (int, float))), None)
     if tilt is not None:
         _note(found, "stage tilt", f"{math.degrees(tilt):.2f}", unit=" deg")
-    _note(found, "tilt corrected by the microscope", sections.get("EBeam", {}).get("TiltCorrectionIsOn"))
+    _note(found, "tilt corrected", sections.get("EBeam", {}).get("TiltCorrectionIsOn"))
     _note(found, "voltage", sections.get("Beam", {}).get("HV"), unit=" V")
 
 

@@ -94,6 +94,39 @@ def test_min_is_white_is_inverted(tmp_path):
     np.testing.assert_array_equal(open_plain(path).load(), 255.0 - PICTURE)
 
 
+@pytest.mark.parametrize("photometric", ["minisblack", "miniswhite"])
+def test_one_bit(tmp_path, photometric):
+    # TIFF 6.0, bilevel images
+    path = tmp_path / "a.tif"
+    tifffile.imwrite(path, PICTURE > 127, photometric=photometric)
+    expected = PICTURE > 127 if photometric == "minisblack" else PICTURE <= 127
+    np.testing.assert_array_equal(open_plain(path).load(), expected.astype(np.float32))
+
+
+@pytest.mark.parametrize("compression", [None, "jpeg"])
+def test_luminance_and_colour_differences(tmp_path, compression):
+    # TIFF 6.0, section 21: Y of a grey picture is its grey value, stored plainly or within JPEG
+    path = tmp_path / "a.tif"
+    grey = np.tile(np.linspace(20, 220, 64), (48, 1)).astype(np.uint8)
+    picture = Image.fromarray(np.repeat(grey[..., None], 3, axis=2)).convert("YCbCr")
+    if compression is None:
+        picture.save(path)
+    else:
+        tifffile.imwrite(path, np.asarray(picture.convert("RGB")), photometric="ycbcr", compression="jpeg")
+    np.testing.assert_allclose(open_plain(path).load(), grey, atol=4)
+
+
+def test_printing_colours_are_refused(tmp_path):
+    # neither grey nor RGB
+    path = tmp_path / "a.tif"
+    Image.fromarray(np.repeat(PICTURE[..., None], 3, axis=2)).convert("CMYK").save(path)
+    with pytest.raises(InputError, match="4 samples per pixel of a kind that is neither grey nor RGB"):
+        open_plain(path)
+    Image.fromarray(np.repeat(PICTURE[..., None], 3, axis=2)).convert("CMYK").save(tmp_path / "a.jpg")
+    with pytest.raises(InputError, match="CMYK colours, neither grey nor RGB"):
+        open_plain(tmp_path / "a.jpg")
+
+
 def test_palettes(tmp_path):
     # TIFF 6.0, ColorMap: a plain grey ramp leaves the numbers, another palette is looked up
     path = tmp_path / "ramp.tif"
