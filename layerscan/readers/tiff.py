@@ -92,8 +92,7 @@ def _check_layout(path: Path, page: Any, file_bytes: int) -> tuple[int, int]:
     shape = (int(page.imagelength), int(page.imagewidth))
     samples = int(page.samplesperpixel)
     colour = int(page.photometric) in (_RGB, _YCBCR)
-    if (samples > 1 and int(page.photometric) not in (_JPEG = (6, 7)
-_WHITE_IS_ZERO, _BLACK_IS_ZERO, _RGB, _YCBCR)) or samples > 64:
+    if (samples > 1 and int(page.photometric) not in (_WHITE_IS_ZERO, _BLACK_IS_ZERO, _RGB, _YCBCR)) or samples > 64:
         raise InputError(
             f"'{path.name}' has {samples} samples per pixel of a kind that is neither grey nor RGB. Save it as grey."
         )
@@ -120,8 +119,7 @@ def _page_doubts(page: Any) -> list[str]:
     tag = page.tags.get(274)
     if tag is not None and int(tag.value) != 1:
         doubts.append(f"Orientation tag {int(tag.value)} was ignored: rows and columns are as stored.")
-    if int(page.samplesperpixel) > 1 and int(page.photometric) in (_JPEG = (6, 7)
-_WHITE_IS_ZERO, _BLACK_IS_ZERO) and not _alpha(page):
+    if int(page.samplesperpixel) > 1 and int(page.photometric) in (_WHITE_IS_ZERO, _BLACK_IS_ZERO) and not _alpha(page):
         doubts.append(f"The page has {page.samplesperpixel} channels; the first was read.")
     empty = sum(c == 0 for c in page.databytecounts)
     if empty:
