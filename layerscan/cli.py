@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 import sys
 from collections.abc import Callable
 from importlib import import_module
@@ -89,6 +90,14 @@ def run(arguments: list[str] | None = None) -> int:
     except BrokenPipeError:
         sys.stderr.close()
         return 0
+    except Exception as error:
+        if os.environ.get("LAYERSCAN_TRACEBACK"):
+            raise
+        return _fail(
+            f"layerscan: unexpected {type(error).__name__}: {error}\nThis is a fault of the program, not of your input. "
+            "Set LAYERSCAN_TRACEBACK=1 to see where it happened.",
+            1,
+        )
 
 
 def _fail(text: str, code: int) -> int:
