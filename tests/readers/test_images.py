@@ -112,7 +112,7 @@ def test_luminance_and_colour_differences(tmp_path, compression):
     if compression is None:
         picture.save(path)
     else:
-        tifffile.imwrite(path, np.asarray(picture.convert("RGB")), photometric="ycbcr", compression="jpeg")
+        tifffile.imwrite(path, np.asarray(picture.convert("RGB")), photometric="rgb", compression="jpeg")
     np.testing.assert_allclose(open_plain(path).load(), grey, atol=4)
 
 
