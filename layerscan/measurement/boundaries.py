@@ -47,13 +47,15 @@ class Hints:
     """What the noise says about the recording: it grows with the slope of a gamma curve, or with counts of electrons.
 
     ``gamma`` and ``skew`` are the values that the ratio of the noise in both phases would mean, 0 where it says
-    nothing; the log odds say how much each is believed beforehand against a linear recording.
+    nothing; the log odds say how much each is believed beforehand against a linear recording. ``known`` is False where
+    the noise could not be compared.
     """
 
     gamma: float = 0.0
     skew: float = 0.0
     log_odds_gamma: float = 0.0
     log_odds_skew: float = 0.0
+    known: bool = False
 
 
 def read_hints(log_ratio: float, *, dark: float, bright: float, full_scale: float | None) -> Hints:
@@ -65,15 +67,18 @@ def read_hints(log_ratio: float, *, dark: float, bright: float, full_scale: floa
     exp(-mass-thickness), so the ratio is then also the skew of a projected edge. Noise that is even before a gamma
     curve v + g v (1 - v) is scaled by its slope, (1 + g) at dark and (1 - g) at bright.
     """
-    if not math.isfinite(log_ratio) or abs(log_ratio) < 0.04:
+    if not math.isfinite(log_ratio):
         return Hints()
+    if abs(log_ratio) < 0.04:
+        return Hints(known=True)
     gamma = -math.tanh(log_ratio / 4)
     zeros = [math.log(bright / dark)] if dark > 0 else []
     if full_scale is not None and full_scale > bright > dark:
         zeros.append(-math.log((full_scale - dark) / (full_scale - bright)))
     counts = any(abs(z) > 0.1 and 0.75 < log_ratio / z < 1.25 for z in zeros)
     return Hints(
-        gamma=gamma, skew=log_ratio, log_odds_gamma=-2.0 if counts else 4.0, log_odds_skew=6.0 if counts else -4.0
+        gamma=gamma, skew=log_ratio, log_odds_gamma=-2.0 if counts else 4.0, log_odds_skew=6.0 if counts else -4.0,
+        known=True,
     )
 
 
@@ -170,8 +175,11 @@ def model_profile(depth, position, level, shared, active):  # type: ignore[no-un
 
 
 @njit(cache=True)  # type: ignore[untyped-decorator]
-def _accumulate(depth, value, weight, position, level, shared, active, target, precision, band, border, corner, g, gs):  # type: ignore[no-untyped-def]  # noqa: E501
-    """Normal equations at the present parameters; returns the cost. Order: level 0, edge 0, level 1, edge 1, ..."""
+def _accumulate(depth, value, weight, position, level, shared, active, target, precision, belief, band, border, corner, g, gs):  # type: ignore[no-untyped-def]  # noqa: E501
+    """Normal equations at the present parameters; returns the cost. Order: level 0, edge 0, level 1, edge 1, ...
+
+    ``belief`` (2, 7) is the mean and the precision of what is known beforehand of each shared parameter.
+    """
     band[:] = 0.0
     border[:] = 0.0
     corner[:] = 0.0
@@ -251,6 +259,12 @@ def _accumulate(depth, value, weight, position, level, shared, active, target, p
                 gs[m] += w * by_shared[m] * residual
                 for k in range(SHARED):
                     corner[m, k] += w * by_shared[m] * by_shared[k]
+    for m in range(SHARED):
+        if active[m]:
+            off = belief[0, m] - shared[m]
+            corner[m, m] += belief[1, m]
+            gs[m] += belief[1, m] * off
+            cost += belief[1, m] * off * off
     for i in range(edges + 1):
         off = target[i] - level[i]
         band[2 * i, 0] += precision[i]
@@ -338,8 +352,9 @@ def _bordered(band, border, corner, active):  # type: ignore[no-untyped-def]
 
 
 @njit(cache=True)  # type: ignore[untyped-decorator]
-def fit_edges(depth, value, weight, position, level, shared, active, target, precision, rounds, tolerance, full):  # type: ignore[no-untyped-def]  # noqa: E501
-    """Levenberg-Marquardt on all parameters; returns (position, level, shared, cost, covariance of positions, ok).
+def fit_edges(depth, value, weight, position, level, shared, active, target, precision, belief, rounds, tolerance, full):  # type: ignore[no-untyped-def]  # noqa: E501
+    """Levenberg-Marquardt on all parameters; returns (position, level, shared, cost, covariance of positions, ok,
+    covariance of the shared parameters).
 
     It stops when a step gains less than ``tolerance`` of the mean cost of a sample. The covariance is worked out where
     ``full``.
@@ -353,7 +368,7 @@ def fit_edges(depth, value, weight, position, level, shared, active, target, pre
     corner = np.empty((SHARED, SHARED))
     g = np.empty(size)
     gs = np.empty(SHARED)
-    cost = _accumulate(depth, value, weight, position, level, shared, active, target, precision, band, border, corner, g, gs)  # noqa: E501
+    cost = _accumulate(depth, value, weight, position, level, shared, active, target, precision, belief, band, border, corner, g, gs)  # noqa: E501
     damping = 1e-3
     for _ in range(rounds):
         trial_band = band.copy()
@@ -405,7 +420,7 @@ def fit_edges(depth, value, weight, position, level, shared, active, target, pre
                 new_position[b] = middle + 0.15
         for i in range(edges + 1):
             new_level[i] = level[i] + step[2 * i]
-        new_cost = _accumulate(depth, value, weight, new_position, new_level, new_shared, active, target, precision, band, border, corner, g, gs)  # noqa: E501
+        new_cost = _accumulate(depth, value, weight, new_position, new_level, new_shared, active, target, precision, belief, band, border, corner, g, gs)  # noqa: E501
         if new_cost <= cost * (1 + 1e-12):
             gain = cost - new_cost
             position, level, shared, cost = new_position, new_level, new_shared, new_cost
@@ -413,18 +428,16 @@ def fit_edges(depth, value, weight, position, level, shared, active, target, pre
             if gain < tolerance * cost / depth.size:
                 break
         else:
-            _accumulate(depth, value, weight, position, level, shared, active, target, precision, band, border, corner, g, gs)  # noqa: E501
+            _accumulate(depth, value, weight, position, level, shared, active, target, precision, belief, band, border, corner, g, gs)  # noqa: E501
             damping = damping * 8 + 1e-6
             if damping > 1e6:
                 break
     covariance = np.zeros((edges, edges))
-    if not full:
-        return position, level, shared, cost, covariance, True
-    _accumulate(depth, value, weight, position, level, shared, active, target, precision, band, border, corner, g, gs)
+    _accumulate(depth, value, weight, position, level, shared, active, target, precision, belief, band, border, corner, g, gs)
     for i in range(size):
         band[i, 0] += 1e-9 * (band[i, 0] + 1e-9)
     ok, solved, inverse = _bordered(band, border, corner, active)
-    if ok:
+    if ok and full:
         column = np.empty(size)
         for b in range(edges):
             column[:] = 0.0
@@ -434,41 +447,7 @@ def fit_edges(depth, value, weight, position, level, shared, active, target, pre
                 covariance[a, b] = column[2 * a + 1]
         shared_part = np.ascontiguousarray(solved[1::2])
         covariance += shared_part @ inverse @ np.ascontiguousarray(shared_part.T)
-    return position, level, shared, cost, covariance, ok
-
-
-@njit(cache=True)  # type: ignore[untyped-decorator]
-def score_gains(depth, value, weight, position, level, shared, active, target, precision, models):  # type: ignore[no-untyped-def]
-    """What freeing further shared parameters would lower the cost by, to first order (score test), for each model.
-
-    ``models`` (n, 7) bool; parameters that have no slope at zero must have been given a start value in ``shared``
-    through their model's own row of ``shared`` (n, 7).
-    """
-    edges = position.size
-    size = 2 * edges + 1
-    out = np.zeros(models.shape[0])
-    for row in range(models.shape[0]):
-        trial = active | models[row]
-        width = min(_band_width(position, 1.5 * _reach(shared[row], trial)), size)
-        band = np.empty((size, width))
-        border = np.empty((size, SHARED))
-        corner = np.empty((SHARED, SHARED))
-        g = np.empty(size)
-        gs = np.empty(SHARED)
-        _accumulate(depth, value, weight, position, level, shared[row], trial, target, precision, band, border, corner, g, gs)  # noqa: E501
-        for i in range(size):
-            band[i, 0] += 1e-9 * (band[i, 0] + 1e-9)
-        ok, _, inverse = _bordered(band, border, corner, trial)
-        if not ok:
-            continue
-        step = g.copy()
-        _solve(band, step)
-        right = np.zeros(SHARED)
-        for m in range(SHARED):
-            if trial[m]:
-                right[m] = gs[m] - np.sum(border[:, m] * step)
-        out[row] = np.sum(g * step) + np.sum(right * (inverse @ right))
-    return out
+    return position, level, shared, cost, covariance, ok, inverse
 
 
 @njit(cache=True)  # type: ignore[untyped-decorator]
@@ -565,12 +544,15 @@ def fit_boundaries(
     active = np.zeros(SHARED, bool)
     active[BLUR] = True
     state = (position.astype(np.float64), target.copy() if level is None else level.astype(np.float64), shared)
+    if level is not None:
+        target = target + np.where(free, 0.0, _phase_shift(state[1], target, free))
     used = int((weight > 0).sum())
+    belief = np.zeros((2, SHARED))
     scatter = 0.15 if scatter is None else scatter
     fit = None
     for _ in range(2):
         precision = np.where(free, 1e-6, 1 / scatter**2)
-        fit = fit_edges(depth, profile, weight, *state, active, target, precision, 8, 0.3, False)
+        fit = fit_edges(depth, profile, weight, *state, active, target, precision, belief, 8, 0.3, False)
         state = fit[:3]
         target = target + np.where(free, 0.0, _phase_shift(state[1], target, free))
         off = (state[1] - target)[~free]
@@ -581,7 +563,7 @@ def fit_boundaries(
     if nuisance and used > 40 and segments > 4:
         averaged = _average_models(depth, profile, weight, fit, target, precision, used, hints or Hints(), full)
         return _finish(depth, profile, weight, averaged, precision, used, scatter)
-    fit = fit_edges(depth, profile, weight, *state, active, target, precision, 15, 1e-3, full)
+    fit = fit_edges(depth, profile, weight, *state, active, target, precision, belief, 15, 1e-3, full)
     return _finish(
         depth, profile, weight, (*fit[:5], active, np.zeros_like(fit[4]), fit[0]), precision, used, scatter
     )
@@ -598,74 +580,77 @@ def _phase_shift(level: FloatArray, target: FloatArray, free: BoolArray) -> Floa
 
 @dataclass(frozen=True, kw_only=True)
 class _Model:
-    """One hypothesis about the edges: start values, which shared parameters are free, their price, prior log odds."""
+    """One hypothesis about the edges: start values, which shared parameters are free, log odds beforehand."""
 
     start: dict[int, float]
-    free: tuple[int, ...]
-    price: float
+    free: tuple[int, ...] = ()
     log_odds: float = 0.0
 
 
-def _models(blur: float, used: int, hints: Hints) -> list[_Model]:
-    """Hypotheses beyond the plain edge; prices are half of what the information criterion asks, in natural units."""
-    each = 0.5 * math.log(used)
+def _models(blur: float, hints: Hints) -> list[_Model]:
+    """Hypotheses beyond the plain edge."""
     box = {BOX: 1.7 * blur, BLUR: 0.87 * blur}
-    rim = {RIM_BRIGHT: 0.05, RIM_DARK: 0.01, RIM_DECAY: 1.5 * blur}
+    rim = {RIM_BRIGHT: 0.15, RIM_DARK: 0.05, RIM_DECAY: 1.3 * blur}
     rims = (RIM_BRIGHT, RIM_DARK, RIM_DECAY)
-    models = [
-        _Model(start=box, free=(BOX,), price=2.0),
-        _Model(start={GAMMA: 0.0}, free=(GAMMA,), price=each + 2),
-        _Model(start=rim, free=rims, price=3 * each + 2),
-        _Model(start={**rim, GAMMA: hints.gamma}, free=(*rims, GAMMA), price=4 * each + 4),
-    ]
+    models = [_Model(start=box, free=(BOX,), log_odds=-1.0), _Model(start=rim, free=rims, log_odds=-2.0)]
+    if not hints.known:
+        models.append(_Model(start={GAMMA: 0.0}, free=(GAMMA,), log_odds=-2.0))
     if hints.gamma:
         odds = hints.log_odds_gamma
-        models.append(_Model(start={GAMMA: hints.gamma}, free=(), price=0.5, log_odds=odds))
-        models.append(_Model(start={**rim, GAMMA: hints.gamma}, free=rims, price=3 * each + 2, log_odds=odds))
-        models.append(
-            _Model(start={**box, SKEW: hints.skew}, free=(BOX,), price=2.0, log_odds=hints.log_odds_skew)
-        )
+        models.append(_Model(start={GAMMA: hints.gamma}, log_odds=odds))
+        models.append(_Model(start={**rim, GAMMA: hints.gamma}, free=rims, log_odds=odds - 2.0))
+        models.append(_Model(start={**box, SKEW: hints.skew}, free=(BOX,), log_odds=hints.log_odds_skew - 1.0))
     return models
 
 
-def _average_models(depth, profile, weight, fit, target, precision, used, hints, full):  # type: ignore[no-untyped-def]
-    """Fit the hypotheses that could matter and average over them by their posterior odds.
+def _beliefs(blur: float, unit: float) -> FloatArray:
+    """Mean and precision of what is known beforehand of the shared parameters, in units of the cost.
 
-    Returns (position, level, shared, cost, covariance, active); covariance without the scale of the residuals.
+    Common practice, no source: edge brightening is a fraction of the contrast and about as wide as the blur; gamma
+    stays near 1; a projection box is of the order of the blur.
+    """
+    mean = np.array([0.0, 0.0, 0.0, 0.0, 0.0, 1.3 * blur, 0.0])
+    sd = np.array([math.inf, 4.0 * blur, 0.2, 0.4, 0.25, 0.4 * blur, 0.5])
+    return np.stack([mean, unit / sd**2])
+
+
+def _average_models(depth, profile, weight, fit, target, precision, used, hints, full):  # type: ignore[no-untyped-def]
+    """Fit the hypotheses and average over them by their posterior odds (Laplace's approximation of the evidence).
+
+    Returns (position, level, shared, cost, covariance, active, covariance between models, position of the best).
     """
     plain = np.zeros(SHARED, bool)
     plain[BLUR] = True
-    models = _models(float(fit[2][BLUR]), used, hints)
+    blur = float(fit[2][BLUR])
     unit = fit[3] / used
+    belief = _beliefs(blur, unit)
+    fit = fit_edges(depth, profile, weight, *fit[:3], plain, target, precision, belief, 6, 0.02, False)
     candidates = [(0.0, fit, plain)]
-    gains = _first_gains(depth, profile, weight, fit, plain, target, precision, models)
-    for model, gain in zip(models, gains, strict=True):
-        if model.log_odds <= 0 and 0.5 * gain / unit < 0.7 * model.price - model.log_odds:
-            continue
+    for model in _models(blur, hints):
         active = plain.copy()
         active[list(model.free)] = True
-        active[RIM_DECAY] |= RIM_DECAY in model.start
         shared = fit[2].copy()
         for name, value in model.start.items():
             shared[name] = value
-        trial = fit_edges(depth, profile, weight, fit[0], fit[1], shared, active, target, precision, 15, 0.05, False)
+        trial = fit_edges(depth, profile, weight, fit[0], fit[1], shared, active, target, precision, belief, 12, 0.05, False)  # noqa: E501
         if trial[5]:
-            candidates.append((model.log_odds - model.price, trial, active))
+            candidates.append((model.log_odds, trial, active))
     least = min(trial[3] for _, trial, _ in candidates)
-    scores = np.array([odds - 0.5 * used * math.log(trial[3] / least) for odds, trial, _ in candidates])
+    scores = np.array(
+        [
+            odds - 0.5 * used * math.log(trial[3] / least) - _occam(trial[6], active, belief, least / used)
+            for odds, trial, active in candidates
+        ]
+    )
     odds = np.exp(scores - scores.max())
-    odds = np.where(odds > 0.02, odds, 0.0)
+    odds = np.where(odds > 0.03, odds, 0.0)
     odds /= odds.sum()
     best = int(np.argmax(odds))
     kept = []
     for i in np.flatnonzero(odds):
         _, trial, active = candidates[i]
-        kept.append(
-            fit_edges(
-                depth, profile, weight, trial[0], trial[1], trial[2], active, target, precision,
-                15 if i == best else 4, 1e-3 if i == best else 0.05, full,
-            )  # fmt: skip
-        )
+        rounds, tolerance = (15, 1e-3) if i == best else (3, 0.05)
+        kept.append(fit_edges(depth, profile, weight, *trial[:3], active, target, precision, belief, rounds, tolerance, full))  # noqa: E501
     share = odds[odds > 0]
     chosen = kept[int(np.argmax(share))]
     position = sum(p * trial[0] for p, trial in zip(share, kept, strict=True))
@@ -677,18 +662,14 @@ def _average_models(depth, profile, weight, fit, target, precision, used, hints,
     return position, chosen[1], chosen[2], chosen[3], covariance, candidates[best][2], between, chosen[0]
 
 
-def _first_gains(depth, profile, weight, fit, plain, target, precision, models):  # type: ignore[no-untyped-def]
-    """Score test of each model; infinite where its start value cannot be taken to zero (box)."""
-    masks = np.zeros((len(models), SHARED), bool)
-    starts = np.tile(fit[2], (len(models), 1))
-    for row, model in enumerate(models):
-        masks[row, list(model.free)] = True
-        if RIM_DECAY in model.start:
-            starts[row, RIM_DECAY] = model.start[RIM_DECAY]
-            masks[row, RIM_DECAY] = False
-        masks[row, BOX] = False
-    gains = score_gains(depth, profile, weight, fit[0], fit[1], starts, plain, target, precision, masks)
-    return [math.inf if BOX in model.free else gain for model, gain in zip(models, gains, strict=True)]
+def _occam(inverse: FloatArray, active: BoolArray, belief: FloatArray, unit: float) -> float:
+    """Half the logarithm of how much the data narrow the free nuisance parameters down."""
+    free = [m for m in np.flatnonzero(active) if m != BLUR]
+    if not free:
+        return 0.0
+    sign, log_det = np.linalg.slogdet(inverse[np.ix_(free, free)] * unit)
+    prior = float(np.sum(np.log(unit / belief[1, free])))
+    return 0.5 * max(prior - float(log_det), 0.0) if sign > 0 else 0.0
 
 
 def _finish(depth, profile, weight, fit, precision, used, scatter):  # type: ignore[no-untyped-def]

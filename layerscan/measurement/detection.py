@@ -30,6 +30,8 @@ class Evidence:
         How much of the profile is the same far away along the layers (1: all of it).
     share : float
         Part of the picture's variation at this scale that the mean profile explains.
+    near_persistence, near_share : float
+        The same three periods away, and next to each other.
     swings : float
         Number of alternations between dark and bright that are at least a third of what the larger ones reach.
     alone : float
@@ -47,6 +49,8 @@ class Evidence:
     peak: float = 0.0
     persistence: float = 0.0
     share: float = 0.0
+    near_persistence: float = 0.0
+    near_share: float = 0.0
     swings: float = 0.0
     alone: float = 0.0
     second: float = 1.0
@@ -365,7 +369,7 @@ def _judge(
     span = slice(int(rows[0]), int(rows[-1]) + 1)
     filled, seen = filled[span], seen[span]
     mean = filled.sum(axis=1) / np.maximum(seen.sum(axis=1), 1)
-    near, far = _lateral_covariance(filled, seen, math.ceil(16 * period / straight.block))
+    near, three, far = _lateral_covariance(filled, seen, period / straight.block)
     variance = float((filled**2).sum() / max(seen.sum(), 1))
     peak, frequency, harmonics = _profile_peak(mean, 1 / period)
     swings, spread, uneven, chirp = _alternations(mean, frequency)
@@ -374,6 +378,8 @@ def _judge(
         peak=peak,
         persistence=float(np.clip(far / near, 0, 1)) if near > 0 and far > 0 else 0.0,
         share=far / variance if variance > 0 else 0.0,
+        near_persistence=float(np.clip(three / near, 0, 1)) if near > 0 and three > 0 else 0.0,
+        near_share=near / variance if variance > 0 else 0.0,
         swings=swings,
         alone=float(np.median(tiles.contrast[member])),
         second=float(np.median(tiles.second[member])),
@@ -404,26 +410,33 @@ def _rivals(
         j = np.clip(np.rint((column - own.column[0]) / own.hop[1]).astype(int), 0, len(own.column) - 1)
         local = np.arctan2(field_map.sin2[i, j], field_map.cos2[i, j])
         off = np.cos(np.radians(2 * tiles.angle_deg) - local) < math.cos(math.radians(50))
-        other = (off & (tiles.contrast > 2 * _CONTRAST)) | (tiles.second > 0.5)
+        strong = (tiles.contrast > _CONTRAST) & (tiles.amplitude > 0.5 * amplitude)
         here = candidate.member[i, j]
         if here.any():
-            worst = max(worst, float((other & here & (tiles.amplitude > 0.5 * amplitude)).sum() / here.sum()))
+            worst = max(worst, float((strong & (off | (tiles.second > 0.5)) & here).sum() / here.sum()))
     return worst
 
 
-def _lateral_covariance(filled: FloatArray, seen: BoolArray, most: int) -> tuple[float, float]:
-    """Covariance of profiles of neighbouring blocks, and of blocks half the extent or ``most`` blocks apart."""
+def _lateral_covariance(filled: FloatArray, seen: BoolArray, period: float) -> tuple[float, float, float]:
+    """Covariance of profiles of neighbouring blocks, of blocks three periods apart, and of blocks far apart.
+
+    ``period`` is in blocks; far is half the extent, or 16 periods where that is less.
+    """
     blocks = np.flatnonzero(seen.any(axis=0))
     if len(blocks) < 3:
-        return 0.0, 0.0
+        return 0.0, 0.0, 0.0
     filled, weight = filled[:, blocks], seen[:, blocks].astype(float)
     product, common = filled.T @ filled, weight.T @ weight
     distance = np.abs(blocks[:, None] - blocks[None, :])
-    near = distance == 1
-    far = distance >= max(2, min(round(0.5 * int(distance.max())), most))
+    half = round(0.5 * int(distance.max()))
+
+    def mean(chosen: BoolArray) -> float:
+        return float(product[chosen].sum() / max(common[chosen].sum(), 1))
+
     return (
-        float(product[near].sum() / max(common[near].sum(), 1)),
-        float(product[far].sum() / max(common[far].sum(), 1)),
+        mean(distance == 1),
+        mean(distance == max(2, min(round(3 * period), half))),
+        mean(distance >= max(2, min(half, math.ceil(16 * period)))),
     )
 
 
@@ -497,6 +510,22 @@ def _statistic(evidence: Evidence) -> float:
         0.35 / max(evidence.second, 1e-6),
         0.3 / max(evidence.rivals, 1e-6),
         (0.8 if evidence.swings < 8 else 1.15) / max(irregular, 1e-6),
+    )
+
+
+def _irregular(evidence: Evidence) -> float:
+    """The same for lamellae that end and branch after a few periods; above 1 is layered, but irregular."""
+    uneven = math.hypot(evidence.spacing_cv / 0.3, evidence.height_cv / 0.45, evidence.chirp)
+    return min(
+        evidence.peak / 9,
+        evidence.near_persistence / 0.35,
+        evidence.near_share / 0.3,
+        evidence.swings / 9.9,
+        evidence.alone / 25,
+        evidence.length,
+        0.25 / max(evidence.second, 1e-6),
+        0.4 / max(evidence.rivals, 1e-6),
+        1.3 / max(uneven, 1e-6),
     )
 
 

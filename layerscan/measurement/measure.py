@@ -201,8 +201,12 @@ def _measure_field(
 
 
 def full_scale(micrograph: Micrograph, image: NDArray[np.float32]) -> float | None:
-    """Largest intensity that the file can hold, where its type says so."""
-    highest = float(np.nanmax(image))
+    """Largest intensity that the file can hold, where its type says so; -1 where a part of the picture is clipped."""
+    highest, lowest = float(np.nanmax(image)), float(np.nanmin(image))
+    step = max(image.size // 200_000, 1)
+    part = image.ravel()[::step]
+    if max((part == highest).mean(), (part == lowest).mean()) > 1e-3 and highest > lowest:
+        return -1.0
     tops = {"uint8": 255.0, "uint16": 65535.0}
     top = tops.get(micrograph.stored_type, 1.0)
     return top if 0.2 * top < highest <= top else None

@@ -89,7 +89,7 @@ def analyse_tiles(level: Level, *, hop: int | None = None, tile: int = TILE_PX, 
 
     Notes
     -----
-    The spectrum is weighted by k^2 before the strongest line is chosen, since the background of real pictures is red.
+    The spectrum is weighted by |k| before the strongest line is chosen, since the background of real pictures is red.
     ``contrast`` compares the 3 x 3 bins of the line with the mean of the ring of the same |k| (within a third) more than
     35 degrees away: random texture, foams and spinodal patterns fill the ring, lattices put further lines on it.
     The direction is the principal axis of the energy near the line (Bigun and Granlund 1987, restricted to a band).

@@ -27,7 +27,7 @@ def scan_lines(power: F4, near: F4, band: I8, ky: F8, kx: F8, out: F8) -> None:
     for t in range(power.shape[0]):
         at, top = 0, -1.0
         for b in range(count):
-            value = near[t, band[b]] * k2[b]
+            value = near[t, band[b]] * math.sqrt(k2[b])
             if value > top:
                 top, at = value, b
         a, q = math.atan2(ky[at], kx[at]), k2[at]

@@ -116,9 +116,14 @@ def find_stack(
     if len(fit.position) < 2:
         return None
     weight = _trusted(value, weight, fit, other)
+    low, high = _fitted_levels(fit, first_bright, other, period, count)
+    rise = high - low
+    value, weight = (value - low) / rise, weight * rise**2
+    dark, bright = dark + contrast * low, dark + contrast * high
+    centre = np.clip(np.rint(_centres(fit.position, count)).astype(int), 0, count - 1)
     fit = fit_boundaries(
         value, weight=weight, position=fit.position, bright_first=first_bright, other=other,
-        blur=float(fit.shared[0]), level=fit.level, scatter=fit.scatter, nuisance=nuisance, hints=hints,
+        blur=float(fit.shared[0]), level=(fit.level - low[centre]) / rise[centre], scatter=fit.scatter, nuisance=nuisance, hints=hints,
     )  # fmt: skip
     segments = len(fit.position) + 1
     alternating = np.where(np.arange(segments) % 2 == 0, int(first_bright), int(not first_bright))
@@ -166,6 +171,38 @@ def _start_blur(value: FloatArray, weight: FloatArray, position: FloatArray, bri
         cost = float(np.mean(np.minimum(off**2, 0.25))) if len(off) else 0.0
         best = min(best, (cost, float(blur)))
     return best[1]
+
+
+def _centres(position: FloatArray, count: int) -> FloatArray:
+    """Middle of every segment of the profile."""
+    limits = np.concatenate([[0.0], position, [count - 1.0]])
+    out: FloatArray = 0.5 * (limits[1:] + limits[:-1])
+    return out
+
+
+def _fitted_levels(
+    fit: EdgeFit, bright_first: bool, other: tuple[bool, bool], period: float, count: int
+) -> tuple[FloatArray, FloatArray]:
+    """Levels of both phases along the profile from the fitted layers: a kernel mean over three periods."""
+    segments = len(fit.position) + 1
+    nominal = np.where(np.arange(segments) % 2 == 0, bright_first, not bright_first)
+    centre = _centres(fit.position, count)
+    usable = np.ones(segments, bool)
+    usable[0], usable[-1] = not other[0], not other[1]
+    at = np.arange(0, count + period, max(period, 1.0))
+    out = []
+    for bright in (False, True):
+        own = usable & (nominal == bright)
+        if not own.any():
+            out.append(np.full(count, float(bright)))
+            continue
+        level = fit.level[own]
+        level = np.clip(level, *(np.median(level) + np.array([-0.3, 0.3])))
+        kernel = np.exp(-0.5 * ((at[:, None] - centre[own][None, :]) / (2.5 * period)) ** 2)
+        base = float(np.median(level))
+        smooth = (kernel @ level + 0.05 * base) / (kernel.sum(axis=1) + 0.05)
+        out.append(np.interp(np.arange(count), at, smooth))
+    return out[0], np.maximum(out[1], out[0] + 0.2)
 
 
 def _trusted(value: FloatArray, weight: FloatArray, fit: EdgeFit, other: tuple[bool, bool]) -> FloatArray:

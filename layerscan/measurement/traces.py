@@ -44,6 +44,7 @@ class Traces:
 
     raw: FloatArray
     smooth: FloatArray
+    apart: FloatArray  # smoothed without the station's own raw value, for averages along the traces
     u: FloatArray
     valid: BoolArray
     model: RoughnessModel
@@ -248,8 +249,13 @@ def fit_roughness(own: FloatArray, cross: FloatArray, first_lag: int = 1) -> Rou
     )
 
 
-def smooth_traces(raw: FloatArray, valid: BoolArray, model: RoughnessModel) -> tuple[FloatArray, FloatArray]:
+def smooth_traces(
+    raw: FloatArray, valid: BoolArray, model: RoughnessModel
+) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Posterior mean and standard deviation of the deviations under the roughness model, gaps filled by iteration.
+
+    The third array is the mean that each station has without its own raw value: a profile averaged along it does not
+    sharpen its own noise.
 
     The covariance is a product (along the stations times between boundaries), so the joint estimate separates into
     independent filters after turning to the eigenvectors of the coupling between boundaries.
@@ -280,7 +286,9 @@ def smooth_traces(raw: FloatArray, valid: BoolArray, model: RoughnessModel) -> t
     variance = (weights * gain * model.noise_variance).sum(axis=1) / size
     u = np.sqrt((vectors**2 @ variance))
     spread = np.where(valid, u[:, None], math.sqrt(model.variance + model.noise_variance))
-    return smooth + level[:, None], spread
+    own = (vectors**2 @ ((weights * gain).sum(axis=1) / size))[:, None]
+    apart = np.where(valid, smooth - own * (raw - level[:, None] - smooth) / np.maximum(1 - own, 0.05), smooth)
+    return smooth + level[:, None], spread, apart + level[:, None]
 
 
 def mark_outliers(misfit: FloatArray, information: FloatArray) -> NDArray[np.bool_]:

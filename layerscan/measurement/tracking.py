@@ -229,7 +229,7 @@ def follow_layers(
     layered : (float, float), optional
         Depths [samples of the field] between which layers were detected.
     full_scale : float, optional
-        Largest intensity that the file can hold.
+        Largest intensity that the file can hold; negative where the picture is clipped.
     rounds : int
         Rounds of matching and smoothing.
 
@@ -262,7 +262,7 @@ def follow_layers(
         traces = _trace(field, centre, gain, stack, moved, rounds if turn == 0 else 2, period)
         if turn == 1:
             break
-        moved = traces.smooth
+        moved = traces.apart
         mean, single, number, noise = mean_profile(field, moved, stack.position)
         again = find_stack(
             mean, variance=_variance(single, number), period=period, layered=inside, blur=float(stack.fit.shared[0]),
@@ -273,14 +273,16 @@ def follow_layers(
         if len(again.position) != len(stack.position):
             moved = np.stack([np.interp(again.position, stack.position, column) for column in moved.T], axis=1)
         else:
-            moved = moved + 0.0
+            moved = traces.smooth
         stack = again
     assert traces is not None
     return _followed(straight, stack, traces, low, mean, _variance(single, number), period)
 
 
 def _hints(stack: Stack, noise: FloatArray, full_scale: float | None) -> Hints:
-    """Compare the noise inside the layers of both phases, away from their edges."""
+    """Compare the noise inside the layers of both phases, away from their edges; a clipped phase says nothing."""
+    if full_scale is not None and full_scale < 0:
+        return Hints()
     position, phase = stack.position, stack.phase
     at = np.arange(len(noise))
     index = np.searchsorted(position, at)
@@ -340,11 +342,11 @@ def _trace(
         level = np.array([np.mean(r[v]) if v.any() else 0.0 for r, v in zip(raw, valid, strict=True)])
         own, cross = pooled_covariance(np.where(valid, centred - level[:, None], 0.0), valid, longest)
         model = fit_roughness(own, cross)
-        smooth, u = smooth_traces(raw, valid, model)
+        smooth, u, apart = smooth_traces(raw, valid, model)
         widths = 0.5 * np.diff(fit.position, prepend=fit.position[0] - period, append=fit.position[-1] + period)
         bound = np.minimum(widths[:-1], widths[1:])[:, None]
         now = np.clip(smooth, -bound, bound)
-    return Traces(raw=raw, smooth=now, u=u, valid=valid, model=model)
+    return Traces(raw=raw, smooth=now, apart=np.clip(apart, -bound, bound), u=u, valid=valid, model=model)
 
 
 def _followed(
