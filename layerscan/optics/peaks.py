@@ -17,8 +17,9 @@ if TYPE_CHECKING:
 MINIMUM_HEIGHT = 0.005  # reflectance above the base below which nothing is called a peak
 RELATIVE_HEIGHT = 0.25  # of the tallest peak, for spectra of which no structure is known
 NOISE_RATIO = 8.0  # a peak stands out by this many standard deviations of the noise that is left
-ORDER_WINDOW = 0.5  # half width of the search for an order, in orders
-ORDER_CERTAIN = 0.25  # a peak further than this from its order is uncertain
+ORDER_REACH = 0.35  # how far a band may lie from its order, in orders
+ORDER_OUTSIDE = 0.05  # how far the order's own place may lie outside the spectrum
+ORDER_WINDOW = 0.4  # within which nothing may be taller
 
 
 def find_peaks(
@@ -93,7 +94,7 @@ def find_peaks(
         chosen: list[tuple[int | None, Band]] = [(None, band) for band in bands if band[3] >= relative_height * tallest]
     else:
         numbers = np.asarray(order, dtype=float)
-        chosen = [(m, band) for m, band in _by_order(x, numbers, bands).items()]
+        chosen = [(m, band) for m, band in _by_order(x, y, numbers, bands).items()]
     found = [
         Peak(order=m, wavelength_nm=band[0], u_wavelength_nm=None, reflectance=band[2], fwhm_nm=band[1])
         for m, band in chosen
@@ -144,15 +145,24 @@ def _first_below(y: FloatArray, level: float) -> int | None:
     return int(below[0]) if below.size else None
 
 
-def _by_order(x: FloatArray, order: FloatArray, bands: list[Band]) -> dict[int, Band]:
-    """The tallest band near each whole order."""
+def _by_order(x: FloatArray, y: FloatArray, order: FloatArray, bands: list[Band]) -> dict[int, Band]:
+    """The tallest band near each whole order, if nothing near that order is taller.
+
+    Between two orders only side lobes are left, which rise towards their own order: a lobe that is taken for an order
+    has something taller beside it. An order whose own place lies outside the spectrum is not read, since only its
+    lobes may be in it.
+    """
     chosen: dict[int, Band] = {}
     for band in bands:
         number = float(np.interp(band[0], x, order))
         m = round(number)
-        if m >= 1 and abs(number - m) <= ORDER_WINDOW and (m not in chosen or band[3] > chosen[m][3]):
+        if m < 1 or abs(number - m) > ORDER_REACH or (m in chosen and band[3] <= chosen[m][3]):
+            continue
+        if not order.min() - ORDER_OUTSIDE <= m <= order.max() + ORDER_OUTSIDE:
+            continue
+        if band[2] >= y[abs(order - m) <= ORDER_WINDOW].max():
             chosen[m] = band
-    return {m: band for m, band in chosen.items() if abs(float(np.interp(band[0], x, order)) - m) <= 0.35}
+    return chosen
 
 
 def smooth_spectrum(x: FloatArray, y: FloatArray) -> tuple[FloatArray, float]:
