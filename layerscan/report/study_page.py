@@ -11,6 +11,7 @@ from urllib.parse import quote
 from markupsafe import Markup
 
 from layerscan._version import __version__
+from layerscan.figures.style import colour_words
 from layerscan.report import cards, study_figures, words
 from layerscan.report.cautions import CAUTIONS
 from layerscan.report.methods import describe_methods
@@ -146,8 +147,11 @@ def _light(pair: LightPair, key: str) -> dict[str, Any]:
     }
 
 
-def _swatch(colour: Colour | None) -> tuple[str, str] | None:
-    return None if colour is None else (words.check_swatch(colour), words.swatch_words(colour))
+def _swatch(colour: Colour | None) -> tuple[str, str, str] | None:
+    """A swatch's code, its colour in words with numbers, and in words alone."""
+    if colour is None:
+        return None
+    return words.check_swatch(colour), words.swatch_words(colour), colour_words(colour)
 
 
 def _specimen(row: Any, quantity: str) -> dict[str, Any]:
