@@ -159,7 +159,7 @@ def from_array(
     Parameters
     ----------
     intensity : (rows, columns) array
-        Grey values; NaN where nothing was recorded. A float32 array without infinities is not copied.
+        Grey values; NaN, or a mask, where nothing was recorded. A float32 array without infinities is not copied.
     pixel_size_nm : float, (row, column) or None
         Size of a pixel in nm, or None if unknown.
     u_relative : float, optional
@@ -188,7 +188,11 @@ def from_array(
     >>> from_array([[0.0, 1.0], [1.0, 0.0]], pixel_size_nm=2.5).shape
     (2, 2)
     """
-    array = np.asarray(intensity)
+    try:
+        masked = isinstance(intensity, np.ma.MaskedArray)
+        array = intensity.astype(np.float32).filled(np.nan) if masked else np.asarray(intensity)  # type: ignore[union-attr]
+    except (TypeError, ValueError) as error:
+        raise InputError(f"'{name}' is no array of numbers ({error}). Give a grey picture (rows, columns).") from None
     check_type(Path(name), array.dtype)
     if array.ndim != 2 or array.size == 0:
         raise InputError(f"'{name}' has shape {array.shape}. Give a grey picture of shape (rows, columns).")

@@ -55,6 +55,8 @@ def plan_mrc(path: Path, page: int) -> ImagePlan:
                 f"{_HEADER_BYTES + extension + sections * section_bytes} bytes, the file has {stored}. Copy it again."
             )
         scales, no_scale, more = _voxel_size(header)
+        if dtype == np.int8:
+            more.append("Mode 0 was read as signed bytes (MRC2014); files of older programs mean unsigned ones.")
         return ImagePlan(
             shape=(rows, columns),
             stored_type=str(dtype.newbyteorder("=")),

@@ -397,3 +397,12 @@ def test_from_array_does_not_copy_float32():
     values = np.ones((5, 5), np.float32)
     assert from_array(values, pixel_size_nm=1.0).load() is values
     assert from_array(values.tolist(), pixel_size_nm=None).pixel_size is None
+
+
+def test_from_array_takes_masks_and_refuses_ragged_rows():
+    # a mask says where nothing was recorded; rows of different length are no picture
+    values = np.ma.masked_greater(np.arange(12.0).reshape(3, 4), 9)
+    loaded = from_array(values, pixel_size_nm=1.0).load()
+    assert np.isnan(loaded).sum() == 2
+    with pytest.raises(InputError, match="no array of numbers"):
+        from_array([[1.0, 2.0], [3.0]], pixel_size_nm=1.0)
