@@ -249,6 +249,9 @@ class PredictionDocument(_Document):
     lower: list[float | None] | None
     upper: list[float | None] | None
     transmittance: list[float | None]
+    lateral: list[float | None] | None = Field(
+        None, description="mean reflectance over the lateral positions of the traced boundaries"
+    )
     peaks: list[PeakModel]
     colour: ColourModel
     swapped: SwappedModel | None = None

@@ -259,6 +259,7 @@ def prediction_document(prediction: records.Prediction) -> dict[str, Any]:
         "lower": p.reflectance.lower,
         "upper": p.reflectance.upper,
         "transmittance": p.transmittance.value,
+        "lateral": None if p.lateral is None else p.lateral.value,
         "peaks": [asdict(peak) for peak in p.peaks],
         "colour": asdict(p.colour),
         "swapped": p.swapped
@@ -372,6 +373,7 @@ def read_prediction(path: Path | str) -> records.Prediction:
             upper=None if d.upper is None else _array(d.upper),
         ),
         transmittance=spectrum(d.transmittance, "transmittance"),
+        lateral=None if d.lateral is None else spectrum(d.lateral, "reflectance"),
         peaks=_peaks(d.peaks),
         colour=_colour(d.colour),
         swapped=None

@@ -165,7 +165,7 @@ def with_u(value: float | None, u: float | None, unit: str = "nm", *, digits: in
 
     if value is None:
         return "none"
-    if not u:
+    if not u or u < 1e-9 * abs(value):
         return f"{value:.4g} {unit} (u not known)"
     places = max(0, digits - 1 - math.floor(math.log10(u)))
     return f"{value:.{places}f} +- {u:.{places}f} {unit}"
