@@ -276,7 +276,7 @@ def contradictions(pairs, seed):
 
     rng = np.random.default_rng(seed)
     measured = make_table(layers=12, u_scale=0.02)
-    prediction = predict_light(measured, make_settings(dark="n=1.56", draws=400))
+    prediction = predict_light(measured, make_settings(dark="n=1.56", draws=4000))  # u itself to 1 %
     count = 0
     for _ in range(pairs):
         factor = 1 + 0.02 * rng.standard_normal()
