@@ -14,6 +14,7 @@ if TYPE_CHECKING:
 
 LEAST = 0.05  # of the mean: a drawn layer is never thinner
 LOGNORMAL_FROM = 0.25  # relative spread from which on thickness is drawn lognormal, so that it stays positive
+DRIFT_STANDS_OUT = 3.0  # standard uncertainties from which on a drift is carried on
 DRIFT_LIMITS = (0.5, 2.0)  # to which an extrapolated drift is held
 
 
@@ -35,7 +36,9 @@ class ThicknessModel:
     last_residual: float
 
 
-def describe_thickness(thickness_nm: FloatArray, kind: IntArray, u_nm: FloatArray) -> ThicknessModel:
+def describe_thickness(
+    thickness_nm: FloatArray, kind: IntArray, u_nm: FloatArray, *, from_boundaries: bool = False
+) -> ThicknessModel:
     """Distribution, neighbour correlation and drift of a sequence of layers.
 
     Parameters
@@ -44,6 +47,8 @@ def describe_thickness(thickness_nm: FloatArray, kind: IntArray, u_nm: FloatArra
         Thickness and its standard uncertainty without the part common to all layers.
     kind : (layers,) int array
         Kind of each layer, 0, 1, ...
+    from_boundaries : bool
+        The layers lie between traced boundaries, whose errors pass from one layer to the next.
 
     Returns
     -------
@@ -51,8 +56,11 @@ def describe_thickness(thickness_nm: FloatArray, kind: IntArray, u_nm: FloatArra
 
     Notes
     -----
-    The residuals are relative to the mean of their own kind and to the drift. The correlation is the lag-one product
-    moment of the residuals divided by their spread; with fewer than six layers it is taken as zero.
+    The residuals are relative to the mean of their own kind and to the drift, which counts from three standard
+    uncertainties on, correlation between neighbours allowed for. The correlation is the lag-one product
+    moment of the residuals over their mean square, both without what measurement noise adds to them (to the product
+    minus half of its variance where neighbours share a boundary); with fewer than six layers, or where noise is nearly
+    all there is, it is taken as zero.
     """
     kinds = int(kind.max()) + 1
     mean = np.array([thickness_nm[kind == k].mean() if (kind == k).any() else 0.0 for k in range(kinds)])
@@ -63,8 +71,9 @@ def describe_thickness(thickness_nm: FloatArray, kind: IntArray, u_nm: FloatArra
         power = float(number @ number)
         slope = float(number @ relative) / power
         rest = relative - slope * number
-        u_slope = float(np.sqrt((rest @ rest) / (thickness_nm.size - 2) / power))
-        drift = slope if abs(slope) > 2 * u_slope else 0.0
+        neighbours = float(np.clip((rest[1:] @ rest[:-1]) / (rest @ rest), 0.0, 0.9)) if rest.any() else 0.0
+        u_slope = float(np.sqrt((rest @ rest) / (thickness_nm.size - 2) / power * (1 + neighbours) / (1 - neighbours)))
+        drift = slope if abs(slope) > DRIFT_STANDS_OUT * u_slope else 0.0
     residual = relative - drift * number
     sd = np.zeros(kinds)
     for k in range(kinds):
@@ -74,9 +83,10 @@ def describe_thickness(thickness_nm: FloatArray, kind: IntArray, u_nm: FloatArra
     spread = sd[kind] / mean[kind]
     standard = np.divide(residual, spread, out=np.zeros_like(residual), where=spread > 0)
     correlation = 0.0
-    if thickness_nm.size >= 6 and (spread > 0).all():
-        a = residual - residual.mean()
-        correlation = float(np.clip((a[1:] @ a[:-1]) / (a @ a), -0.95, 0.95))
+    square, noise = float(np.mean(residual**2)), float(np.mean((u_nm / mean[kind]) ** 2))
+    if thickness_nm.size >= 6 and square - noise > 0.1 * square:
+        product = float(np.mean(residual[1:] * residual[:-1])) + (noise / 2 if from_boundaries else 0.0)
+        correlation = float(np.clip(product / (square - noise), -0.95, 0.95))
     return ThicknessModel(
         kind=kind,
         pattern=repeat_of(kind),

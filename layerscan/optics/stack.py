@@ -91,7 +91,9 @@ def build_stack(table: LayerTable, settings: PredictSettings) -> Stack:
         keep = settings.layers
         thickness, u, numbers, columns = thickness[:keep], u[:keep], numbers[:keep], columns[:keep]
     elif settings.layers is not None and settings.layers > seen:
-        model = ensemble.describe_thickness(thickness, np.array(numbers), u)
+        model = ensemble.describe_thickness(
+            thickness, np.array(numbers), u, from_boundaries=table.station_thickness_nm is not None
+        )
         flags.append("layers_extended")
     near_cut, far_cut = _cut_ends(table, settings)
     stations = table.station_thickness_nm
@@ -227,7 +229,9 @@ def draw_further(
 ) -> tuple[IntArray, FloatArray]:
     """Kinds and thicknesses of further layers, in the order away from the measured ones."""
     if stack.extension_first:
-        turned = ensemble.describe_thickness(stack.thickness_nm[::-1], model.kind[::-1], stack.u_nm[::-1])
+        turned = ensemble.describe_thickness(
+            stack.thickness_nm[::-1], model.kind[::-1], stack.u_nm[::-1], from_boundaries=stack.stations_nm is not None
+        )
         return ensemble.draw_layers(
             turned, layers=layers, draws=draws, rng=rng, first=model.kind.size, conditional=True
         )
