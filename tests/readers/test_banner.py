@@ -145,3 +145,17 @@ def test_short_text_is_enough():
     page = specimen()
     page[-40:] = np.asarray(picture)
     assert find_banner(page.astype(np.float32)).region == (ROWS - 40, 0, ROWS, COLUMNS)
+
+
+@pytest.mark.parametrize("seed", range(8))
+def test_generated_sections(seed):
+    # sections of the sample generator, whose banner rows are known; without their banner and turned they have none
+    sections = pytest.importorskip("sections", reason="the sample generator is not on the path")
+    shape = (384, 512)
+    rows = sections.draw_recipe("sem", seed, shape).banner_rows
+    page = np.asarray(sections.make_section("sem", seed, shape)[0], dtype=np.float32)
+    if rows:
+        assert find_banner(page).region == (shape[0] - rows, 0, *shape)
+    specimen_only = page[: shape[0] - rows]
+    assert find_banner(specimen_only) is None
+    assert find_banner(np.ascontiguousarray(specimen_only.T)) is None
