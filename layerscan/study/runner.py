@@ -293,12 +293,9 @@ class _Engine:
             future.release()
         if records:
             self.ledger.record(records)
-        if futures:
-            self._report(start)
-        elif self.client.status not in ("running", "connecting"):
+        if not futures and self.client.status not in ("running", "connecting"):
             raise LayerscanError("The cluster was lost. What was recorded is safe: run the same command again.")
-        elif self.progress:
-            self.progress("working", self.done / self.total)
+        self._report(start)
 
     def _take(self, future: Any, attempt: _Attempt) -> list[TaskRecord]:
         """Records of an ended attempt; none where the unit goes back to be tried again."""
