@@ -32,6 +32,9 @@ FREE_BYTES = 1 << 28
 MAX_EXPANSION = 1100
 """Largest ratio of decoded to stored bytes: just above what the deflate method reaches (1032 to 1, RFC 1951)."""
 
+SPARSE_EXPANSION = 16
+"""The same without compression: a mosaic may leave out tiles (common practice, no source)."""
+
 
 @dataclass(frozen=True, kw_only=True)
 class ImagePlan:
@@ -81,8 +84,10 @@ def check_page(path: Path, page: int, page_count: int) -> None:
         raise InputError(f"Page {page} of '{path.name}' does not exist: it has {have}. Give one of these.")
 
 
-def check_size(path: Path, shape: tuple[int, int], *, bytes_per_pixel: int, stored_bytes: int) -> None:
-    """Raise ``InputError`` where a header asks for pixels that the file cannot hold."""
+def check_size(
+    path: Path, shape: tuple[int, int], *, bytes_per_pixel: int, stored_bytes: int, expansion: int = MAX_EXPANSION
+) -> None:
+    """Raise ``InputError`` where a header asks for more pixels than ``expansion`` times the stored bytes can give."""
     rows, columns = shape
     if rows < 1 or columns < 1:
         raise InputError(f"'{path.name}' has no pixels: its header says {rows} x {columns}. Export it again.")
@@ -92,7 +97,7 @@ def check_size(path: Path, shape: tuple[int, int], *, bytes_per_pixel: int, stor
             f"'{path.name}' has {pixels:.3g} pixels; at most {MAX_PIXELS:.3g} are read. Cut the region of interest out."
         )
     needed = pixels * bytes_per_pixel
-    if needed > max(FREE_BYTES, MAX_EXPANSION * stored_bytes):
+    if needed > max(FREE_BYTES, expansion * stored_bytes):
         raise InputError(
             f"'{path.name}' claims {rows} x {columns} pixels ({needed:.3g} bytes), but only {stored_bytes} bytes are "
             "stored for them: its header is wrong or it is damaged. Export it again from the instrument."

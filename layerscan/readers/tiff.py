@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import logging
+import math
 from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
@@ -15,6 +16,7 @@ from layerscan.readers.source import (
     FREE_BYTES,
     MAX_EXPANSION,
     MAX_PAGES,
+    SPARSE_EXPANSION,
     ImagePlan,
     check_page,
     check_size,
@@ -27,7 +29,7 @@ from layerscan.readers.tiff_tags import read_scales
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
-_JPEG = (6, 7)
+_UNCOMPRESSED, _JPEG = 1, (6, 7)
 _WHITE_IS_ZERO, _BLACK_IS_ZERO, _RGB, _PALETTE, _YCBCR = 0, 1, 2, 3, 6
 
 
@@ -98,12 +100,13 @@ def _check_layout(path: Path, page: Any, file_bytes: int) -> tuple[int, int]:
         )
     if colour and samples not in (3, 4):
         raise InputError(f"'{path.name}' claims colour with {samples} samples per pixel. Save it as grey.")
-    per_pixel = samples * np.dtype(page.dtype).itemsize
-    counts = [int(c) for c in page.databytecounts]
-    offsets = [int(o) for o in page.dataoffsets]
-    check_size(path, shape, bytes_per_pixel=per_pixel, stored_bytes=sum(counts))
-    piece = int(np.prod([float(n) for n in page.chunks])) * np.dtype(page.dtype).itemsize
-    if piece > max(FREE_BYTES, MAX_EXPANSION * sum(counts)):
+    itemsize = np.dtype(page.dtype).itemsize
+    counts, offsets = [int(c) for c in page.databytecounts], [int(o) for o in page.dataoffsets]
+    stored = min(sum(counts), file_bytes)  # strips may share bytes, so their sum says little
+    expansion = SPARSE_EXPANSION if int(page.compression) == _UNCOMPRESSED else MAX_EXPANSION
+    check_size(path, shape, bytes_per_pixel=samples * itemsize, stored_bytes=stored, expansion=expansion)
+    piece = math.prod(int(n) for n in page.chunks) * itemsize
+    if piece > max(FREE_BYTES, expansion * stored):
         raise InputError(f"'{path.name}' has tiles of {piece:.3g} bytes, more than it can hold: its header is wrong.")
     beyond = sum(o + c > file_bytes for o, c in zip(offsets, counts, strict=False))
     if beyond:

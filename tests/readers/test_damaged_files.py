@@ -147,6 +147,19 @@ def test_sparse_tiles_that_ask_for_gigabytes(tmp_path):
         open_image(path, require_pixel_size=False)
 
 
+def test_strips_that_share_their_bytes(tmp_path):
+    # a thousand strips, all at the same place of a small file, ask for 1.6 GB
+    side, strips, size = 40_000, 1000, 1_600_000
+    head = 8 + len(directory([(0, 3, 1, 0)] * 9))
+    entries = [(256, 4, 1, side), (257, 4, 1, side), (258, 3, 1, 8), (259, 3, 1, 1), (262, 3, 1, 1)]
+    entries += [(273, 4, strips, head), (277, 3, 1, 1), (278, 4, 1, 40), (279, 4, strips, head + 4 * strips)]
+    path = tmp_path / "shared.tif"
+    places = struct.pack("<I", head + 8 * strips) * strips + struct.pack("<I", size) * strips
+    path.write_bytes(b"II*\0" + struct.pack("<I", 8) + directory(entries) + places + bytes(size))
+    with pytest.raises(InputError, match=r"claims 40000 x 40000 pixels .* stored for them"):
+        open_image(path, require_pixel_size=False)
+
+
 def test_tiles_without_data_are_holes(tmp_path):
     # a tile with offset and length 0 holds no data
     path = tmp_path / "a.tif"
