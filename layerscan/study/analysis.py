@@ -320,14 +320,10 @@ def layer_values(layers: Sequence[LayerValue], quantity: str) -> list[float]:
     values: list[float] = []
     current: list[LayerValue] = []
     for layer in layers:
-        if not layer.complete:
+        if len(current) > 1 and layer.phase == current[0].phase:  # the boundary before a cut layer is whole
+            values.append(math.fsum(part.thickness_nm for part in current))
             current = []
-            continue
-        if current and layer.phase == current[0].phase:
-            if len(current) > 1:
-                values.append(math.fsum(part.thickness_nm for part in current))
-            current = []
-        current.append(layer)
+        current = [*current, layer] if layer.complete else []
     return values
 
 

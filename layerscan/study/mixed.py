@@ -176,13 +176,15 @@ def fit_nested(
     Raises
     ------
     MeasurementError
-        Fewer than two values in every image: no spread between layers can be told.
+        Fewer than two values in every image, or no spread at all within images.
     """
     import numpy as np
 
     sums, names = sum_up(values, images, specimens, groups if groups is not None else ["all"] * len(values))
     if sums.total - sums.n.size < 1:
         raise MeasurementError("Every image has one value: layers and images cannot be told apart. Add layers.")
+    if float(sums.squares.sum()) <= 1e-24 * float((sums.n * sums.mean**2).sum()):
+        raise MeasurementError("All layers of each image are equal: there is no spread between layers to estimate.")
     tells_specimens = sums.group.size > len(names)
     tells_images = sums.n.size > sums.group.size
     free = [tells_specimens, tells_images, True]

@@ -288,4 +288,18 @@ def make_table(rows: Sequence[Mapping[str, Any]], columns: Sequence[str]) -> pd.
     """A pandas table with these columns in this order and fitting types; unknown is missing, never 0."""
     import pandas as pd
 
-    return pd.DataFrame([[row.get(name) for name in columns] for row in rows], columns=list(columns)).convert_dtypes()
+    table = {}
+    for name in columns:
+        values = [row.get(name) for row in rows]
+        table[name] = pd.Series(values, dtype=_column_type(name, values))
+    return pd.DataFrame(table, columns=list(columns))
+
+
+def _column_type(name: str, values: Sequence[Any]) -> str:
+    """Nullable pandas type: a length stays a float although all values happen to be whole or unknown."""
+    if name.endswith(("_nm", "_deg", "_relative", "seconds", "height")):
+        return "Float64"
+    if name.startswith("n_") or name in ("layer", "attempts"):
+        return "Int64"
+    found = {type(value) for value in values if value is not None}
+    return "boolean" if found == {bool} else "string"
