@@ -27,11 +27,15 @@ _NORM = 1.0 / math.sqrt(2.0 * math.pi)
 class EdgeFit:
     """Fitted edges: positions [samples], levels (edges + 1), shared parameters, covariance of the positions.
 
+    ``position`` is averaged over the edge models; ``best_position`` belongs to the best one, as ``level`` and
+    ``shared`` do.
+
     ``scale`` is the factor by which the covariance was raised because the residuals exceed the stated noise or are
     correlated; ``active`` says which shared parameters were fitted.
     """
 
     position: FloatArray
+    best_position: FloatArray
     level: FloatArray
     shared: FloatArray
     active: BoolArray
@@ -683,6 +687,7 @@ def _finish(depth, profile, weight, fit, precision, used, scatter):  # type: ign
     rms = math.sqrt(float((weight * residual**2).sum() / max(float(weight.sum()), 1e-300)))
     return EdgeFit(
         position=position,
+        best_position=own_position,
         level=level,
         shared=shared,
         active=active,

@@ -447,8 +447,10 @@ def _profile_peak(mean: FloatArray, guess: float) -> tuple[float, float, float]:
     size = 4 * n
     power = np.abs(np.fft.rfft((mean - mean.mean()) * window, size)) ** 2
     frequency = np.fft.rfftfreq(size)
+    wide = max(round(0.16 * guess * size), 1) | 1  # a disordered stack has a broad hump; noise is tamed by averaging
+    hump = np.convolve(power, np.ones(wide) / wide, mode="same")
     here = np.flatnonzero((frequency > guess / 1.6) & (frequency < guess * 1.6))
-    at = int(here[np.argmax(power[here])])
+    at = int(here[np.argmax(hump[here])])
     f = float(frequency[at])
     width = 2.0 / n  # half the width of the window's main lobe
     low = (frequency > f / 2.83) & (frequency < min(f / 1.5, f - width))
@@ -458,7 +460,7 @@ def _profile_peak(mean: FloatArray, guess: float) -> tuple[float, float, float]:
     def energy(centre: float) -> float:
         return float(power[np.abs(frequency - centre) <= width].sum())
 
-    return float(power[at] / floor), f, (energy(2 * f) + energy(3 * f)) / max(energy(f), 1e-30)
+    return float(hump[at] / floor), f, (energy(2 * f) + energy(3 * f)) / max(energy(f), 1e-30)
 
 
 def _alternations(mean: FloatArray, frequency: float) -> tuple[float, float, float, float]:

@@ -282,21 +282,15 @@ def describe_field(
     depth = np.where(inside, followed.depth, np.nan)
     row, column = picture.to_page(row, column)
     cosine = followed.cosine
-    local = np.full_like(depth, np.nan)
+    local = np.where(inside, followed.normal, np.nan)
     mean = np.zeros(edges)
-    normal = np.zeros_like(depth)
     for b in range(1, edges):
-        step = (depth[b] - depth[b - 1]) * 0.5 * (cosine[b] + cosine[b - 1])
+        step = local[b] - local[b - 1]
         good = np.isfinite(step)
         if good.any():
-            gap = float(step[good].mean())
+            mean[b] = mean[b - 1] + float(step[good].mean())
         else:
-            gap = float(stack.position[b] - stack.position[b - 1]) * float(np.mean(cosine[b]))
-        mean[b] = mean[b - 1] + gap
-        normal[b] = normal[b - 1] + np.where(good, step, gap)
-    base = straight.frame_depth(followed.first + stack.position[:1, None] + np.zeros((1, stations)), number[:1])[0]
-    first = np.where(np.isfinite(depth[0]), (depth[0] - base) * cosine[0], 0.0)
-    local = np.where(np.isfinite(depth), normal + first, np.nan)
+            mean[b] = mean[b - 1] + float(stack.position[b] - stack.position[b - 1]) * float(np.mean(cosine[b]))
     shift = float(np.nanmean(local[0])) if np.isfinite(local[0]).any() else 0.0
     phases = tuple(PHASE_NAMES[k] for k in stack.phase)
     roughness, length = _roughness(followed, straight)

@@ -183,7 +183,7 @@ def _centres(position: FloatArray, count: int) -> FloatArray:
 def _fitted_levels(
     fit: EdgeFit, bright_first: bool, other: tuple[bool, bool], period: float, count: int
 ) -> tuple[FloatArray, FloatArray]:
-    """Levels of both phases along the profile from the fitted layers: a kernel mean over three periods."""
+    """Levels of both phases along the profile from the fitted layers: a local line over 2.5 periods."""
     segments = len(fit.position) + 1
     nominal = np.where(np.arange(segments) % 2 == 0, bright_first, not bright_first)
     centre = _centres(fit.position, count)
@@ -198,10 +198,13 @@ def _fitted_levels(
             continue
         level = fit.level[own]
         level = np.clip(level, *(np.median(level) + np.array([-0.3, 0.3])))
-        kernel = np.exp(-0.5 * ((at[:, None] - centre[own][None, :]) / (2.5 * period)) ** 2)
+        x = (centre[own][None, :] - at[:, None]) / (2.5 * period)
+        kernel = np.exp(-0.5 * x**2)
         base = float(np.median(level))
-        smooth = (kernel @ level + 0.05 * base) / (kernel.sum(axis=1) + 0.05)
-        out.append(np.interp(np.arange(count), at, smooth))
+        n, s1, s2 = kernel.sum(axis=1) + 0.05, (kernel * x).sum(axis=1), (kernel * x**2).sum(axis=1)
+        s2 = s2 + 0.1 * n
+        v0, v1 = kernel @ level + 0.05 * base, (kernel * x) @ level
+        out.append(np.interp(np.arange(count), at, (s2 * v0 - s1 * v1) / (n * s2 - s1**2)))
     return out[0], np.maximum(out[1], out[0] + 0.2)
 
 

@@ -28,6 +28,7 @@ if TYPE_CHECKING:
     from layerscan.measurement.field import StraightField
     from layerscan.records import BoolArray, FloatArray
 
+TURNS = 2  # of tracing and refitting
 LEAST_COVERAGE = 0.35  # a depth counts where at least this part of the widest depth's stations shows it
 
 
@@ -35,14 +36,16 @@ LEAST_COVERAGE = 0.35  # a depth counts where at least this part of the widest d
 class FollowedStack:
     """Boundaries of a field and where they run.
 
-    ``depth`` (boundaries, stations) is the depth in the frame [px], NaN where not traced; ``u`` its standard
-    uncertainty; ``cosine`` takes a difference of frame depths to a distance along the local normal; ``first`` is the
-    first depth sample that was used, ``profile`` the mean along the traces from there on.
+    ``depth`` (boundaries, stations) is the depth in the frame [px], NaN where not traced; ``normal`` the same along the
+    local normal from the straightened first boundary on; ``cosine`` takes a difference of frame depths to a distance
+    along the local normal; ``first`` is the first depth sample that was used, ``profile`` the mean along the traces
+    from there on.
     """
 
     stack: Stack
     traces: Traces
     depth: FloatArray
+    normal: FloatArray
     cosine: FloatArray
     valid: BoolArray
     first: int
@@ -208,6 +211,16 @@ def local_gain(field, moved, position, profile, dark, bright, node_step, half, s
     return centre, gain
 
 
+@njit(cache=True)  # type: ignore[untyped-decorator]
+def normalise(field, centre, gain):  # type: ignore[no-untyped-def]
+    """The field brought to 0 (dark) and 1 (bright), NaN where it has no gain."""
+    out = np.empty_like(field)
+    for d in range(field.shape[0]):
+        for j in range(field.shape[1]):
+            out[d, j] = (field[d, j] - centre[d, j]) / gain[d, j] if gain[d, j] > 0 else np.nan
+    return out
+
+
 def usable_depth(field: NDArray[np.float32]) -> tuple[int, int]:
     """First and last + 1 depth sample that enough stations show."""
     number = np.isfinite(field).sum(axis=1)
@@ -254,26 +267,26 @@ def follow_layers(
     spread = max(int(period / straight.station_step / 2), 2)
     moved = np.zeros((len(stack.position), stations))
     traces = None
-    for turn in range(2):
-        level_dark, level_bright = stack.dark, stack.bright
+    for turn in range(TURNS):
         centre, gain = local_gain(
-            field, moved, stack.position, mean, level_dark, level_bright, 2.0 * period, int(2 * period), spread
+            field, moved, stack.position, mean, stack.dark, stack.bright, 2.0 * period, int(2 * period), spread
         )
         traces = _trace(field, centre, gain, stack, moved, rounds if turn == 0 else 2, period)
-        if turn == 1:
+        if turn == TURNS - 1:
             break
-        moved = traces.apart
-        mean, single, number, noise = mean_profile(field, moved, stack.position)
+        even = normalise(field, centre, gain)
+        mean, single, number, noise = mean_profile(even, traces.apart, stack.position)
+        contrast = stack.bright - stack.dark
+        mean, single = stack.dark + contrast * mean, contrast**2 * single
         again = find_stack(
             mean, variance=_variance(single, number), period=period, layered=inside, blur=float(stack.fit.shared[0]),
             hints=_hints(stack, noise, full_scale),
         )  # fmt: skip
         if again is None:
             break
+        moved = traces.smooth
         if len(again.position) != len(stack.position):
             moved = np.stack([np.interp(again.position, stack.position, column) for column in moved.T], axis=1)
-        else:
-            moved = traces.smooth
         stack = again
     assert traces is not None
     return _followed(straight, stack, traces, low, mean, _variance(single, number), period)
@@ -334,7 +347,7 @@ def _trace(
     longest = int(min(max(stations // 4, 4), 64))
     for _ in range(rounds):
         match_columns(
-            field, centre, gain, fit.position, fit.level, fit.shared, bool(fit.active[RIM_DECAY]), now, prior, limit,
+            field, centre, gain, fit.best_position, fit.level, fit.shared, bool(fit.active[RIM_DECAY]), now, prior, limit,
             raw, information, misfit,
         )  # fmt: skip
         valid = mark_outliers(misfit, information)
@@ -354,16 +367,18 @@ def _followed(
 ) -> FollowedStack:
     stations = np.arange(traces.raw.shape[1])
     valid = traces.valid
-    deviation = traces.smooth - np.array([np.mean(r[v]) if v.any() else 0.0 for r, v in zip(traces.smooth, valid, strict=True)])[:, None]  # noqa: E501
+    deviation = traces.smooth
     aligned = low + stack.position[:, None] + deviation
     depth = straight.frame_depth(aligned, np.broadcast_to(stations, aligned.shape))
     base = straight.frame_depth(low + stack.position[:, None] + np.zeros_like(deviation), np.broadcast_to(stations, aligned.shape))  # noqa: E501
-    slope = _slope(base, straight.station_step, max(int(0.5 * period / straight.station_step), 1))
+    slope = _slope(base, straight.station_step, max(int(period / straight.station_step), 1))
     slope = slope / np.maximum(1 - straight.frame.curvature * base, 0.05)
     cosine = 1 / np.sqrt(1 + slope**2)
+    steps = np.diff(base, axis=0) * 0.5 * (cosine[1:] + cosine[:-1])
+    normal = np.concatenate([np.zeros_like(base[:1]), np.cumsum(steps, axis=0)]) + (depth - base) * cosine
     return FollowedStack(
-        stack=stack, traces=traces, depth=np.where(valid, depth, np.nan), cosine=cosine, valid=valid, first=low,
-        profile=mean, variance=variance,
+        stack=stack, traces=traces, depth=np.where(valid, depth, np.nan), normal=np.where(valid, normal, np.nan),
+        cosine=cosine, valid=valid, first=low, profile=mean, variance=variance,
     )  # fmt: skip
 
 
