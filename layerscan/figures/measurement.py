@@ -99,9 +99,9 @@ def draw_overlay(
     axes.set(xlabel="column (nm)" if pixel else "column (pixels)", ylabel="row (nm)" if pixel else "row (pixels)")
     _hatch_left_out(axes, measurement, intensity.shape, row_nm, column_nm)
     _draw_traces(axes, measurement, row_nm, column_nm)
-    _draw_direction(axes, measurement, extent, row_nm, column_nm, lit_side)
+    light_x = _draw_direction(axes, measurement, extent, row_nm, column_nm, lit_side)
     if pixel:
-        _draw_scale_bar(axes, measurement, extent, row_nm)
+        _draw_scale_bar(axes, measurement, extent, row_nm, at_left=light_x > 0.5 * (extent[0] + extent[1]))
     axes.set(xlim=extent[:2], ylim=extent[2:])
 
 
@@ -145,7 +145,9 @@ def _compose_no_layers(figure: Figure, measurement: Measurement, intensity: Floa
 def _headline(measurement: Measurement) -> str:
     text = _image_name(measurement)
     if measurement.period is not None:
-        return f"{text}: lamellar period {average_text(measurement.period)}"
+        without = "calibration_uncertainty_unknown" in measurement.flags
+        end = " (u without calibration: its uncertainty is not known)" if without else ""
+        return f"{text}: lamellar period {average_text(measurement.period)}{end}"
     if measurement.spacing is not None:
         return f"{text}: dominant spacing {number_text(measurement.spacing.value, measurement.spacing.u)} nm; no period"
     return f"{text}: layers, no repeating period"
@@ -185,7 +187,8 @@ def _hatch_left_out(
     from matplotlib.patches import Rectangle
 
     regions = [item.region for item in measurement.image.excluded]
-    if measurement.detection.region is not None and measurement.layered:
+    line = measurement.settings.get("line")
+    if measurement.detection.region is not None and measurement.layered and line is None:
         regions += _outside(measurement.detection.region, shape[0], shape[1], measurement)
     for row0, column0, row1, column1 in regions:
         axes.add_patch(
@@ -223,6 +226,10 @@ def _draw_traces(axes: Axes, measurement: Measurement, row_nm: float, column_nm:
     traced = [boundary for boundary in measurement.boundaries if boundary.trace is not None]
     if not traced:
         return
+    line = measurement.settings.get("line")
+    if line is not None:
+        _draw_line(axes, measurement, line, row_nm, column_nm)
+        return
     points = max(2, min(120, _TRACE_POINTS // len(traced)))
     width = 1.0 if len(traced) < 60 else 0.6
     for boundary in traced:
@@ -238,6 +245,24 @@ def _draw_traces(axes: Axes, measurement: Measurement, row_nm: float, column_nm:
         )
 
 
+def _draw_line(
+    axes: Axes, measurement: Measurement, line: tuple[float, float, float, float], row_nm: float, column_nm: float
+) -> None:
+    """The line that was measured along, with a tick across it at each boundary."""
+    start, end = (line[1] * column_nm, line[0] * row_nm), (line[3] * column_nm, line[2] * row_nm)
+    for colour, width in ((style.BLACK, 2.6), (style.YELLOW, 1.2)):
+        axes.plot([start[0], end[0]], [start[1], end[1]], color=colour, linewidth=width)
+    length = math.hypot(end[0] - start[0], end[1] - start[1])
+    half = 0.02 * length
+    across = (-(end[1] - start[1]) / length * half, (end[0] - start[0]) / length * half)
+    for boundary in measurement.boundaries:
+        trace = boundary.trace
+        if trace is not None and len(trace.row_px):
+            x, y = float(trace.column_px[0]) * column_nm, float(trace.row_px[0]) * row_nm
+            ends = ([x - across[0], x + across[0]], [y - across[1], y + across[1]])
+            axes.plot(*ends, color=style.PURPLE if boundary.edited else style.YELLOW, linewidth=1.2)
+
+
 _BOX = {"facecolor": "white", "edgecolor": "none", "alpha": 0.85, "pad": 1.5}
 
 
@@ -248,36 +273,33 @@ def _draw_direction(
     row_nm: float,
     column_nm: float,
     lit_side: LitSide,
-) -> None:
-    """An arrow along the depth in a corner, and a mark where the light comes in. Points are (column, row) in nm."""
+) -> float:
+    """An arrow along the depth in a corner, and a mark where the light comes in, whose column [nm] is returned."""
     if measurement.orientation_deg is None:
-        return
+        return extent[0]
     angle = math.radians(measurement.orientation_deg)
     right, down = math.cos(angle), math.sin(angle)
     size = 0.13 * min(extent[1] - extent[0], extent[2] - extent[3])
-    x, y = extent[0] + size, extent[3] + size
+    light_x = light_y = math.inf
+    ends = [b.trace for b in measurement.boundaries if b.trace is not None and len(b.trace.row_px)]
+    if ends:
+        trace = ends[0] if lit_side == "start" else ends[-1]
+        step = (0.7 if lit_side == "start" else -0.7) * size
+        middle = len(trace.row_px) // 2
+        light_x = _within(float(trace.column_px[middle]) * column_nm - step * right, extent[0], extent[1])
+        light_y = _within(float(trace.row_px[middle]) * row_nm - step * down, extent[3], extent[2])
+        _arrow(axes, (light_x, light_y), (light_x + step * right, light_y + step * down), style.VERMILION)
+        _label(axes, light_x + 0.6 * size * down, light_y - 0.6 * size * right, "light", style.DARK_VERMILION)
+    at_right = light_x < extent[0] + 3 * size and light_y < extent[3] + 3 * size
+    x, y = extent[1] - size if at_right else extent[0] + size, extent[3] + size
     tail, head = (x - 0.5 * size * right, y - 0.5 * size * down), (x + 0.5 * size * right, y + 0.5 * size * down)
     _arrow(axes, tail, head, style.BLACK)
-    axes.text(x, y + 0.85 * size, "depth", ha="center", va="center", fontsize=8, bbox=_BOX)
-    ends = [b.trace for b in measurement.boundaries if b.trace is not None and len(b.trace.row_px)]
-    if not ends:
-        return
-    trace = ends[0] if lit_side == "start" else ends[-1]
-    step = (0.7 if lit_side == "start" else -0.7) * size
-    middle = len(trace.row_px) // 2
-    x = _within(float(trace.column_px[middle]) * column_nm - step * right, extent[0], extent[1])
-    y = _within(float(trace.row_px[middle]) * row_nm - step * down, extent[3], extent[2])
-    _arrow(axes, (x, y), (x + step * right, y + step * down), style.VERMILION)
-    axes.text(
-        x + 0.6 * size * down,
-        y - 0.6 * size * right,
-        "light",
-        ha="center",
-        va="center",
-        fontsize=8,
-        color=style.DARK_VERMILION,
-        bbox=_BOX,
-    )
+    _label(axes, x, y + 0.85 * size, "depth", style.BLACK)
+    return light_x if ends else extent[0]
+
+
+def _label(axes: Axes, x: float, y: float, words: str, colour: str) -> None:
+    axes.text(x, y, words, ha="center", va="center", fontsize=8, color=colour, bbox=_BOX)
 
 
 def _arrow(axes: Axes, tail: tuple[float, float], head: tuple[float, float], colour: str) -> None:
@@ -291,7 +313,7 @@ def _within(value: float, low: float, high: float) -> float:
 
 
 def _draw_scale_bar(
-    axes: Axes, measurement: Measurement, extent: tuple[float, float, float, float], row_nm: float
+    axes: Axes, measurement: Measurement, extent: tuple[float, float, float, float], row_nm: float, *, at_left: bool
 ) -> None:
     from matplotlib.patches import Rectangle
 
@@ -299,13 +321,12 @@ def _draw_scale_bar(
     width, height = extent[1] - extent[0], extent[2] - extent[3]
     bar = style.nice_length(width)
     bottom = min(extent[2], _usable_bottom(measurement, rows, columns) * row_nm)
-    right, low = extent[1] - 0.04 * width, bottom - 0.045 * height
-    pad = 0.015 * width
-    axes.add_patch(
-        Rectangle((right - bar - pad, low - 0.075 * height), bar + 2 * pad, 0.1 * height, facecolor="white", alpha=0.85)
-    )
-    axes.plot([right - bar, right], [low, low], color=style.BLACK, linewidth=3.0, solid_capstyle="butt")
-    axes.text(right - bar / 2, low - 0.012 * height, style.length_text(bar), ha="center", va="bottom", fontsize=8)
+    left = extent[0] + 0.04 * width if at_left else extent[1] - 0.04 * width - bar
+    low, pad = bottom - 0.045 * height, 0.015 * width
+    box = Rectangle((left - pad, low - 0.075 * height), bar + 2 * pad, 0.1 * height, facecolor="white", alpha=0.85)
+    axes.add_patch(box)
+    axes.plot([left, left + bar], [low, low], color=style.BLACK, linewidth=3.0, solid_capstyle="butt")
+    axes.text(left + bar / 2, low - 0.012 * height, style.length_text(bar), ha="center", va="bottom", fontsize=8)
 
 
 # --- the other panels -----------------------------------------------------------------------------------------------
@@ -400,13 +421,15 @@ def _thickness_legend(axes: Axes, layers: tuple[Layer, ...]) -> None:
     handles, labels = axes.get_legend_handles_labels()
     if any(not layer.complete for layer in layers):
         handles.append(Line2D([], [], marker="o", color=style.GREY, markerfacecolor="white", linestyle="none"))
-        labels.append("cut off by the frame: not in the means")
+        labels.append("hollow: cut off by the frame")
     if any("not_resolved" in layer.flags for layer in layers):
         handles.append(Patch(facecolor="none", edgecolor=style.GREY, hatch=style.HATCH_UNRESOLVED))
         labels.append("not resolved on its own")
     handles.append(Patch(facecolor=style.GREY, alpha=0.2))
     labels.append("mean ± U (k = 2)")
-    axes.legend(handles, labels, loc="upper left", bbox_to_anchor=(0.0, -0.13), ncols=2, borderaxespad=0.0)
+    axes.legend(
+        handles, labels, loc="upper left", bbox_to_anchor=(0.0, -0.13), ncols=2, borderaxespad=0.0, columnspacing=1.0
+    )
 
 
 def _average_of(measurement: Measurement, phase: Phase) -> Average | None:

@@ -48,6 +48,9 @@ def prediction_drawing(prediction: Prediction) -> Drawing:
         draw_spectrum(axes, prediction.reflectance, label="predicted", colour=style.PREDICTED, dash="-")
         finish_axes(axes, "reflectance (0 to 1)")
         label_peaks(axes, prediction.peaks)
+        if not prediction.peaks:
+            axes.text(0.98, 0.97, "no band of the stack can be read at half height in this range",
+                      transform=axes.transAxes, ha="right", va="top", fontsize=8)  # fmt: skip
         style.draw_swatches(side, swatches)
         figure.suptitle(_headline(prediction), x=0.01, ha="left", fontsize=11)
 

@@ -7,6 +7,7 @@ import pytest
 from figures.made_records import bell, make_colour, make_measurement, make_prediction
 
 from layerscan.errors import InputError
+from layerscan.figures import style
 from layerscan.figures.comparison import draw_comparison
 from layerscan.figures.materials import draw_medium
 from layerscan.figures.measurement import draw_measurement
@@ -134,6 +135,25 @@ def test_image_without_pixel_size_is_drawn_in_pixels():
     text = " ".join(words(draw_measurement(unknown, micrograph)))
     assert "column (pixels)" in text
     assert "nm" not in text
+
+
+def test_line_mode_shows_the_line_and_a_tick_for_each_boundary():
+    # along a line every trace has one station; nothing outside the line is hatched as left out
+    measurement, micrograph = make_measurement()
+    boundaries = tuple(
+        replace(b, trace=replace(b.trace, **{name: getattr(b.trace, name)[:1] for name in vars(b.trace)}))
+        for b in measurement.boundaries
+    )
+    on_line = replace(measurement, settings={"line": (30.0, 40.0, 360.0, 60.0)}, boundaries=boundaries)
+    field, line = (draw_measurement(m, micrograph) for m in (replace(measurement, boundaries=()), on_line))
+    yellow = [svg.lower().count(style.YELLOW.lower()) for svg in (field, line)]
+    assert yellow[1] - yellow[0] >= len(boundaries) + 1
+
+
+def test_headline_says_where_calibration_is_left_out():
+    measurement, micrograph = make_measurement()
+    unknown = replace(measurement, flags=("calibration_uncertainty_unknown",))
+    assert "u without calibration" in " ".join(words(draw_measurement(unknown, micrograph)))
 
 
 @pytest.mark.parametrize("periods", [1, 2, 90])
