@@ -1,4 +1,8 @@
-"""What every image format hands over: a plan read from the header, checked before any pixel is decoded."""
+"""What every image format hands over: a plan read from the header, checked before any pixel is decoded.
+
+To add a format: write a module with one function ``plan(path, page) -> ImagePlan`` that reads the header within
+``plain_errors`` and calls ``check_page``, ``check_size`` and ``check_type``; then add one row to ``images.FORMATS``.
+"""
 
 from __future__ import annotations
 

@@ -94,7 +94,7 @@ def test_description_unit(tmp_path, unit, nm):
     path = tmp_path / "a.tif"
     per_unit = nm / 5.0
     tifffile.imwrite(
-        path, PICTURE, description=f"ImageJ=1.53\nunit={unit}\n", resolution=(per_unit, per_unit), metadata=None
+        path, PICTURE, description=f"unit={unit}\n", resolution=(per_unit, per_unit), metadata=None
     )
     size = open_image(path).pixel_size
     assert size.row_nm == pytest.approx(5.0, rel=1e-6)
@@ -104,7 +104,7 @@ def test_description_unit(tmp_path, unit, nm):
 def test_description_unit_pixel_is_no_length(tmp_path):
     # an uncalibrated picture in that style says unit=pixel
     path = tmp_path / "a.tif"
-    tifffile.imwrite(path, PICTURE, description="ImageJ=1.53\nunit=pixel\n", resolution=(1, 1), metadata=None)
+    tifffile.imwrite(path, PICTURE, description="unit=pixel\n", resolution=(1, 1), metadata=None)
     with pytest.raises(CalibrationError, match="'pixel', no length"):
         open_image(path)
 
@@ -308,7 +308,7 @@ def test_from_array_refuses(array, match):
 def test_description_without_unit_leaves_the_resolution_tag(tmp_path):
     # a description of that style without a unit line: the resolution tag keeps its own unit
     path = tmp_path / "a.tif"
-    description = "ImageJ=1.53\nimages=5\n"
+    description = "images=5\n"
     tifffile.imwrite(path, PICTURE, description=description, resolution=(4e6, 4e6), resolutionunit=3, metadata=None)
     image = open_image(path)
     assert image.pixel_size.row_nm == pytest.approx(2.5)

@@ -33,7 +33,7 @@ def make_files(folder):
         folder / "ome.ome.tif", PICTURE, ome=True, metadata={"axes": "YX", "PhysicalSizeX": 2.0, "PhysicalSizeY": 2.0}
     )
     tifffile.imwrite(
-        folder / "unit.tif", PICTURE, description="ImageJ=1.5\nunit=nm\n", resolution=(0.5, 0.5), metadata=None
+        folder / "unit.tif", PICTURE, description="unit=nm\n", resolution=(0.5, 0.5), metadata=None
     )
     tifffile.imwrite(folder / "jpeg.tif", PICTURE, compression="jpeg")
     tifffile.imwrite(folder / "big.tif", PICTURE, bigtiff=True, byteorder=">")
