@@ -64,7 +64,7 @@ def marks_layer(viewer: Any, image: Any, micrograph: Micrograph) -> Any:
             np.zeros((0, 2, 2)),
             edge_color=colours.SKY,
             vector_style="line",
-            edge_width=max(1.0, 0.0012 * max(micrograph.shape)),
+            edge_width=max(1.0, 0.0025 * max(micrograph.shape)),
             **_common(image, micrograph, MARKS),
         )
     return layer
@@ -93,13 +93,13 @@ def line_entries(lines: Any, width: str) -> tuple[LineEntry, ...]:
     )
 
 
-def show_marks(layer: Any, measurement: Measurement | None) -> None:
+def show_marks(layer: Any, measurement: Measurement | None, *, width_px: float) -> None:
     """Mark the boundaries of a line in the image.
 
     The marks lie on the line, so the extent of the scene stays as it is: napari's recalculation of it, and the
     thumbnail, would take longer than everything else in a refresh.
     """
-    ticks = np.zeros((0, 2, 2)) if measurement is None else boundary_marks(measurement)
+    ticks = np.zeros((0, 2, 2)) if measurement is None else boundary_marks(measurement, width_px=width_px)
     if len(ticks) or len(layer.data):
         with layer.events.blocker_all():
             layer.data = ticks
@@ -123,8 +123,19 @@ def show_traces(viewer: Any, image: Any, micrograph: Micrograph, segments: Segme
         edge_colormap=colours.THICKNESS_COLOURMAP,
         edge_contrast_limits=(low, high),
         vector_style="line",
-        edge_width=max(1.5, 0.002 * max(micrograph.shape)),
+        edge_width=_trace_width(segments, micrograph),
         **_common(image, micrograph, TRACES),
+    )
+
+
+def _trace_width(segments: Segments, micrograph: Micrograph) -> float:
+    """Width of a traced boundary in pixels: a quarter of a typical layer, so that layers stay visible between."""
+    size = micrograph.pixel_size
+    known = segments.thickness_nm[np.isfinite(segments.thickness_nm)]
+    if size is None or known.size == 0:
+        return 2.0
+    return float(
+        np.clip(0.25 * np.median(known) / max(size.row_nm, size.column_nm), 1.0, 0.006 * max(micrograph.shape))
     )
 
 

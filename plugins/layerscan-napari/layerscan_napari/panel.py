@@ -92,7 +92,7 @@ class LayerPanel(QWidget):
         self.status.setWordWrap(True)
         self.doubts = QPlainTextEdit()
         self.doubts.setReadOnly(True)
-        self.doubts.setAccessibleName("Doubts and conditions of this result")
+        self.doubts.setAccessibleName("Answer, doubts and conditions of this result")
 
         form = QFormLayout()
         form.setVerticalSpacing(3)
@@ -100,7 +100,7 @@ class LayerPanel(QWidget):
             ("&Image", (self.image_box, self.page_box)),
             ("", (self.image_info,)),
             ("&Pixel size", (self.pixel_size,)),
-            ("&Line", (self.line_edit, QLabel("width"), self.width_edit, self.draw_button)),
+            ("&Line", (self.line_edit, QLabel("width"), self.width_edit)),
         ):
             row = QHBoxLayout()
             for widget in widgets:
@@ -109,9 +109,8 @@ class LayerPanel(QWidget):
             label.setBuddy(widgets[0])
             form.addRow(label, row)
         buttons = QHBoxLayout()
-        buttons.addWidget(self.status, 1)
-        buttons.addWidget(self.keep_button)
-        buttons.addWidget(self.copy_button)
+        for made in (self.draw_button, self.keep_button, self.copy_button):
+            buttons.addWidget(made)
 
         self.tabs = QTabWidget()
         self.tabs.setAccessibleName("Settings and results")
@@ -124,7 +123,7 @@ class LayerPanel(QWidget):
             area.setFrameShape(QScrollArea.Shape.NoFrame)
             self.tabs.addTab(area, title)
         self.tabs.addTab(self.doubts, "Doubts")
-        self.tabs.setMinimumHeight(190)
+        self.tabs.setMinimumHeight(170)
         splitter = QSplitter(Qt.Orientation.Vertical)
         splitter.addWidget(self.plots)
         splitter.addWidget(self.tabs)
@@ -135,8 +134,9 @@ class LayerPanel(QWidget):
         layout.setContentsMargins(4, 4, 4, 4)
         layout.setSpacing(4)
         layout.addLayout(form)
-        layout.addWidget(self.readout)
         layout.addLayout(buttons)
+        layout.addWidget(self.readout)
+        layout.addWidget(self.status)
         layout.addWidget(splitter, 1)
         self.setMinimumWidth(400)
 
@@ -358,8 +358,8 @@ class LayerPanel(QWidget):
         image, micrograph = self.image, self.micrograph()
         if image is None or micrograph is None:
             return None
-        overlays.marks_layer(self.viewer, image, micrograph)
         lines = overlays.lines_layer(self.viewer, image, micrograph, width_px=self._width_px())
+        overlays.marks_layer(self.viewer, image, micrograph)
         self.viewer.layers.selection.active = lines
         self.live.follow(lines)
         return lines
@@ -463,11 +463,12 @@ class LayerPanel(QWidget):
         marks = None if image is None else overlays.find_overlay(self.viewer, image, overlays.MARKS)
         if marks is not None:
             line = result.job.measure.line
-            overlays.show_marks(marks, None if line is None else result.measurement)
+            overlays.show_marks(marks, None if line is None else result.measurement, width_px=self._width_px())
 
     def _show_doubts(self, result: compute.Result) -> None:
         lines = notes.doubts_of(result)
-        self.doubts.setPlainText("\n".join(f"• {line}" for line in lines) or "None.")
+        answer = "" if result.comparison is None else f"{result.comparison.sentence}\n\n"
+        self.doubts.setPlainText(answer + ("\n".join(f"• {line}" for line in lines) or "No doubts."))
         self.tabs.setTabText(self.tabs.indexOf(self.doubts), f"Doubts ({len(lines)})" if lines else "Doubts")
 
     def _on_failure(self, error: Exception) -> None:

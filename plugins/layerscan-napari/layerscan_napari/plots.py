@@ -12,6 +12,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 import pyqtgraph as pg
 from qtpy.QtCore import Qt, Signal
+from qtpy.QtGui import QFont
 from qtpy.QtWidgets import QSizePolicy, QVBoxLayout, QWidget
 
 if TYPE_CHECKING:
@@ -52,6 +53,8 @@ class LivePlots(QWidget):
         for heads in self._heads.values():
             self.thickness.addItem(heads)
         self._lower, self._upper = _curve(self.spectrum), _curve(self.spectrum)
+        for edge in (self._lower, self._upper):
+            edge.setPen(None)
         self._band = pg.FillBetweenItem(self._lower, self._upper)
         self.spectrum.addItem(self._band)
         self._predicted = _curve(self.spectrum)
@@ -196,15 +199,24 @@ def _plot(name: str, description: str, bottom: str, left: str) -> pg.PlotWidget:
     plot.setAccessibleName(name)
     plot.setAccessibleDescription(description)
     plot.hideButtons()
-    plot.setMinimumSize(240, 96)
+    plot.setMinimumSize(240, 104)
     plot.setSizePolicy(QSizePolicy.Policy.Ignored, QSizePolicy.Policy.Expanding)
     plot.getAxis("bottom").setLabel(bottom)
     plot.getAxis("left").setLabel(left)
     plot.getAxis("left").setWidth(54)
     for side in ("bottom", "left"):
-        plot.getAxis(side).enableAutoSIPrefix(False)
+        axis = plot.getAxis(side)
+        axis.enableAutoSIPrefix(False)
+        axis.setStyle(tickFont=_small(plot), tickTextOffset=2, autoExpandTextSpace=False)
+        axis.label.setFont(_small(plot))
     plot.disableAutoRange()
     return plot
+
+
+def _small(plot: pg.PlotWidget) -> QFont:
+    font = QFont(plot.font())
+    font.setPointSizeF(max(7.0, 0.85 * font.pointSizeF()))
+    return font
 
 
 def _curve(plot: pg.PlotWidget, *, connect: str = "all") -> pg.PlotCurveItem:

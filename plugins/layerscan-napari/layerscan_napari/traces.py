@@ -114,17 +114,27 @@ def layer_at(measurement: Measurement, *, row_px: float, column_px: float) -> La
     return next((layer for layer in measurement.layers if layer.index == number), None)
 
 
-def boundary_marks(measurement: Measurement) -> FloatArray:
-    """One tick across the band for every boundary of a line: (boundaries, 2, 2), start and step in pixels."""
-    ticks = []
-    for boundary in measurement.boundaries:
-        trace = boundary.trace
-        if trace is None or len(trace.station) == 0:
-            continue
-        first = np.array([trace.row_px[0], trace.column_px[0]])
-        last = np.array([trace.row_px[-1], trace.column_px[-1]])
-        ticks.append([first, last - first])
-    return np.array(ticks, dtype=float).reshape(-1, 2, 2)
+def boundary_marks(measurement: Measurement, *, width_px: float) -> FloatArray:
+    """One tick for every boundary of a line, along the layers and reaching out of a band of this width.
+
+    Returns
+    -------
+    (boundaries, 2, 2) float array
+        Start and step of each tick, (row, column) in pixels.
+    """
+    size = measurement.image.pixel_size
+    places = [
+        (b.trace.row_px.mean(), b.trace.column_px.mean())
+        for b in measurement.boundaries
+        if b.trace is not None and len(b.trace.row_px)
+    ]
+    if size is None or measurement.orientation_deg is None or not places:
+        return np.zeros((0, 2, 2))
+    angle = math.radians(measurement.orientation_deg)
+    along = np.array([math.cos(angle) / size.row_nm, -math.sin(angle) / size.column_nm])
+    step = along / math.hypot(*along) * (1.6 * width_px)
+    starts = np.array(places) - step / 2
+    return np.stack([starts, np.broadcast_to(step, starts.shape)], axis=1)
 
 
 # --- in words --------------------------------------------------------------------------------------------------------

@@ -2,7 +2,7 @@
 
 import numpy as np
 
-PERIOD_PX, PIXEL_NM = 40.0, 2.5
+PERIOD_PX, PIXEL_NM = 40.0, 5.0
 
 
 def draw_section(shape=(360, 480), *, period_px=PERIOD_PX, dark=0.45, noise=8.0, tilt=0.1):

@@ -231,7 +231,18 @@ def test_that_a_measurement_without_traces_has_no_segments():
     m = made_measurement()
     m = replace(m, boundaries=tuple(replace(b, trace=None) for b in m.boundaries))
     assert traces.traced_segments(m).vectors.shape == (0, 2, 2)
-    assert traces.boundary_marks(m).shape == (0, 2, 2)
+    assert traces.boundary_marks(m, width_px=10).shape == (0, 2, 2)
+
+
+@pytest.mark.parametrize(("orientation", "across"), [(0.0, (1, 0)), (90.0, (0, 1)), (30.0, (3**0.5 / 2, -0.5))])
+def test_that_marks_run_along_the_layers_through_their_boundary(orientation, across):
+    # INTERFACE: the orientation is the direction of the layer normal, from +column towards +row
+    m = made_measurement(orientation_deg=orientation)
+    marks = traces.boundary_marks(m, width_px=10)
+    assert marks.shape == (4, 2, 2)
+    middle = marks[:, 0] + marks[:, 1] / 2
+    assert np.allclose(middle[:, 1], [10, 30, 60, 80])
+    assert abs(np.dot(marks[0, 1], across)) == pytest.approx(16)
 
 
 def test_that_values_are_shown_to_the_second_digit_of_their_uncertainty():

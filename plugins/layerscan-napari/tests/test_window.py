@@ -120,7 +120,7 @@ def test_that_an_image_opens_in_nm_and_the_panel_takes_it(opened, section_file):
     assert [f"{unit:~}" for unit in layer.units] == ["nm", "nm"]
     assert tuple(layer.axis_labels) == ("row", "column")
     assert panel.image is layer
-    assert "2.5 nm" in panel.image_info.text()
+    assert f"{PIXEL_NM:g} nm" in panel.image_info.text()
     assert panel.micrograph().load() is layer.data
 
 
@@ -273,10 +273,10 @@ def test_that_a_typed_line_and_width_are_measured(lined):
     with wait_for(panel.live.completed) as done:
         panel.line_edit.editingFinished.emit()
     assert done.args[0].job.measure.line == (200.0, 30.0, 200.0, 440.0)
-    panel.width_edit.setText("100 nm")
+    panel.width_edit.setText("200 nm")
     with wait_for(panel.live.completed) as done:
         panel.width_edit.editingFinished.emit()
-    assert done.args[0].job.measure.width == "100 nm"
+    assert done.args[0].job.measure.width == "200 nm"
     assert panel.live.layer.edge_width[0] == pytest.approx(40)  # the band is drawn as wide as it is averaged
     panel.width_edit.setText("20")
     with wait_for(panel.live.completed):
@@ -310,7 +310,10 @@ def test_that_an_observed_spectrum_is_shown_and_compared(lined, observed_file):
     with wait_for(panel.live.completed) as done:
         panel.work.load_observed(observed_file)
     assert done.args[0].comparison is not None
-    assert panel.readout.values["agreement"].text() == done.args[0].comparison.sentence
+    comparison = done.args[0].comparison
+    assert f"peak {comparison.peak_difference_nm:.0f}" in panel.readout.values["agreement"].text()
+    assert panel.readout.values["agreement"].accessibleDescription() == comparison.sentence
+    assert panel.doubts.toPlainText().startswith(comparison.sentence)
     assert len(panel.plots._observed.getData()[0]) == 61
     with wait_for(panel.live.completed) as done:
         panel.work.drop_observed()
@@ -485,7 +488,11 @@ def test_that_an_image_without_a_pixel_size_asks_for_it(window, unscaled_file, q
 def test_that_lines_land_where_the_mouse_is_beside_layers_in_micrometres(window, qtbot):
     viewer, panel = window
     other = viewer.add_image(
-        draw_section(), name="in um", scale=(0.0025, 0.0025), units=("um", "um"), axis_labels=("row", "column")
+        draw_section(),
+        name="in um",
+        scale=(PIXEL_NM / 1000, PIXEL_NM / 1000),
+        units=("um", "um"),
+        axis_labels=("row", "column"),
     )
     panel.choose_image(other)
     viewer.reset_view()
