@@ -160,9 +160,9 @@ def _read_34682(found: TagFindings, page: Any, shape: tuple[int, int]) -> None:
         found.no_scale.append(f"its tag {code} states no positive pixel size")
         return
     statement = ScaleStatement(row_nm=height * 1e9, column_nm=width * 1e9, source=f"tag {code}")
-    image, private = sections.get("Image", {}), sections.get("PrivateFei", {})
+    image = sections.get("Image", {})
     columns, rows = positive(image.get("ResolutionX")), positive(image.get("ResolutionY"))
-    bar = positive(private.get("DatabarHeight"))
+    bar = next((positive(s["DatabarHeight"]) for s in sections.values() if "DatabarHeight" in s), None)
     if columns and rows:
         stated = (int(rows), int(columns))
         found.scales.append(fit_to_picture(statement, stated_shape=stated, shape=shape))

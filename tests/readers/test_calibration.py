@@ -93,9 +93,7 @@ def test_description_unit(tmp_path, unit, nm):
     # description-style unit: the resolution counts pixels per that unit
     path = tmp_path / "a.tif"
     per_unit = nm / 5.0
-    tifffile.imwrite(
-        path, PICTURE, description=f"unit={unit}\n", resolution=(per_unit, per_unit), metadata=None
-    )
+    tifffile.imwrite(path, PICTURE, description=f"unit={unit}\n", resolution=(per_unit, per_unit), metadata=None)
     size = open_image(path).pixel_size
     assert size.row_nm == pytest.approx(5.0, rel=1e-6)
     assert "description" in size.source

@@ -32,9 +32,7 @@ def make_files(folder):
     tifffile.imwrite(
         folder / "ome.ome.tif", PICTURE, ome=True, metadata={"axes": "YX", "PhysicalSizeX": 2.0, "PhysicalSizeY": 2.0}
     )
-    tifffile.imwrite(
-        folder / "unit.tif", PICTURE, description="unit=nm\n", resolution=(0.5, 0.5), metadata=None
-    )
+    tifffile.imwrite(folder / "unit.tif", PICTURE, description="unit=nm\n", resolution=(0.5, 0.5), metadata=None)
     tifffile.imwrite(folder / "jpeg.tif", PICTURE, compression="jpeg")
     tifffile.imwrite(folder / "big.tif", PICTURE, bigtiff=True, byteorder=">")
     Image.fromarray(PICTURE).save(folder / "a.png", dpi=(5e6, 5e6))
