@@ -7,7 +7,7 @@ from typing import Any
 
 from layerscan.errors import SettingsError
 from layerscan.records import LayerTable
-from layerscan.settings import PredictSettings
+from layerscan.settings import PredictSettings, change_settings
 
 UNITS = {"angle": "deg", "aperture": "1", "immersion": "1", "scale": "1", "layers": "1", "strain": "1"}
 
@@ -35,7 +35,7 @@ def vary_one(
         "immersion": {"incident": f"n={value:.10g}"},
         "layers": {"layers": round(value)},
     }
-    return table, PredictSettings(**{**settings.model_dump(), **kinds[name]})
+    return table, change_settings(PredictSettings, settings, kinds[name])
 
 
 def scale_table(table: LayerTable, factor: float) -> LayerTable:
