@@ -472,6 +472,7 @@ def _alternations(mean: FloatArray, frequency: float) -> tuple[float, float, flo
     if len(turn) < 3:
         return 0.0, math.inf, math.inf, 0.0
     height = np.abs(np.diff(smooth[turn]))
+    height = height[height > 0.1 * np.median(height)]
     rank = max(3, round(0.5 * frequency * len(mean)))  # a quarter of the alternations that fit
     floor = 0.33 * float(np.sort(height)[-min(rank, len(height))])
     values, places = list(smooth[turn]), list(turn)
@@ -494,16 +495,14 @@ def _alternations(mean: FloatArray, frequency: float) -> tuple[float, float, flo
     spread = float(np.median(np.abs(spacing - middle))) * 1.4826 / middle
     order = np.diff(place)
     chirp = float(np.polyfit(np.linspace(0, 1, len(order)), np.log(order), 1)[0])
-    steps = np.abs(np.diff(values))
-    uneven = float(np.median(np.abs(steps - np.median(steps)))) * 1.4826 / float(np.median(steps))
+    uneven = float(height.std() / height.mean())
     return float(swings), spread, uneven, chirp
 
 
 def _statistic(evidence: Evidence) -> float:
     """How far the weakest of the criteria is passed: above 1 is layered."""
-    irregular = math.hypot(evidence.spacing_cv / 0.3, evidence.height_cv / 0.45, evidence.chirp)
     return min(
-        evidence.peak / 15,
+        evidence.peak / 14,
         evidence.persistence / 0.55,
         evidence.share / 0.3,
         evidence.swings / 3.9,
@@ -511,24 +510,30 @@ def _statistic(evidence: Evidence) -> float:
         evidence.length,
         0.35 / max(evidence.second, 1e-6),
         0.3 / max(evidence.rivals, 1e-6),
-        (0.8 if evidence.swings < 8 else 1.15) / max(irregular, 1e-6),
+        _regularity(evidence),
     )
 
 
 def _irregular(evidence: Evidence) -> float:
     """The same for lamellae that end and branch after a few periods; above 1 is layered, but irregular."""
-    uneven = math.hypot(evidence.spacing_cv / 0.3, evidence.height_cv / 0.45, evidence.chirp)
     return min(
         evidence.peak / 9,
-        evidence.near_persistence / 0.35,
-        evidence.near_share / 0.3,
+        evidence.near_persistence / 0.4,
+        evidence.near_share / 0.4,
         evidence.swings / 9.9,
-        evidence.alone / 25,
+        evidence.alone / 30,
         evidence.length,
-        0.25 / max(evidence.second, 1e-6),
-        0.4 / max(evidence.rivals, 1e-6),
-        1.3 / max(uneven, 1e-6),
+        0.15 / max(evidence.second, 1e-6),
+        0.3 / max(evidence.rivals, 1e-6),
+        _regularity(evidence),
     )
+
+
+def _regularity(evidence: Evidence) -> float:
+    """Even spacing and heights, weighed with how far the line stands out; few alternations must be more even."""
+    uneven = math.hypot(evidence.spacing_cv / 0.3, evidence.height_cv / 0.5, evidence.chirp)
+    most = 0.9 if evidence.swings < 8 else 1.6
+    return min(math.sqrt(evidence.peak / 18), most) / max(uneven, 1e-6)
 
 
 def _answer(best: tuple[float, _Candidate, _Straight, Evidence], levels: tuple[Level, ...]) -> LayerDetection:

@@ -442,3 +442,53 @@ def refine_shift(field, template, shift, node_start, node_step, half, reach, wid
             determinant = n * s2 - s1 * s1
             smooth[z, j] = (s2 * v0 - s1 * v1) / determinant if n > 0.1 else shift[z, j]
     return smooth
+
+
+@njit(cache=True)  # type: ignore[untyped-decorator]
+def settle_shift(field, template, shift, node_start, node_step, half, reach, price):  # type: ignore[no-untyped-def]
+    """Best path of corrections along the columns for each node (dynamic programming), to undo slips by a period.
+
+    The gain of a correction is its correlation with the mean profile, shared with the neighbouring nodes; a change of
+    the correction from column to column costs ``price`` for each sample.
+    """
+    count, columns = field.shape
+    nodes = shift.shape[0]
+    width = 2 * reach + 1
+    gain = np.zeros((nodes, columns, width))
+    score = np.empty(width)
+    for z in range(nodes):
+        centre = int(node_start + z * node_step)
+        for j in range(columns):
+            _best_shift(template, field, j, centre, half, shift[z, j], reach, score)
+            for q in range(width):
+                gain[z, j, q] = max(score[q], -0.2)
+    out = shift.copy()
+    best = np.empty(width)
+    new = np.empty(width)
+    back = np.empty((columns, width), np.int64)
+    for z in range(nodes):
+        best[:] = 0.0
+        for j in range(columns):
+            for q in range(width):  # distance transform of the best so far
+                new[q] = best[q]
+                back[j, q] = q
+            for q in range(1, width):
+                if new[q - 1] - price > new[q]:
+                    new[q] = new[q - 1] - price
+                    back[j, q] = back[j, q - 1]
+            for q in range(width - 2, -1, -1):
+                if new[q + 1] - price > new[q]:
+                    new[q] = new[q + 1] - price
+                    back[j, q] = back[j, q + 1]
+            for q in range(width):
+                total = gain[z, j, q]
+                if z > 0:
+                    total += 0.5 * gain[z - 1, j, q]
+                if z < nodes - 1:
+                    total += 0.5 * gain[z + 1, j, q]
+                best[q] = new[q] + total
+        q = int(np.argmax(best))
+        for j in range(columns - 1, -1, -1):
+            out[z, j] = shift[z, j] + q - reach
+            q = back[j, q]
+    return out

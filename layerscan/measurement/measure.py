@@ -319,7 +319,7 @@ def describe_field(
         correlation_length=length,
         lateral_noise=np.array([float(np.median(u)) for u in traces.u]),
         replication=traces.model.replication if edges > 2 else None,
-        terminations=np.zeros(edges, np.int64),
+        terminations=followed.terminations,
         flags=_field_flags(straight),
     )
 

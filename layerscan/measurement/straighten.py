@@ -16,6 +16,7 @@ from layerscan.measurement.field import (
     fit_frame,
     refine_shift,
     sample_field,
+    settle_shift,
     track_columns,
 )
 
@@ -25,6 +26,7 @@ if TYPE_CHECKING:
     from layerscan.records import FloatArray, Region
 
 MOST_STATIONS = 1500
+MEMORY = 12  # columns that the evolving profile remembers
 
 
 @dataclass(frozen=True, kw_only=True, eq=False)
@@ -74,14 +76,13 @@ def straighten(
     if high - low < 4 or right - left < 1:
         raise MeasurementError("The region is too small to follow layers in it. Choose a larger region.")
     coarse = max(1, int(period // 20))  # depth samples joined for the alignment
-    width = max(1, int(min(period / 8, (right - left) / 24)))
+    width = max(1, int(min(period / 5, (right - left) / 24)))
     step = float(coarse)
     count = int((high - low) / step) + 1
     columns = max(int((right - left) / width), 1)
     start = left + 0.5 * ((right - left) - (columns - 1) * width)
     flat = np.zeros((1, columns))
     field = sample_field(image, frame.vector(), low, step, count, start, float(width), width, flat, 0.0, 1.0)
-    field = _reduce_gain(field)
     shift, node_start, node_step = _align(field, period / step)
     # final stations: as wide as the total number allows
     fine = max(1, math.ceil((right - left) / MOST_STATIONS))
@@ -116,10 +117,6 @@ def _extent(frame: Frame, region: Region, period: float) -> tuple[float, float, 
     return math.floor(low), math.ceil(high), math.floor(left), math.ceil(right)
 
 
-def _reduce_gain(field: NDArray[np.float32]) -> NDArray[np.float32]:
-    return np.ascontiguousarray(field, dtype=np.float32)
-
-
 def _align(field: NDArray[np.float32], period: float) -> tuple[FloatArray, float, float]:
     """Shift at nodes along the depth for every column, and where the nodes lie; all in samples of ``field``."""
     count, columns = field.shape
@@ -135,8 +132,9 @@ def _align(field: NDArray[np.float32], period: float) -> tuple[FloatArray, float
     covered = seen.sum(axis=0)
     full = np.flatnonzero(covered >= 0.9 * covered.max())
     first = int(full[np.argmin(np.abs(full - np.mean(full)))])
-    memory = max(4, int(16))
-    shift, _ = track_columns(field, first, nodes, node_step, node_start, half, reach, memory)
+    shift, _ = track_columns(field, first, nodes, node_step, node_start, half, reach, MEMORY)
+    template = aligned_mean(field, shift, node_start, node_step)
+    shift = settle_shift(field, template, shift, node_start, node_step, half, int(0.7 * period) + 1, 0.15)
     for width in (4.0, 2.5):
         template = aligned_mean(field, shift, node_start, node_step)
         shift = refine_shift(field, template, shift, node_start, node_step, half, reach, width)

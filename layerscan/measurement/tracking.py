@@ -51,6 +51,7 @@ class FollowedStack:
     first: int
     profile: FloatArray
     variance: FloatArray
+    terminations: NDArray[np.int64]
 
 
 @njit(cache=True)  # type: ignore[untyped-decorator]
@@ -221,10 +222,12 @@ def normalise(field, centre, gain):  # type: ignore[no-untyped-def]
     return out
 
 
-def usable_depth(field: NDArray[np.float32]) -> tuple[int, int]:
-    """First and last + 1 depth sample that enough stations show."""
-    number = np.isfinite(field).sum(axis=1)
-    enough = np.flatnonzero(number >= max(LEAST_COVERAGE * number.max(), 1))
+def usable_depth(straight: StraightField) -> tuple[int, int]:
+    """First and last + 1 depth sample that enough of the length along the layers shows."""
+    number = np.isfinite(straight.intensity).sum(axis=1)
+    depth = straight.depth_start + np.arange(len(number))
+    length = number * np.maximum(1 - straight.frame.curvature * depth, 0.0)
+    enough = np.flatnonzero((length >= LEAST_COVERAGE * length.max()) & (number > 0))
     return int(enough[0]), int(enough[-1]) + 1
 
 
@@ -251,7 +254,7 @@ def follow_layers(
     FollowedStack or None
         None where no two boundaries were found.
     """
-    low, high = usable_depth(straight.intensity)
+    low, high = usable_depth(straight)
     field = np.ascontiguousarray(straight.intensity[low:high])
     stations = field.shape[1]
     flat = np.zeros((0, stations))
@@ -289,7 +292,71 @@ def follow_layers(
             moved = np.stack([np.interp(again.position, stack.position, column) for column in moved.T], axis=1)
         stack = again
     assert traces is not None
-    return _followed(straight, stack, traces, low, mean, _variance(single, number), period)
+    even = normalise(field, centre, gain)
+    window = max(int(1.5 * period / straight.station_step), 4)
+    ended, gone = find_terminations(even, stack, traces, window)
+    return _followed(straight, stack, traces, low, mean, _variance(single, number), period, ended, gone)
+
+
+@njit(cache=True)  # type: ignore[untyped-decorator]
+def layer_values(even, position, moved, window):  # type: ignore[no-untyped-def]
+    """Mean normalised intensity in the core of each layer at each station, over a window of stations; NaN if unseen."""
+    count, stations = even.shape
+    layers = position.size - 1
+    total = np.zeros((layers, stations + 1))
+    number = np.zeros((layers, stations + 1))
+    for i in range(layers):
+        for j in range(stations):
+            top, bottom = position[i] + moved[i, j], position[i + 1] + moved[i + 1, j]
+            centre = 0.5 * (top + bottom)
+            half = 0.25 * (position[i + 1] - position[i])
+            total[i, j + 1] = total[i, j]
+            number[i, j + 1] = number[i, j]
+            for d in range(max(int(math.ceil(centre - half)), 0), min(int(centre + half) + 1, count)):
+                if even[d, j] == even[d, j]:
+                    total[i, j + 1] += even[d, j]
+                    number[i, j + 1] += 1
+    out = np.full((layers, stations), np.nan)
+    for i in range(layers):
+        for j in range(stations):
+            low, high = max(j - window // 2, 0), min(j + window // 2 + 1, stations)
+            n = number[i, high] - number[i, low]
+            if n > 0:
+                out[i, j] = (total[i, high] - total[i, low]) / n
+    return out
+
+
+def find_terminations(
+    even: NDArray[np.float32], stack: Stack, traces: Traces, window: int
+) -> tuple[NDArray[np.int64], BoolArray]:
+    """Layers that end inside the field: terminations of each boundary, and stations where it does not exist.
+
+    A layer is absent where its core, averaged over ``window`` stations, looks like its neighbours; an absence as long
+    as the window that reaches the end of the layer's trace is a termination, any other a gap.
+    """
+    edges, stations = traces.valid.shape
+    gone = np.zeros((edges, stations), bool)
+    ended = np.zeros(edges, np.int64)
+    values = layer_values(even, stack.fit.best_position, traces.smooth, window)
+    for i in range(edges - 1):
+        typical = float(np.nanmedian(values[i])) if np.isfinite(values[i]).any() else math.nan
+        nominal = 1.0 if stack.phase[i + 1] == BRIGHT else 0.0
+        level = nominal if not abs(typical - nominal) < 0.4 else typical
+        seen = np.isfinite(values[i])
+        absent = seen & (np.abs(values[i] - level) > 0.5 * max(abs(1 - nominal - level), 0.5))
+        if not absent.any():
+            continue
+        starts = np.flatnonzero(np.diff(np.concatenate([[0], absent.astype(np.int8), [0]])) == 1)
+        stops = np.flatnonzero(np.diff(np.concatenate([[0], absent.astype(np.int8), [0]])) == -1)
+        shown = np.flatnonzero(seen)
+        for start, stop in zip(starts, stops, strict=True):
+            if stop - start < window:
+                continue
+            gone[i : i + 2, start:stop] = True
+            at_end = start <= shown[0] or stop > shown[-1]
+            if at_end and stop - start < 0.9 * len(shown):
+                ended[i : i + 2] += 1
+    return ended, gone
 
 
 def _hints(stack: Stack, noise: FloatArray, full_scale: float | None) -> Hints:
@@ -363,10 +430,12 @@ def _trace(
 
 
 def _followed(
-    straight: StraightField, stack: Stack, traces: Traces, low: int, mean: FloatArray, variance: FloatArray, period: float
+    straight: StraightField, stack: Stack, traces: Traces, low: int, mean: FloatArray, variance: FloatArray, period: float,
+    ended: NDArray[np.int64], gone: BoolArray,
 ) -> FollowedStack:
     stations = np.arange(traces.raw.shape[1])
-    valid = traces.valid
+    valid = traces.valid & ~gone
+    valid = np.where((valid.sum(axis=1) < 4)[:, None], traces.valid, valid)
     deviation = traces.smooth
     aligned = low + stack.position[:, None] + deviation
     depth = straight.frame_depth(aligned, np.broadcast_to(stations, aligned.shape))
@@ -378,7 +447,7 @@ def _followed(
     normal = np.concatenate([np.zeros_like(base[:1]), np.cumsum(steps, axis=0)]) + (depth - base) * cosine
     return FollowedStack(
         stack=stack, traces=traces, depth=np.where(valid, depth, np.nan), normal=np.where(valid, normal, np.nan),
-        cosine=cosine, valid=valid, first=low, profile=mean, variance=variance,
+        cosine=cosine, valid=valid, first=low, profile=mean, variance=variance, terminations=ended,
     )  # fmt: skip
 
 
