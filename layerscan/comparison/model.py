@@ -18,7 +18,10 @@ REACH = 0.15
 
 @dataclass(frozen=True, kw_only=True, eq=False)
 class StackModel:
-    """One flat stack under one illumination; ``names`` are the rows of ``index``, ``sequence`` counts them."""
+    """One flat stack under one illumination; ``names`` are the rows of ``index``, ``sequence`` counts them.
+
+    The first row is the incident medium and the last the substrate, even where a layer is of the same material.
+    """
 
     names: tuple[str, ...]
     index: ComplexArray
@@ -47,6 +50,16 @@ class StackModel:
         )
         result: FloatArray = 1.0 - transmittance[0] if through else reflectance[0]
         return result
+
+    def order_numbers(self) -> FloatArray | None:
+        """Bragg order at each wavelength, or None where nothing repeats."""
+        import numpy as np
+
+        from layerscan.optics.stack import order_numbers
+
+        sequence = np.array(self.sequence, dtype=np.int64)
+        grid = self.wavelength_nm
+        return order_numbers(self.index, sequence, self.thickness_nm, grid, grid, self.aoi_deg)
 
     def scaled(self, factor: float) -> StackModel:
         """All thicknesses times a factor."""
@@ -118,17 +131,17 @@ def rebuild_stack(prediction: Prediction) -> StackModel:
     if len(structure.sequence) != len(structure.thickness_nm) + 2 or not structure.thickness_nm:
         raise InputError("The prediction does not say material and thickness of each layer. Predict again.")
     wavelength = _wider_grid(prediction.reflectance.wavelength_nm)
-    names = tuple(dict.fromkeys(structure.sequence))
-    rows: list[ComplexArray] = []
-    for name in names:
-        if name.startswith("absorber"):  # matched to the real index of the last layer: nothing comes back from behind
-            rows.append(index_of(_medium(structure.sequence[-2], settings), wavelength).real.astype(complex))
-        else:
-            rows.append(index_of(_medium(name, settings), wavelength))
+    first, *inner, last = structure.sequence
+    layers = tuple(dict.fromkeys(inner))
+    rows = [index_of(_medium(name, settings), wavelength) for name in (first, *layers)]
+    if last.startswith("absorber"):  # matched to the real index of the last layer: nothing comes back from behind
+        rows.append(rows[1 + layers.index(inner[-1])].real.astype(complex))
+    else:
+        rows.append(index_of(_medium(last, settings), wavelength))
     return StackModel(
-        names=names,
+        names=(first, *layers, last),
         index=np.array(rows),
-        sequence=tuple(names.index(name) for name in structure.sequence),
+        sequence=(0, *(1 + layers.index(name) for name in inner), len(rows) - 1),
         thickness_nm=np.array(structure.thickness_nm, dtype=np.float64),
         wavelength_nm=wavelength,
         aoi_deg=float(settings.get("angle", 0.0)),

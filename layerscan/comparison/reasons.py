@@ -24,7 +24,9 @@ ALIKE_RMS = 0.02
 of known thickness to 0.007-0.011 at best and 0.02-0.05 in general (data of arXiv:2602.06316)."""
 
 UNKNOWN_TOLERANCE_NM = 2.0  # how near a peak must come where nothing states an uncertainty
-GRID_POINTS = 8
+GRID_POINTS = 16
+JUMP = 0.08  # a band that moves further than this (relative) from one step to the next has been lost
+REACHED_NM = 0.5  # a solution whose peak is further than this from the target is none: the peak jumps there
 LENGTH_SOURCES = (
     "shrinkage or swelling, compression by the knife (20-35 % with a 45 degree knife, nearly none with an oscillating "
     "one: Studer and Gnaegi, J. Microsc. 197 (2000) 94), an oblique cut, a wrong pixel size (better than 5 % when "
@@ -96,8 +98,9 @@ def find_reasons(
 
     Notes
     -----
-    Misfit = (peak difference / u)^2 + m (RMS / 0.02)^2, with m = 2 range / band width as the number of independent
-    stretches of a spectrum, and the noise instead of 0.02 where it is larger: a chi-square in spirit, good for ranking.
+    Misfit = (peak difference / u)^2 + m (RMS / 0.02)^2, with the RMS after a fit of one factor (spot, reference and
+    scattering decide heights too), m = 2 range / band width as the number of independent stretches of a spectrum, and
+    the noise instead of 0.02 where it is larger: a chi-square in spirit, good for ranking.
     One change at a time; two together can always do more. The peak is followed from its present place in small steps,
     so that it keeps its order. A change that cannot be partial is listed only where its evidence is positive.
     """
@@ -107,7 +110,7 @@ def find_reasons(
         model = rebuild_stack(prediction)
     except InputError as error:
         return Found(note=f"no reasons were sought: {error}")
-    follow = _Follower(through=pair.through)
+    follow = _Follower(through=pair.through, order=match.predicted.order)
     now = follow.peak(model, match.predicted.wavelength_nm)
     if now is None:
         return Found(note="no reasons were sought: the peak of the flat stack could not be followed")
@@ -257,16 +260,21 @@ def _with(model: StackModel, **fields: float) -> StackModel:
 
 @dataclass(frozen=True, kw_only=True)
 class _Follower:
-    """Reads the peak that lies nearest to where it was a step ago."""
+    """Reads one band: that of a known order, or else the one nearest to where it was a step ago."""
 
     through: bool
+    order: int | None
 
     def peak(self, model: StackModel, near_nm: float) -> float | None:
         from layerscan.optics.peaks import find_peaks
 
-        peaks = find_peaks(model.wavelength_nm, model.curve(through=self.through), relative_height=0.1, smooth=False)
+        numbers = None if self.order is None else model.order_numbers()
+        curve = model.curve(through=self.through)
+        peaks = find_peaks(model.wavelength_nm, curve, order=numbers, relative_height=0.1, smooth=False)
+        if numbers is not None:
+            return next((peak.wavelength_nm for peak in peaks if peak.order == self.order), None)
         place = min((p.wavelength_nm for p in peaks), key=lambda value: abs(value - near_nm), default=None)
-        return place if place is not None and abs(place - near_nm) < 0.12 * near_nm else None
+        return place if place is not None and abs(place - near_nm) < JUMP * near_nm else None
 
 
 def _explain(
@@ -326,13 +334,11 @@ class _Misfit:
         return np.interp(self.pair.wavelength_nm, model.wavelength_nm, model.curve(through=follow.through))
 
     def rms(self, curve: FloatArray) -> float:
-        """RMS difference from the observed bands; where the scale is free, after a fit of it."""
+        """RMS difference from the observed bands after a fit of one factor: spot and reference decide heights too."""
         import numpy as np
 
         seen = self.pair.bands(self.pair.observed)
-        factor = 1.0
-        if self.pair.scale is not None:
-            factor = float(curve @ seen) / max(float(seen @ seen), 1e-12)
+        factor = float(curve @ seen) / max(float(seen @ seen), 1e-12)
         return float(np.sqrt(np.mean((curve - factor * seen) ** 2)))
 
     def of(self, curve: FloatArray, difference_nm: float) -> float | None:
@@ -366,26 +372,22 @@ def _solve(change: Change, follow: _Follower, now: float, target: float) -> tupl
 
 def _refine(
     change: Change, follow: _Follower, low: tuple[float, float], high: tuple[float, float], target: float
-) -> tuple[float, float]:
-    """Regula falsi with halving between two values whose peaks enclose the target; to 0.02 nm."""
+) -> tuple[float, float] | None:
+    """Regula falsi with halving between values whose peaks enclose the target; None where the peak jumps over it."""
     (a, peak_a), (b, peak_b) = low, high
     slope = (peak_b - peak_a) / (b - a)
-    value = a
-    for turn in range(12):
+    for turn in range(14):
         value = a + (target - peak_a) / (peak_b - peak_a) * (b - a) if turn % 3 != 2 else 0.5 * (a + b)
         place = follow.peak(change.apply(value), target)
         if place is None:
-            break
+            return None
         if abs(place - target) < 0.02:
-            break
+            return value, slope
         if (peak_a - target) * (place - target) <= 0:
             b, peak_b = value, place
         else:
             a, peak_a = value, place
-        if peak_b == peak_a:
-            break
-        slope = (peak_b - peak_a) / (b - a)
-    return value, slope
+    return (value, slope) if place is not None and abs(place - target) < REACHED_NM else None
 
 
 def _look_alike(found: Sequence[Explanation], pair: Pair) -> list[tuple[str, ...]]:

@@ -126,6 +126,27 @@ def test_thickness_and_index_look_alike_for_one_peak_at_normal_incidence():
     assert any(name.startswith("index of n=1.5") for name in alike)
 
 
+def test_scale_is_recovered_from_a_narrow_high_order():
+    # shared facts, optics_checks: nacre-like 450/30 nm shows orders 534 and 400 nm in the visible; scale of truth 0.95
+    settings = make_settings(dark="n=1.43", bright="n=1.683", incident="n=1.33", substrate="n=1.43")
+    prediction = predict_light(make_table(layers=41, thickness=(30.0, 450.0)), settings)
+    truth = make_table(layers=41, thickness=(30.0, 450.0), scale=0.95)
+    seen = seen_of(predict_light(truth, settings.model_copy(update={"draws": 0})), noise=0.01)
+    answer = compare_light(prediction, replace(seen, value=0.6 * seen.value), ABSOLUTE)
+    assert names(answer)[0] == "scale of all thicknesses"
+    assert answer.reasons[0].values[0] == pytest.approx(0.95, abs=0.003)
+    assert "times as high" not in answer.sentence
+
+
+def test_gap_in_the_layers_leaves_the_medium_in_front_alone(prediction):
+    model = rebuild_stack(prediction)
+    gap = next(row for row in model.main_materials() if model.names[row] == "air")
+    changed = model.with_index(gap, 1.33, at_nm=500.0)
+    assert model.names[model.sequence[0]] == "air"
+    assert changed.index_at(changed.sequence[0], 500.0) == model.index_at(0, 500.0)
+    assert changed.index_at(gap, 500.0) == pytest.approx(1.33)
+
+
 def test_lit_side_is_a_reason_where_the_stack_is_chirped_and_absorbs():
     # shared facts, optics_checks: an absorbing chirped stack shows another colour from each end
     nm = np.linspace(70, 115, 40)
