@@ -58,9 +58,20 @@ def observed_spectra(results: StudyResults, specimen: Specimen) -> list[Spectrum
     return [s for s in own if s.state == "done" and s.document is not None]
 
 
-def observed_peak(spectra: Iterable[SpectrumResult]) -> PeakMean | None:
+def observed_peak(specimen: Specimen, spectra: Iterable[SpectrumResult]) -> PeakMean | None:
     """Main observed peak (of transmittance: dip) of a specimen over its spectra."""
-    return mean_peak([peak for spectrum in spectra if (peak := spectrum.main_peak()) is not None])
+    return mean_peak([peak for spectrum in spectra if (peak := _read_peak(specimen, spectrum)) is not None])
+
+
+def _read_peak(specimen: Specimen, spectrum: SpectrumResult) -> Mapping[str, Any] | None:
+    """The peak as a comparison read it, with its uncertainty; as read from the spectrum alone where there is none."""
+    for image in specimen.images:
+        compared = image.compare.get(spectrum.unit.key)
+        peaks = (compared.document or {}).get("observed_peaks") if compared else None
+        if peaks:
+            tallest: Mapping[str, Any] = max(peaks, key=lambda peak: float(peak["reflectance"]))
+            return tallest
+    return spectrum.main_peak()
 
 
 def representative_image(specimen: Specimen) -> ImageResult | None:
@@ -175,7 +186,7 @@ def specimen_rows(
     rows = []
     for specimen in specimens:
         spectra = observed_spectra(results, specimen)
-        predicted, observed = predicted_peak(specimen), observed_peak(spectra)
+        predicted, observed = predicted_peak(specimen), observed_peak(specimen, spectra)
         image = representative_image(specimen)
         prediction = (image.prediction if image else None) or {}
         estimates = [e for name in quantities if (e := specimen.estimate(name)) is not None]
@@ -215,7 +226,7 @@ def peak_pairs(results: StudyResults, specimens: Sequence[Specimen]) -> tuple[Pe
     pairs = []
     for specimen in specimens:
         spectra = observed_spectra(results, specimen)
-        predicted, observed = predicted_peak(specimen), observed_peak(spectra)
+        predicted, observed = predicted_peak(specimen), observed_peak(specimen, spectra)
         if predicted is None or observed is None:
             continue
         kinds = [(s.document or {})["kind"] for s in spectra]

@@ -2,13 +2,15 @@
 
 from __future__ import annotations
 
+import contextlib
 import csv
+import gc
 import glob
 import hashlib
 import os
 import re
 import tomllib
-from collections.abc import Callable, Iterator, Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any, Generic, TypeVar
@@ -18,6 +20,7 @@ from pydantic import ValidationError
 from layerscan.errors import InputError, LayerscanError, SettingsError
 from layerscan.records import SpectrumKind
 from layerscan.settings import CompareSettings, MeasureSettings, PredictSettings, Settings, change_settings
+from layerscan.study.manifest import fill_nested, read_column, read_pattern, several_numbers
 from layerscan.study.tables import (
     ImageEntry,
     PlanTables,
@@ -32,6 +35,9 @@ MAX_PLAN_BYTES = 16 * 2**20
 
 MAX_ROWS = 2_000_000
 """More images than this are refused: split the study."""
+
+MAX_PROBLEMS = 1000
+"""Problems beyond this number are counted, not listed."""
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -137,7 +143,20 @@ def read_plan(path: str | os.PathLike[str]) -> StudyPlan:
         tables = PlanTables(**raw)
     except ValidationError as error:
         raise SettingsError(explain_plan_errors(error, file_name=path.name, text=text)) from None
-    return _Resolver(path, text, tables, sha256).resolve()
+    with _without_collecting():
+        return _Resolver(path, text, tables, sha256).resolve()
+
+
+@contextlib.contextmanager
+def _without_collecting() -> Iterator[None]:
+    """No search for reference cycles meanwhile: over a million new rows it would cost half as much again."""
+    was_on = gc.isenabled()
+    gc.disable()
+    try:
+        yield
+    finally:
+        if was_on:
+            gc.enable()
 
 
 def _read_text(path: Path) -> tuple[str, str]:
@@ -219,6 +238,7 @@ class _Resolver:
     tables: PlanTables
     sha256: str
     problems: list[Problem] = field(default_factory=list)
+    unlisted: int = 0
 
     def __post_init__(self) -> None:
         self.folder = self.path.parent.absolute()
@@ -231,6 +251,9 @@ class _Resolver:
         images = self._images(measure, predict)
         spectra = self._spectra(compare, images)
         self._look_at_design(images)
+        if self.unlisted:
+            text = f"{self.unlisted} more problems are not listed"
+            self.problems.append(Problem(place=self.path.name, text=text, severity="missing"))
         if not images:
             why = f": {self.problems[0].text}" if self.problems else ""
             raise InputError(f"{self.path.name} leads to no image at all{why}. Correct [[images]].")
@@ -257,7 +280,10 @@ class _Resolver:
             raise SettingsError(f"{where}: {error}") from None
 
     def _note(self, place: str, text: str, severity: str) -> None:
-        self.problems.append(Problem(place=place, text=text, severity=severity))
+        if len(self.problems) < MAX_PROBLEMS:
+            self.problems.append(Problem(place=place, text=text, severity=severity))
+        else:
+            self.unlisted += 1
 
     # --- images
 
@@ -297,7 +323,7 @@ class _Resolver:
         changes = dict(values.get("measure") or {})
         for short in ("region", "page", "pixel_size"):
             if values.get(short) is not None:
-                changes[short] = _several_numbers(values[short]) if short == "region" else values[short]
+                changes[short] = several_numbers(values[short]) if short == "region" else values[short]
         light = dict(values.get("predict") or {})
         settings = measures.change(changes) if changes else measures.shared
         assert settings is not None
@@ -405,7 +431,7 @@ class _Resolver:
             return
         if os.path.isabs(pattern) and not self.tables.study.allow_outside:
             self.folders.locate(pattern, place)
-        glob_text, expression = _read_pattern(pattern, place, ImageEntry.model_fields)
+        glob_text, expression = read_pattern(pattern, place, ImageEntry.model_fields)
         matched = False
         for name in sorted(glob.glob(glob_text, root_dir=self.folder, recursive=True)):
             fields = expression.fullmatch(name.replace(os.sep, "/"))
@@ -433,7 +459,7 @@ class _Resolver:
         first = stream.readline()
         delimiter = max(",;\t", key=first.count)
         header = next(csv.reader([first], delimiter=delimiter), [])
-        columns = [_column(text, name, kind) for text in header]
+        columns = [read_column(text, name, kind) for text in header]
         if len(set(columns)) != len(columns):
             raise SettingsError(f"{name}, line 1: a column stands twice. Remove one.")
         if ("file",) not in columns:
@@ -451,7 +477,7 @@ class _Resolver:
             if plain:
                 values.update((key, cell.strip()) for key, cell in zip(names, cells, strict=True) if cell.strip())
             else:
-                _fill_nested(values, columns, cells)
+                fill_nested(values, columns, cells)
             if not values.get("file"):
                 raise SettingsError(f"{place}: no file. Name one, or delete the row.")
             yield values, place
@@ -515,80 +541,3 @@ def _make_key(name: str, taken: set[str], parts: tuple[Any, ...]) -> str:
         key += "_" + hashlib.sha256(repr((name, parts)).encode()).hexdigest()[:8]
     taken.add(key)
     return key
-
-
-def _read_pattern(pattern: str, place: str, known: Mapping[str, Any]) -> tuple[str, re.Pattern[str]]:
-    """Glob and regular expression of a pattern; ``{name}`` stands for a part without '/' and fills the key ``name``."""
-    allowed = [name for name in known if name in ("group", "specimen", "section", "position", "note")]
-    allowed += ["spot"]
-    glob_text, expression = "", ""
-    for part in re.split(r"(\{[^}]*\}|\*\*/|\*|\?|\[[^\]]+\])", pattern):
-        if part.startswith("{"):
-            name = part[1:-1]
-            if name not in allowed:
-                raise SettingsError(
-                    f"{place}: pattern '{pattern}' has the unknown part '{part}'. The nearest is "
-                    f"'{{{nearest_name(name, allowed)}}}'; known are {', '.join(allowed)}."
-                )
-            glob_text += "*"
-            expression += f"(?P={name})" if f"(?P<{name}>" in expression else f"(?P<{name}>[^/]+?)"
-        elif part == "**/":
-            glob_text, expression = glob_text + part, expression + "(?:.*/)?"
-        elif part in ("*", "?"):
-            glob_text, expression = glob_text + part, expression + ("[^/]*" if part == "*" else "[^/]")
-        elif part.startswith("[") and part.endswith("]"):
-            inner = part[1:-1].replace("\\", r"\\")
-            glob_text, expression = glob_text + part, expression + f"[{'^' + inner[1:] if inner[0] == '!' else inner}]"
-        else:
-            glob_text, expression = glob_text + glob.escape(part), expression + re.escape(part)
-    return glob_text, re.compile(expression)
-
-
-def _column(text: str, file_name: str, kind: type[Settings]) -> tuple[str, ...]:
-    """Key of a CSV column: a key of the entry, or ``measure.NAME``, ``predict.NAME``, ``compare.NAME``."""
-    tables: dict[str, type[Settings]] = {
-        "measure": MeasureSettings,
-        "predict": PredictSettings,
-        "compare": CompareSettings,
-    }
-    tables = {name: table for name, table in tables.items() if name in kind.model_fields}
-    plain = [name for name in kind.model_fields if name != "table" and name not in tables]
-    head, _, rest = text.strip().partition(".")
-    if not rest and head in plain:
-        return (head,)
-    if rest and head in tables and rest in tables[head].model_fields:
-        return head, rest
-    known = plain + [f"{name}.{field}" for name, table in tables.items() for field in table.model_fields]
-    raise SettingsError(
-        f"{file_name}, line 1: unknown column '{text}'. The nearest is '{nearest_name(text, known)}'; "
-        f"known are {', '.join(plain)} and {', '.join(f'{t}.SETTING' for t in tables)}."
-    )
-
-
-_LISTS: Mapping[str, Callable[[str], Any]] = {
-    "region": lambda text: _several_numbers(text),
-    "line": lambda text: _several_numbers(text),
-    "lab": lambda text: _several_numbers(text),
-    "edits": lambda text: tuple(part.strip() for part in text.split(";") if part.strip()),
-}
-
-
-def _fill_nested(values: dict[str, Any], columns: Sequence[tuple[str, ...]], cells: Sequence[str]) -> None:
-    for column, cell in zip(columns, cells, strict=True):
-        text = cell.strip()
-        if not text:
-            continue
-        if len(column) == 1:
-            values[column[0]] = text
-        else:
-            head, name = column
-            values[head] = {**values.get(head, {}), name: _LISTS[name](text) if name in _LISTS else text}
-
-
-def _several_numbers(value: Any) -> Any:
-    if not isinstance(value, str):
-        return value
-    try:
-        return tuple(float(part) if "." in part else int(part) for part in re.split(r"[,;\s]+", value.strip("()[] ")))
-    except ValueError:
-        raise SettingsError(f"'{value}' are not numbers separated by commas.") from None

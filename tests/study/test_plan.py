@@ -206,6 +206,9 @@ def test_a_long_manifest_is_read_row_by_row(tmp_path):
     images = read_plan(tmp_path).images
     assert len({image.key for image in images}) == 20_000
     assert len({id(image.measure) for image in images}) == 1
+    problems = read_plan(tmp_path).problems
+    assert len(problems) == 1001
+    assert "19000 more problems are not listed" in problems[-1].text
 
 
 def test_more_rows_than_the_limit_are_refused_with_the_reason(tmp_path, monkeypatch):
