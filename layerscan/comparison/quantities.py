@@ -154,9 +154,15 @@ def _checked(observed: Spectrum) -> tuple[FloatArray, FloatArray]:
 
 
 def _fitted_scale(predicted: FloatArray, observed: FloatArray) -> float:
-    """Least-squares factor on the observed values; refused where it is not positive."""
-    total = float(observed @ observed)
-    factor = float(predicted @ observed) / total if total > 0 else 0.0
+    """Least-squares factor on the observed values, both sides sorted; refused where it is not positive.
+
+    Sorting makes the factor one of heights alone: a band that lies elsewhere does not pull it down.
+    """
+    import numpy as np
+
+    high, seen = np.sort(predicted), np.sort(observed)
+    total = float(seen @ seen)
+    factor = float(high @ seen) / total if total > 0 else 0.0
     if factor <= 0:
         raise InputError("No positive factor brings the observed spectrum to the predicted one: is it all zero?")
     return factor

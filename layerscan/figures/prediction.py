@@ -153,4 +153,5 @@ def _headline(prediction: Prediction) -> str:
     inside = list(dict.fromkeys(structure.sequence[1:-1]))
     names = ", ".join(short_name(name) for name in inside[:4]) + (", …" if len(inside) > 4 else "")
     first, last = (short_name(structure.sequence[i]) for i in (0, -1))
+    last = "absorber" if last.startswith("absorber") else last
     return f"Predicted: {layers} of {names}; light from {first}, behind them {last}"

@@ -56,7 +56,7 @@ def series_drawing(prediction: Prediction) -> Drawing:
 
 def describe_series(series: Series) -> str:
     """Each step in words: the value, the main peak and the colour."""
-    unit = f" {series.unit}" if series.unit else ""
+    unit = f" {series.unit}" if series.unit not in ("", "1") else ""
     parts = []
     for point in series.points[:: max(1, -(-len(series.points) // 40))]:
         main = max(point.peaks, key=lambda peak: peak.reflectance, default=None)
@@ -67,7 +67,7 @@ def describe_series(series: Series) -> str:
 
 def axis_name(series: Series) -> str:
     """Name and unit of the varied quantity."""
-    return f"{series.name} ({series.unit})" if series.unit else series.name
+    return f"{series.name} ({series.unit})" if series.unit not in ("", "1") else series.name
 
 
 def _edges(series: Series) -> list[float]:

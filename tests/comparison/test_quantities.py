@@ -39,6 +39,14 @@ def test_free_scale_finds_the_factor(factor):
     assert "scale_free" in pair.flags
 
 
+def test_free_scale_does_not_depend_on_where_the_band_lies():
+    # change that must not matter: the same band 80 nm away
+    prediction = make_prediction(centre=545.0)
+    wavelength = prediction.reflectance.wavelength_nm
+    seen = observed(wavelength, 0.5 * bell(wavelength, 465.0))
+    assert like_with_like(prediction, seen, CompareSettings(scale="free")).scale == pytest.approx(2.0, rel=0.01)
+
+
 def test_noise_is_found_under_a_sharp_band():
     # simulation of known noise; a median absolute deviation of 1000 correlated values scatters by about 5 %
     wavelength = np.arange(350.0, 850.0, 0.5)
