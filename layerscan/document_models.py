@@ -305,6 +305,7 @@ class ComparisonDocument(_Document):
     scale: float | None = None
     observed_colour: ColourModel | None = None
     observed_peaks: list[PeakModel] = []
+    notes: list[str] = Field([], description="doubts about the observed spectrum")
 
 
 class InspectionDocument(_Document):

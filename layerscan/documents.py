@@ -415,6 +415,7 @@ def comparison_document(comparison: records.Comparison) -> dict[str, Any]:
         "scale": c.scale,
         "observed_colour": c.observed_colour and asdict(c.observed_colour),
         "observed_peaks": [asdict(peak) for peak in c.observed_peaks],
+        "notes": c.notes,
     }
     return _complete(document, models.ComparisonDocument)
 

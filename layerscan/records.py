@@ -558,6 +558,7 @@ class Comparison:
     scale: float | None = None  # factor on the observed spectrum where --scale free
     observed_colour: Colour | None = None
     observed_peaks: tuple[Peak, ...] = ()
+    notes: tuple[str, ...] = ()  # doubts about the observed spectrum
 
 
 # --- what the other commands answer ---------------------------------------------------------------------------------

@@ -176,6 +176,7 @@ def compare(
     if observed is not None and not isinstance(observed, Spectrum):
         origin["observed_source"] = str(observed)
         observed = open_spectrum(observed, quantity=chosen.quantity)
+    origin["notes"] = () if observed is None else observed.doubts
     return replace(compare_light(prediction, observed, chosen, progress=progress), **origin)
 
 

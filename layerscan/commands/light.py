@@ -103,7 +103,7 @@ def compare(prediction: str, observed: str | None, out: str | None, as_json: boo
         light = documents.read_prediction(prediction)
         document = documents.write_comparison(out, answer, figure=draw_comparison(answer, light, spectrum))
     print_document(document, as_json=as_json, lines=_comparison_lines(answer))
-    print_notes(answer.flags)
+    print_notes(answer.flags, *answer.notes)
 
 
 def _comparison_lines(answer: Comparison) -> Iterator[str]:
@@ -119,12 +119,18 @@ def _comparison_lines(answer: Comparison) -> Iterator[str]:
         yield f"  RMS               {answer.rms:.4f}"
     if answer.delta_e00 is not None:
         yield f"  colour difference {answer.delta_e00:.2f} (CIEDE2000)"
+    yield from _reason_lines(answer)
+
+
+def _reason_lines(answer: Comparison) -> Iterator[str]:
+    alike: dict[frozenset[str], None] = {}
     for reason in answer.reasons:
         changes = ", ".join(f"{p} {v:.4g}" for p, v in zip(reason.parameters, reason.values, strict=True))
-        alike = (
-            f"; not to be told from {', '.join(reason.indistinguishable_from)}" if reason.indistinguishable_from else ""
-        )
-        yield f"  would explain it  {changes} ({'; '.join(reason.prior)}){alike}"
+        yield f"  would explain it  {changes} ({'; '.join(reason.prior)})"
+        if reason.indistinguishable_from:
+            alike[frozenset((", ".join(reason.parameters), *reason.indistinguishable_from))] = None
+    for names in alike:
+        yield f"  not told apart    {'; '.join(sorted(names))}"
 
 
 @click.command()
