@@ -66,7 +66,8 @@ def read_layer_table(path: Path | str) -> records.LayerTable:
     """Read layers for optics: an ``--out`` folder, its ``measurement.json``, or a table of layers made by hand.
 
     A table needs a header with ``thickness_nm`` and ``material`` or ``phase``; ``u_nm``, ``sd_lateral_nm`` and
-    ``complete`` are read where present. Layers come in the order of the rows.
+    ``complete`` are read where present. Layers come in the order of the rows. Where every layer states ``u_nm``, the
+    largest part of it that all can share counts as common to them (calibration).
 
     Raises
     ------
@@ -90,7 +91,19 @@ def read_layer_table(path: Path | str) -> records.LayerTable:
     if "material" not in columns and "phase" not in columns:
         raise InputError(f"'{path}' has neither a column 'material' nor 'phase'. Say what each layer is made of.")
     layers = tuple(_read_layer(path, line, row, index) for index, (line, row) in enumerate(rows))
-    return records.LayerTable(layers=layers, source=str(path), sha256=file_sha256(path))
+    return records.LayerTable(
+        layers=layers, source=str(path), sha256=file_sha256(path), u_scale_relative=_largest_common_u(layers)
+    )
+
+
+def _largest_common_u(layers: tuple[records.Layer, ...]) -> float | None:
+    """Relative u that all layers may share, None where a layer states none.
+
+    A table does not say which part of its u is common (calibration); the largest that every layer allows is taken,
+    which errs on the side of a wide peak.
+    """
+    relative = [layer.u_nm / layer.thickness_nm for layer in layers if layer.u_nm is not None and layer.thickness_nm]
+    return min(relative) if relative and len(relative) == len(layers) else None
 
 
 def _read_layer(path: Path, line: int, row: dict[str, str], index: int) -> records.Layer:

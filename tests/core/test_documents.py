@@ -199,10 +199,17 @@ def test_a_table_made_by_hand_is_read(tmp_path):
     path = tmp_path / "layers.csv"
     path.write_text("material;thickness_nm;u_nm\nn=1.56; 90 ;1\nair;120;\n")
     table = read_layer_table(path)
+    assert table.u_scale_relative is None  # the second layer states no u
     assert [(x.material, x.thickness_nm, x.u_nm, x.phase) for x in table.layers] == [
         ("n=1.56", 90.0, 1.0, "other"),
         ("air", 120.0, None, "other"),
     ]
+
+
+def test_the_largest_common_part_of_the_uncertainties_counts_as_calibration(tmp_path):
+    path = tmp_path / "layers.csv"
+    path.write_text("material,thickness_nm,u_nm\nn=1.56,100,2\nair,120,1.2\n")
+    assert read_layer_table(path).u_scale_relative == pytest.approx(0.01)
 
 
 @pytest.mark.parametrize(
