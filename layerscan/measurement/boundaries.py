@@ -179,10 +179,11 @@ def model_profile(depth, position, level, shared, active):  # type: ignore[no-un
 
 
 @njit(cache=True)  # type: ignore[untyped-decorator]
-def _accumulate(depth, value, weight, position, level, shared, active, target, precision, belief, band, border, corner, g, gs):  # type: ignore[no-untyped-def]  # noqa: E501
+def _accumulate(depth, value, weight, position, level, shared, active, target, precision, belief, place, band, border, corner, g, gs):  # type: ignore[no-untyped-def]  # noqa: E501
     """Normal equations at the present parameters; returns the cost. Order: level 0, edge 0, level 1, edge 1, ...
 
-    ``belief`` (2, 7) is the mean and the precision of what is known beforehand of each shared parameter.
+    ``belief`` (2, 7) is the mean and the precision of what is known beforehand of each shared parameter, ``place``
+    (2, edges) of each position (precision 0: nothing).
     """
     band[:] = 0.0
     border[:] = 0.0
@@ -269,6 +270,12 @@ def _accumulate(depth, value, weight, position, level, shared, active, target, p
             corner[m, m] += belief[1, m]
             gs[m] += belief[1, m] * off
             cost += belief[1, m] * off * off
+    for b in range(edges):
+        if place[1, b] > 0:
+            off = place[0, b] - position[b]
+            band[2 * b + 1, 0] += place[1, b]
+            g[2 * b + 1] += place[1, b] * off
+            cost += place[1, b] * off * off
     for i in range(edges + 1):
         off = target[i] - level[i]
         band[2 * i, 0] += precision[i]
@@ -356,7 +363,7 @@ def _bordered(band, border, corner, active):  # type: ignore[no-untyped-def]
 
 
 @njit(cache=True)  # type: ignore[untyped-decorator]
-def fit_edges(depth, value, weight, position, level, shared, active, target, precision, belief, rounds, tolerance, full):  # type: ignore[no-untyped-def]  # noqa: E501
+def fit_edges(depth, value, weight, position, level, shared, active, target, precision, belief, place, rounds, tolerance, full):  # type: ignore[no-untyped-def]  # noqa: E501
     """Levenberg-Marquardt on all parameters; returns (position, level, shared, cost, covariance of positions, ok,
     covariance of the shared parameters).
 
@@ -372,7 +379,7 @@ def fit_edges(depth, value, weight, position, level, shared, active, target, pre
     corner = np.empty((SHARED, SHARED))
     g = np.empty(size)
     gs = np.empty(SHARED)
-    cost = _accumulate(depth, value, weight, position, level, shared, active, target, precision, belief, band, border, corner, g, gs)  # noqa: E501
+    cost = _accumulate(depth, value, weight, position, level, shared, active, target, precision, belief, place, band, border, corner, g, gs)  # noqa: E501
     damping = 1e-3
     for _ in range(rounds):
         trial_band = band.copy()
@@ -424,7 +431,7 @@ def fit_edges(depth, value, weight, position, level, shared, active, target, pre
                 new_position[b] = middle + 0.15
         for i in range(edges + 1):
             new_level[i] = level[i] + step[2 * i]
-        new_cost = _accumulate(depth, value, weight, new_position, new_level, new_shared, active, target, precision, belief, band, border, corner, g, gs)  # noqa: E501
+        new_cost = _accumulate(depth, value, weight, new_position, new_level, new_shared, active, target, precision, belief, place, band, border, corner, g, gs)  # noqa: E501
         if new_cost <= cost * (1 + 1e-12):
             gain = cost - new_cost
             position, level, shared, cost = new_position, new_level, new_shared, new_cost
@@ -432,12 +439,12 @@ def fit_edges(depth, value, weight, position, level, shared, active, target, pre
             if gain < tolerance * cost / depth.size:
                 break
         else:
-            _accumulate(depth, value, weight, position, level, shared, active, target, precision, belief, band, border, corner, g, gs)  # noqa: E501
+            _accumulate(depth, value, weight, position, level, shared, active, target, precision, belief, place, band, border, corner, g, gs)  # noqa: E501
             damping = damping * 8 + 1e-6
             if damping > 1e6:
                 break
     covariance = np.zeros((edges, edges))
-    _accumulate(depth, value, weight, position, level, shared, active, target, precision, belief, band, border, corner, g, gs)
+    _accumulate(depth, value, weight, position, level, shared, active, target, precision, belief, place, band, border, corner, g, gs)
     for i in range(size):
         band[i, 0] += 1e-9 * (band[i, 0] + 1e-9)
     ok, solved, inverse = _bordered(band, border, corner, active)
@@ -495,6 +502,7 @@ def fit_boundaries(
     scatter: float | None = None,
     full: bool = True,
     hints: Hints | None = None,
+    place: FloatArray | None = None,
 ) -> EdgeFit:
     """Fit all boundaries of a profile whose phases alternate, dark near 0 and bright near 1.
 
@@ -523,6 +531,8 @@ def fit_boundaries(
         Work out the covariance.
     hints : Hints, optional
         What the noise says about gamma and about counting.
+    place : (2, edges) float array, optional
+        Expected position and its precision [1/samples^2, in units of the cost] of boundaries beyond the data.
 
     Returns
     -------
@@ -552,11 +562,12 @@ def fit_boundaries(
         target = target + np.where(free, 0.0, _phase_shift(state[1], target, free))
     used = int((weight > 0).sum())
     belief = np.zeros((2, SHARED))
+    place = np.zeros((2, len(position))) if place is None else place
     scatter = 0.15 if scatter is None else scatter
     fit = None
     for _ in range(2):
         precision = np.where(free, 1e-6, 1 / scatter**2)
-        fit = fit_edges(depth, profile, weight, *state, active, target, precision, belief, 8, 0.3, False)
+        fit = fit_edges(depth, profile, weight, *state, active, target, precision, belief, place, 8, 0.3, False)
         state = fit[:3]
         target = target + np.where(free, 0.0, _phase_shift(state[1], target, free))
         off = (state[1] - target)[~free]
@@ -565,9 +576,9 @@ def fit_boundaries(
             break
     precision = np.where(free, 1e-6, 1 / scatter**2)
     if nuisance and used > 40 and segments > 4:
-        averaged = _average_models(depth, profile, weight, fit, target, precision, used, hints or Hints(), full)
+        averaged = _average_models(depth, profile, weight, fit, target, precision, place, used, hints or Hints(), full)
         return _finish(depth, profile, weight, averaged, precision, used, scatter)
-    fit = fit_edges(depth, profile, weight, *state, active, target, precision, belief, 15, 1e-3, full)
+    fit = fit_edges(depth, profile, weight, *state, active, target, precision, belief, place, 15, 1e-3, full)
     return _finish(
         depth, profile, weight, (*fit[:5], active, np.zeros_like(fit[4]), fit[0]), precision, used, scatter
     )
@@ -618,7 +629,7 @@ def _beliefs(blur: float, unit: float) -> FloatArray:
     return np.stack([mean, unit / sd**2])
 
 
-def _average_models(depth, profile, weight, fit, target, precision, used, hints, full):  # type: ignore[no-untyped-def]
+def _average_models(depth, profile, weight, fit, target, precision, place, used, hints, full):  # type: ignore[no-untyped-def]
     """Fit the hypotheses and average over them by their posterior odds (Laplace's approximation of the evidence).
 
     Returns (position, level, shared, cost, covariance, active, covariance between models, position of the best).
@@ -628,7 +639,7 @@ def _average_models(depth, profile, weight, fit, target, precision, used, hints,
     blur = float(fit[2][BLUR])
     unit = fit[3] / used
     belief = _beliefs(blur, unit)
-    fit = fit_edges(depth, profile, weight, *fit[:3], plain, target, precision, belief, 6, 0.02, False)
+    fit = fit_edges(depth, profile, weight, *fit[:3], plain, target, precision, belief, place, 6, 0.02, False)
     candidates = [(0.0, fit, plain)]
     for model in _models(blur, hints):
         active = plain.copy()
@@ -636,7 +647,7 @@ def _average_models(depth, profile, weight, fit, target, precision, used, hints,
         shared = fit[2].copy()
         for name, value in model.start.items():
             shared[name] = value
-        trial = fit_edges(depth, profile, weight, fit[0], fit[1], shared, active, target, precision, belief, 12, 0.05, False)  # noqa: E501
+        trial = fit_edges(depth, profile, weight, fit[0], fit[1], shared, active, target, precision, belief, place, 12, 0.05, False)  # noqa: E501
         if trial[5]:
             candidates.append((model.log_odds, trial, active))
     least = min(trial[3] for _, trial, _ in candidates)
@@ -654,7 +665,7 @@ def _average_models(depth, profile, weight, fit, target, precision, used, hints,
     for i in np.flatnonzero(odds):
         _, trial, active = candidates[i]
         rounds, tolerance = (15, 1e-3) if i == best else (3, 0.05)
-        kept.append(fit_edges(depth, profile, weight, *trial[:3], active, target, precision, belief, rounds, tolerance, full))  # noqa: E501
+        kept.append(fit_edges(depth, profile, weight, *trial[:3], active, target, precision, belief, place, rounds, tolerance, full))  # noqa: E501
     share = odds[odds > 0]
     chosen = kept[int(np.argmax(share))]
     position = sum(p * trial[0] for p, trial in zip(share, kept, strict=True))

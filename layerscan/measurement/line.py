@@ -28,7 +28,7 @@ if TYPE_CHECKING:
     from layerscan.settings import MeasureSettings
 
 LEAST_SAMPLES = 12
-LEAST_Z = 4.0  # of the correlation between the two halves of the band
+LEAST_Z = 6.0  # of the correlation between the two halves of the band
 MOST_SLOPE = 1.2
 
 
@@ -309,6 +309,8 @@ def measure_line(
     band = sample_band(picture.intensity, start=start, stop=stop, width_px=width_px)
     field = band.intensity
     count, columns = field.shape
+    if columns > 1:
+        field = _level_columns(field)
     group = max(1, columns // 6)
     joined = _join(field, group)
     slope = 0.0
@@ -361,6 +363,15 @@ def measure_line(
     return found, z, region
 
 
+def _level_columns(field: NDArray[np.float32]) -> NDArray[np.float32]:
+    """Columns brought to one mean: what differs across the band must not look like layers where a column ends."""
+    seen = np.isfinite(field)
+    number = np.maximum(seen.sum(axis=0), 1)
+    mean = np.where(seen, field, 0.0).sum(axis=0, dtype=np.float64) / number
+    total = float((mean * number).sum() / number.sum())
+    return np.ascontiguousarray(field - (mean - total)[None, :], dtype=np.float32)
+
+
 def _join(field: NDArray[np.float32], group: int) -> NDArray[np.float32]:
     """Mean of every ``group`` columns, NaN where one of them has none."""
     if group == 1:
@@ -384,8 +395,9 @@ def _variance_of_mean(mean: FloatArray, single: FloatArray, number: FloatArray, 
 def _stands_out(field: NDArray[np.float32], slope: float, mean: FloatArray) -> float:
     """Fisher's z of the correlation between odd and even columns; for one column, between neighbouring samples."""
     if field.shape[1] >= 2:
-        first = sheared_mean(np.ascontiguousarray(field[:, ::2]), 2 * slope, 1)[0]
-        second = sheared_mean(np.ascontiguousarray(field[:, 1::2]), 2 * slope, 1)[0]
+        first, _, number = sheared_mean(np.ascontiguousarray(field[:, ::2]), 2 * slope, 1)
+        second, _, other = sheared_mean(np.ascontiguousarray(field[:, 1::2]), 2 * slope, 1)
+        first = np.where((number == number.max()) & (other == other.max()), first, np.nan)
     else:
         first, second = mean[:-1], mean[1:]
     good = np.isfinite(first) & np.isfinite(second)

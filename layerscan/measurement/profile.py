@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -20,7 +20,8 @@ class Stack:
     """Boundaries of a profile [samples] and what lies between them.
 
     ``phase`` (boundaries + 1,) is DARK, BRIGHT or OTHER for each segment, the ones before the first and behind the last
-    boundary included; ``dark`` and ``bright`` (N,) are the phases' slowly varying levels.
+    boundary included; ``dark`` and ``bright`` (N,) are the phases' slowly varying levels; ``beyond`` is where the next
+    boundary before the first and behind the last was supposed, outside the profile, where the frame cuts the stack.
     """
 
     fit: EdgeFit
@@ -28,6 +29,7 @@ class Stack:
     dark: FloatArray
     bright: FloatArray
     weight: FloatArray
+    beyond: tuple[float | None, float | None] = (None, None)
 
     @property
     def position(self) -> FloatArray:
@@ -121,9 +123,16 @@ def find_stack(
     value, weight = (value - low) / rise, weight * rise**2
     dark, bright = dark + contrast * low, dark + contrast * high
     centre = np.clip(np.rint(_centres(fit.position, count)).astype(int), 0, count - 1)
+    level = (fit.level - low[centre]) / rise[centre]
+    beyond = _beyond(fit, other, count)
+    position, level, place, keep = _with_beyond(fit, level, beyond, period)
     fit = fit_boundaries(
-        value, weight=weight, position=fit.position, bright_first=first_bright, other=other,
-        blur=float(fit.shared[0]), level=(fit.level - low[centre]) / rise[centre], scatter=fit.scatter, nuisance=nuisance, hints=hints,
+        value, weight=weight, position=position, bright_first=first_bright ^ (beyond[0] is not None), other=other,
+        blur=float(fit.shared[0]), level=level, scatter=fit.scatter, nuisance=nuisance, hints=hints, place=place,
+    )  # fmt: skip
+    fit = replace(
+        fit, position=fit.position[keep], best_position=fit.best_position[keep],
+        covariance=fit.covariance[keep, keep], level=fit.level[keep.start : keep.stop + 1],
     )  # fmt: skip
     segments = len(fit.position) + 1
     alternating = np.where(np.arange(segments) % 2 == 0, int(first_bright), int(not first_bright))
@@ -131,7 +140,7 @@ def find_stack(
         alternating[0] = OTHER
     if other[1]:
         alternating[-1] = OTHER
-    return Stack(fit=fit, phase=alternating, dark=dark, bright=bright, weight=weight)
+    return Stack(fit=fit, phase=alternating, dark=dark, bright=bright, weight=weight, beyond=beyond)
 
 
 def _segment(
@@ -171,6 +180,41 @@ def _start_blur(value: FloatArray, weight: FloatArray, position: FloatArray, bri
         cost = float(np.mean(np.minimum(off**2, 0.25))) if len(off) else 0.0
         best = min(best, (cost, float(blur)))
     return best[1]
+
+
+def _beyond(fit: EdgeFit, other: tuple[bool, bool], count: int) -> tuple[float | None, float | None]:
+    """Where the next boundary outside the profile is expected at an end that the frame cuts; None at other ends."""
+    position = fit.position
+    width = np.diff(position)
+    out: list[float | None] = [None, None]
+    if len(width) < 4:
+        return None, None
+    if not other[0]:
+        out[0] = min(float(position[0] - np.median(width[1::2])), -0.5)
+    if not other[1]:
+        out[1] = max(float(position[-1] + np.median(width[-2::-2])), count - 0.5)
+    return out[0], out[1]
+
+
+def _with_beyond(
+    fit: EdgeFit, level: FloatArray, beyond: tuple[float | None, float | None], period: float
+) -> tuple[FloatArray, FloatArray, FloatArray, slice]:
+    """Positions and levels with the supposed boundaries put in, what is known of them, and the slice of the real ones."""
+    position = fit.position
+    place = np.zeros((2, len(position)))
+    first = 0
+    for side, where in enumerate(beyond):
+        if where is None:
+            continue
+        known = np.array([[where], [1 / (0.15 * period) ** 2]])
+        if side == 0:
+            position, place = np.concatenate([[where], position]), np.hstack([known, place])
+            level = np.concatenate([[1 - round(level[0])], level])
+            first = 1
+        else:
+            position, place = np.concatenate([position, [where]]), np.hstack([place, known])
+            level = np.concatenate([level, [1 - round(level[-1])]])
+    return position, level, place, slice(first, first + len(fit.position))
 
 
 def _centres(position: FloatArray, count: int) -> FloatArray:

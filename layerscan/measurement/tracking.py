@@ -403,20 +403,17 @@ def _trace(
     rounds: int,
     period: float,
 ) -> Traces:
-    edges, stations = moved.shape
-    raw = np.zeros_like(moved)
-    information = np.zeros_like(moved)
-    misfit = np.zeros_like(moved)
+    stations = moved.shape[1]
+    raw, information, misfit = moved, moved, moved
     fit = stack.fit
     limit = max(1.5 * float(fit.shared[0]), 1.0)
-    prior = np.full(edges, 1e-3)
     now = moved.copy()
     longest = int(min(max(stations // 4, 4), 64))
+    first, position, levels = _with_beyond(stack)
     for _ in range(rounds):
-        match_columns(
-            field, centre, gain, fit.best_position, fit.level, fit.shared, bool(fit.active[RIM_DECAY]), now, prior, limit,
-            raw, information, misfit,
-        )  # fmt: skip
+        raw, information, misfit = _match(
+            field, centre, gain, position, levels, fit.shared, bool(fit.active[RIM_DECAY]), now, first, limit
+        )
         valid = mark_outliers(misfit, information)
         centred = np.where(valid, raw, np.nan)
         level = np.array([np.mean(r[v]) if v.any() else 0.0 for r, v in zip(raw, valid, strict=True)])
@@ -427,6 +424,38 @@ def _trace(
         bound = np.minimum(widths[:-1], widths[1:])[:, None]
         now = np.clip(smooth, -bound, bound)
     return Traces(raw=raw, smooth=now, apart=np.clip(apart, -bound, bound), u=u, valid=valid, model=model)
+
+
+def _with_beyond(stack: Stack) -> tuple[int, FloatArray, FloatArray]:
+    """Positions and levels with the boundaries supposed beyond the frame; the first number is that of the real first."""
+    position, level = stack.fit.best_position, stack.fit.level
+    before, behind = stack.beyond
+    if before is not None:
+        position = np.concatenate([[before], position])
+        level = np.concatenate([[1.0 - round(level[0])], level])
+    if behind is not None:
+        position = np.concatenate([position, [behind]])
+        level = np.concatenate([level, [1.0 - round(level[-1])]])
+    return int(before is not None), position, level
+
+
+def _match(  # type: ignore[no-untyped-def]
+    field, centre, gain, position, level, shared, rim, moved, first, limit
+):
+    """Match all columns; boundaries supposed beyond the frame move with their neighbours and are held."""
+    edges = moved.shape[0]
+    full = moved
+    if first:
+        full = np.concatenate([moved[:1], full])
+    if len(position) > len(full):
+        full = np.concatenate([full, moved[-1:]])
+    prior = np.full(len(position), 1e-3)
+    prior[:first] = 1e3
+    prior[first + edges :] = 1e3
+    raw, information, misfit = np.zeros_like(full), np.zeros_like(full), np.zeros_like(full)
+    match_columns(field, centre, gain, position, level, shared, rim, full, prior, limit, raw, information, misfit)
+    own = slice(first, first + edges)
+    return raw[own].copy(), information[own].copy(), misfit[own].copy()
 
 
 def _followed(
