@@ -72,6 +72,7 @@ class PlannedSpectrum:
     spot: str | None
     quantity: SpectrumKind | None
     reference: str | None
+    reference_path: str | None
     column: int | str | None
     exclude: str | None
     note: str | None
@@ -202,6 +203,10 @@ class _Folders:
 
     def locate(self, name: str, place: str) -> tuple[str, bool]:
         """Absolute path of a file of the plan and whether it exists; outside the folder it is refused."""
+        try:
+            name.encode()
+        except UnicodeEncodeError:
+            raise InputError(f"{place}: the file name {name!r} is no valid Unicode. Rename the file.") from None
         path = os.path.join(self.root, name)
         parent, base = os.path.split(path)
         if parent not in self.listed:
@@ -391,6 +396,9 @@ class _Resolver:
             self._note(
                 place, f"spectrum '{name}' is of specimen '{specimen}' of group '{group}', which has no image", "note"
             )
+        mirror = values.get("reference_file")
+        if mirror and not self.folders.locate(mirror, place)[1]:
+            self._note(place, f"reference '{mirror}' is missing", "missing")
         changes = dict(values.get("compare") or {})
         column = values.get("column")
         return PlannedSpectrum(
@@ -403,6 +411,7 @@ class _Resolver:
             spot=values.get("spot"),
             quantity=values.get("quantity") or variants.change(changes).quantity,
             reference=values.get("reference") or self.tables.colour.reference,
+            reference_path=self.folders.locate(mirror, place)[0] if mirror else None,
             column=int(column) if isinstance(column, str) and column.isdigit() else column,
             exclude=values.get("exclude"),
             note=values.get("note"),

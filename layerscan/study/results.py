@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING, Any
 
 from layerscan.records import Average
@@ -160,6 +160,8 @@ def collect_results(ledger: Ledger) -> StudyResults:
 
 def _image(ledger: Ledger, unit: UnitRow) -> ImageResult:
     task = ledger.task(unit.tasks.get("measure", ""))
+    if task is not None and task.document is not None:  # long, and nothing here needs them
+        task = replace(task, document={k: v for k, v in task.document.items() if k not in ("profile", "boundaries")})
     state, reason = _state(unit, task)
     compare = {}
     for name, key in unit.tasks.items():

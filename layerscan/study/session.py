@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Sequence
 from dataclasses import dataclass
 from datetime import UTC, datetime
 from pathlib import Path
@@ -292,30 +291,3 @@ def _not_stated(plan: StudyPlan) -> tuple[str, ...]:
     return tuple(
         f"{table}.{name}" for table, values in tables for name, value in values if value is None and name != "note"
     )
-
-
-def describe_check(check: StudyCheck) -> Sequence[str]:
-    """What a check found, as lines for a person."""
-    lines = [f"{check.images} images, {check.spectra} spectra in '{check.plan}'; results go to '{check.folder}'."]
-    lines += [f"  group '{group}': {specimens} specimens, {images} images" for group, specimens, images in check.groups]
-    lines.append(
-        f"Would measure {check.to_measure} images, predict {check.to_predict}, compare {check.to_compare}, "
-        f"read {check.to_read} spectra; {check.done} are done."
-    )
-    for severity, title in (("missing", "Missing"), ("note", "Note")):
-        lines += [f"{title}: {p.place}: {p.text}" for p in check.problems if p.severity == severity]
-    if check.not_stated:
-        lines.append(f"Not stated: {', '.join(check.not_stated)}.")
-    return lines
-
-
-def describe_outcome(outcome: StudyOutcome) -> Sequence[str]:
-    """What a run did, as lines for a person."""
-    lines = [
-        f"{outcome.done} of {outcome.images} images measured ({outcome.kept} files were done before), "
-        f"{outcome.failed} failed, {outcome.excluded} excluded, {outcome.missing} missing.",
-        outcome.answer,
-    ]
-    lines += [f"Failed: {path}: {reason}" for path, reason in outcome.failures]
-    lines += [f"{group}, {name}: {decision}" for group, name, decision in outcome.decisions]
-    return [*lines, f"Report: {outcome.report}"]

@@ -411,15 +411,15 @@ def _bare_pair(a: FloatArray, b: FloatArray, name_a: str, name_b: str, level: fl
 
 def _equivalence(a: str, b: str, table: Mapping[str, FloatArray], *, margin: float, level: float, unit: str) -> TestRow:
     """Two one-sided Welch tests; the interval of level 1 - 2 alpha lies within the margin where both pass."""
-    from scipy.special import stdtr
+    from scipy.special import stdtr, stdtrit
 
     wide = welch_test(table[a], table[b], level=2 * level - 1)
     name = "equivalence (two one-sided tests)"
-    if wide.p_value is None or wide.difference is None or not wide.degrees_of_freedom or not wide.statistic:
+    if wide.difference is None or wide.high is None or not wide.degrees_of_freedom:
         return replace(wide, name=name, compares=(a, b))
     nu = wide.degrees_of_freedom[0]
-    se = wide.difference / wide.statistic
-    p = max(float(stdtr(nu, (abs(wide.difference) - margin) / se)), 0.0)
+    se = (wide.high - wide.difference) / float(stdtrit(nu, level))
+    p = float(stdtr(nu, (abs(wide.difference) - margin) / se))
     alpha = 1 - level
     verdict = "are equivalent" if p < alpha else "are not shown to be equivalent"
     return replace(

@@ -118,6 +118,7 @@ class SpectrumEntry(Settings):
     spot: Text = None
     quantity: Literal["reflectance", "transmittance", "absorbance"] | None = None
     reference: Text = Field(None, description="against which reference it was taken, in words")
+    reference_file: Text = Field(None, description="spectrum of that reference, which the values are multiplied by")
     column: int | str | None = Field(None, description="column of the file")
     exclude: Text = None
     note: Text = None

@@ -119,7 +119,7 @@ class _Maker:
         self.states = self.ledger.states() if self.ledger else {}
         self.retried = self.ledger.failures_to_retry(__version__) if self.ledger else set()
         self.colours = _colours_wanted(self.plan)
-        self.compared: dict[tuple[str, str], list[tuple[PlannedSpectrum, str]]] = {}
+        self.compared: dict[tuple[str, str], list[tuple[PlannedSpectrum, str, str | None]]] = {}
         self.content: dict[tuple[Any, ...], PlannedImage] = {}
         self.texts: dict[int, str] = {}
         self.lights: dict[int, tuple[PredictSettings, tuple[str, ...]]] = {}
@@ -136,16 +136,21 @@ class _Maker:
     def spectrum(self, spectrum: PlannedSpectrum) -> UnitRow:
         sha256 = self.hashes.find(spectrum.path)
         row = _row(spectrum, ("group", "specimen", "spot", "quantity", "reference", "exclude", "note", "overrides"))
+        mirror = self.hashes.find(spectrum.reference_path) if spectrum.reference_path else None
         if sha256 is None:
             return self._missing(spectrum, "spectrum", row)
-        key = task_key("spectrum", sha256, spectrum.quantity, spectrum.column, self.colours)
+        if spectrum.reference_path and mirror is None:
+            name = os.path.relpath(spectrum.reference_path, self.plan.folder)
+            return self._missing(spectrum, "spectrum", row, name=name)
+        key = task_key("spectrum", sha256, mirror, spectrum.quantity, spectrum.column, self.colours)
         if spectrum.exclude is None and spectrum.quantity != "absorbance":
-            self.compared.setdefault((spectrum.group, spectrum.specimen), []).append((spectrum, sha256))
+            self.compared.setdefault((spectrum.group, spectrum.specimen), []).append((spectrum, sha256, mirror))
         if self._is_open(key):
             step = Step(
                 key=key,
                 kind="spectrum",
                 path=spectrum.path,
+                reference_path=spectrum.reference_path,
                 input_sha256=sha256,
                 quantity=spectrum.quantity,
                 column=spectrum.column,
@@ -182,8 +187,10 @@ class _Maker:
         light = task_key("predict", measure, self._dump(predict), material_hashes)
         steps = [Step(key=light, kind="predict", settings=settings, input_sha256=measure)]
         tasks["predict"] = light
-        for spectrum, sha256 in self.compared.get((image.group, image.specimen), ()):
-            key = task_key("compare", light, sha256, spectrum.quantity, spectrum.column, self._dump(spectrum.compare))
+        for spectrum, sha256, mirror in self.compared.get((image.group, image.specimen), ()):
+            key = task_key(
+                "compare", light, sha256, mirror, spectrum.quantity, spectrum.column, self._dump(spectrum.compare)
+            )
             tasks[f"compare:{spectrum.key}"] = key
             steps.append(
                 Step(
@@ -191,6 +198,7 @@ class _Maker:
                     kind="compare",
                     settings=spectrum.compare,
                     path=spectrum.path,
+                    reference_path=spectrum.reference_path,
                     input_sha256=sha256,
                     quantity=spectrum.quantity,
                     column=spectrum.column,
@@ -249,8 +257,12 @@ class _Maker:
             Unit(key=row.key, kind=kind, path=row.path, name=row.name, sha256=sha256, folder=where, steps=steps)
         )
 
-    def _missing(self, planned: PlannedImage | PlannedSpectrum, kind: str, row: dict[str, Any]) -> UnitRow:
-        reason = f"'{planned.name}' is missing. Put it there and run the study again, or take it out of the plan."
+    def _missing(
+        self, planned: PlannedImage | PlannedSpectrum, kind: str, row: dict[str, Any], *, name: str | None = None
+    ) -> UnitRow:
+        reason = (
+            f"'{name or planned.name}' is missing. Put it there and run the study again, or take it out of the plan."
+        )
         return self._known_failure(planned, kind, row, None, "missing file", reason)
 
     def _duplicate(self, image: PlannedImage, first: PlannedImage, row: dict[str, Any], sha256: str) -> UnitRow:

@@ -33,7 +33,8 @@ class Step:
     key: str
     kind: str  # measure, predict, compare, spectrum
     settings: MeasureSettings | PredictSettings | CompareSettings | None = None
-    path: str | None = None  # of the spectrum that a prediction is compared with
+    path: str | None = None  # of the spectrum
+    reference_path: str | None = None  # of the mirror that it was measured against
     input_sha256: str | None = None
     quantity: SpectrumKind | None = None
     column: int | str | None = None
@@ -237,13 +238,15 @@ class _Chain:
         return StepResult(step=step, state="done", document=document)
 
     def _open(self, step: Step) -> Spectrum:
-        from layerscan.readers.spectra import open_spectrum
+        from layerscan.readers.spectra import open_spectrum, relative_to
 
         path = step.path or self.unit.path
         observed = open_spectrum(path, quantity=step.quantity, column=step.column)
         if observed.sha256 is not None and observed.sha256 != step.input_sha256:
             raise RuntimeError("the spectrum changed while the study was running; run the study again")
-        return observed
+        if step.reference_path is None:
+            return observed
+        return relative_to(observed, open_spectrum(step.reference_path, quantity=observed.kind))
 
 
 def _layer_rows(found: Measurement) -> tuple[tuple[Any, ...], ...]:

@@ -209,6 +209,8 @@ def test_equivalence_needs_the_whole_interval_within_the_margin():
         assert ("are equivalent" in row.sentence) == inside
         seen.add(inside)
     assert seen == {True, False}
+    same = compare_groups([1.0, 2.0, 3.0] * 2, list("AAABBB"), list("123456"), equivalence=5.0)[-1]
+    assert (same.difference, same.p_value < 0.05) == (0.0, True)  # no difference at all is no missing number
 
 
 @settings(deadline=None, derandomize=True, max_examples=40)
