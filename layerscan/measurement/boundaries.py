@@ -647,7 +647,10 @@ def _average_models(depth, profile, weight, fit, target, precision, place, used,
         shared = fit[2].copy()
         for name, value in model.start.items():
             shared[name] = value
-        trial = fit_edges(depth, profile, weight, fit[0], fit[1], shared, active, target, precision, belief, place, 12, 0.05, False)  # noqa: E501
+        trial = fit_edges(depth, profile, weight, fit[0], fit[1], shared, active, target, precision, belief, place, 5, 0.3, False)  # noqa: E501
+        if not trial[5] or (model.log_odds <= 0 and trial[3] > fit[3] - 2 * unit):
+            continue  # gains less than it costs
+        trial = fit_edges(depth, profile, weight, *trial[:3], active, target, precision, belief, place, 10, 0.05, False)
         if trial[5]:
             candidates.append((model.log_odds, trial, active))
     least = min(trial[3] for _, trial, _ in candidates)

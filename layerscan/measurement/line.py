@@ -29,7 +29,11 @@ if TYPE_CHECKING:
 
 LEAST_SAMPLES = 12
 LEAST_Z = 6.0  # of the correlation between the two halves of the band
+LEAST_BOUNDARIES = 3
 MOST_SLOPE = 1.2
+_TOO_SHORT = (
+    "Only {} samples of the line lie in the image; at least {} are needed. Move the line into the image or make it longer."
+)
 
 
 @dataclass(frozen=True, kw_only=True, eq=False)
@@ -150,7 +154,7 @@ def _energy(field, slope):  # type: ignore[no-untyped-def]
             total += value * value
             s1 += value
             n += 1
-    return total / n - (s1 / n) ** 2 if n > 0.5 * count else -1.0
+    return total / n - (s1 / n) ** 2 if n > 0.4 * count else -1.0
 
 
 @njit(cache=True)  # type: ignore[untyped-decorator]
@@ -163,7 +167,7 @@ def find_slope(field, most):  # type: ignore[no-untyped-def]
     for i in range(1, steps + 1):
         for sign in (-1.0, 1.0):
             value = _energy(field, sign * i * step)
-            if value > best * (1 + 1e-9):
+            if value > best + 1e-9 * abs(best):
                 best, slope = value, sign * i * step
     width = 0.5 * step
     for _ in range(7):
@@ -307,8 +311,12 @@ def measure_line(
         Fewer than twelve samples of the line lie in the image.
     """
     band = sample_band(picture.intensity, start=start, stop=stop, width_px=width_px)
-    field = band.intensity
-    count, columns = field.shape
+    shown = np.flatnonzero(np.isfinite(band.intensity).any(axis=1))
+    if len(shown) < LEAST_SAMPLES:
+        raise MeasurementError(_TOO_SHORT.format(len(shown), LEAST_SAMPLES))
+    trimmed = int(shown[0])
+    field = np.ascontiguousarray(band.intensity[trimmed : int(shown[-1]) + 1])
+    columns = field.shape[1]
     if columns > 1:
         field = _level_columns(field)
     group = max(1, columns // 6)
@@ -320,10 +328,7 @@ def measure_line(
     mean, single, number = sheared_mean(field, slope, 1)
     enough = np.flatnonzero(number >= 0.5 * columns)
     if len(enough) < LEAST_SAMPLES:
-        raise MeasurementError(
-            f"Only {len(enough)} samples of the line lie in the image; at least {LEAST_SAMPLES} are needed. "
-            "Move the line into the image or make it longer."
-        )
+        raise MeasurementError(_TOO_SHORT.format(len(enough), LEAST_SAMPLES))
     low, high = int(enough[0]), int(enough[-1]) + 1
     mean = np.where(number[low:high] >= 0.5 * columns, mean[low:high], np.nan)
     variance = _variance_of_mean(mean, single[low:high], number[low:high], columns)
@@ -333,10 +338,10 @@ def measure_line(
     if period is None or z < LEAST_Z:
         return None, z, region
     stack = find_stack(mean, variance=variance, period=period)
-    if stack is None:
+    if stack is None or len(stack.position) < LEAST_BOUNDARIES:
         return None, z, region
     cosine = 1 / math.sqrt(1 + slope * slope)
-    position = low + stack.position
+    position = trimmed + low + stack.position
     row = start[0] + position * math.sin(band.angle_rad)
     column = start[1] + position * math.cos(band.angle_rad)
     row, column = picture.to_page(row, column)
@@ -393,13 +398,25 @@ def _variance_of_mean(mean: FloatArray, single: FloatArray, number: FloatArray, 
 
 
 def _stands_out(field: NDArray[np.float32], slope: float, mean: FloatArray) -> float:
-    """Fisher's z of the correlation between odd and even columns; for one column, between neighbouring samples."""
-    if field.shape[1] >= 2:
-        first, _, number = sheared_mean(np.ascontiguousarray(field[:, ::2]), 2 * slope, 1)
-        second, _, other = sheared_mean(np.ascontiguousarray(field[:, 1::2]), 2 * slope, 1)
-        first = np.where((number == number.max()) & (other == other.max()), first, np.nan)
-    else:
-        first, second = mean[:-1], mean[1:]
+    """How far the layers stand out of the noise, in standard deviations.
+
+    Fisher's z of the correlation between both sides of the band, whose pixels are not shared; for a band too narrow to
+    be halved, the strongest line of the spectrum against what white noise would show.
+    """
+    columns = field.shape[1]
+    if columns < 4:
+        return _peak_excess(mean)
+    half, gap = columns // 2, 1 if columns >= 8 else 0
+    left, right = np.ascontiguousarray(field[:, : half - gap]), np.ascontiguousarray(field[:, -(half - gap) :])
+    first, _, number = sheared_mean(left, slope, 1)
+    second, _, other = sheared_mean(right, slope, 1)
+    apart = int(round(slope * (columns - (half - gap))))  # each half is sheared about its own middle
+    first = np.where(number == number.max(), first, np.nan)
+    second = np.where(other == other.max(), second, np.nan)
+    if apart > 0:
+        first, second = first[:-apart], second[apart:]
+    elif apart < 0:
+        first, second = first[-apart:], second[:apart]
     good = np.isfinite(first) & np.isfinite(second)
     n = int(good.sum())
     if n < LEAST_SAMPLES:
@@ -410,6 +427,17 @@ def _stands_out(field: NDArray[np.float32], slope: float, mean: FloatArray) -> f
         return 0.0
     r = min(max(float(a @ b) / norm, -0.999999), 0.999999)
     return math.atanh(r) * math.sqrt(max(n / 4 - 3, 1))
+
+
+def _peak_excess(mean: FloatArray) -> float:
+    """Strongest line of the spectrum against the largest that white noise would show, as standard deviations."""
+    value = mean[np.isfinite(mean)]
+    n = len(value)
+    power = np.abs(np.fft.rfft((value - value.mean()) * np.hanning(n)))[2 : n // 3] ** 2
+    if len(power) < 4 or not np.median(power) > 0:
+        return 0.0
+    ratio = float(power.max()) * math.log(2) / float(np.median(power))
+    return math.sqrt(2 * max(ratio - math.log(len(power)), 0.0))
 
 
 def profile_period(mean: FloatArray) -> float | None:
