@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
@@ -118,7 +118,8 @@ def find_reasons(
     misfit = _Misfit(pair=pair, u_nm=match.u_nm, width_nm=match.observed.fwhm_nm)
     before = misfit.of(misfit.curve(model, follow), match.difference_nm)
     found: list[Explanation] = []
-    changes = possible_changes(model, match.observed.wavelength_nm)
+    stated = {str(material.get("name")): material.get("u_index") for material in prediction.materials}
+    changes = possible_changes(model, match.observed.wavelength_nm, u_index=stated)
     for place, change in enumerate(changes):
         if progress is not None:
             progress(f"seeking reasons: {change.name}", place / len(changes))
@@ -141,8 +142,13 @@ def find_reasons(
     return Found(reasons=reasons)
 
 
-def possible_changes(model: StackModel, at_nm: float) -> tuple[Change, ...]:
-    """The changes that are tried, each with how far it usually is off and the source of that."""
+def possible_changes(
+    model: StackModel, at_nm: float, *, u_index: Mapping[str, float | None] | None = None
+) -> tuple[Change, ...]:
+    """The changes that are tried, each with how far it usually is off and the source of that.
+
+    ``u_index`` holds the standard uncertainty that the source of a material states.
+    """
     changes = [
         Change(
             name="scale of all thicknesses",
@@ -156,7 +162,7 @@ def possible_changes(model: StackModel, at_nm: float) -> tuple[Change, ...]:
     ]
     main = model.main_materials()
     for row in main:
-        changes.append(_index_change(model, row, at_nm))
+        changes.append(_index_change(model, row, at_nm, (u_index or {}).get(model.names[row])))
     if all(model.index_at(row, at_nm) > 1.1 for row in main):
         changes.append(
             Change(
@@ -219,11 +225,13 @@ def possible_changes(model: StackModel, at_nm: float) -> tuple[Change, ...]:
     return tuple(changes)
 
 
-def _index_change(model: StackModel, row: int, at_nm: float) -> Change:
+def _index_change(model: StackModel, row: int, at_nm: float, stated: float | None) -> Change:
     name, n = model.names[row], model.index_at(row, at_nm)
     fills_gaps = n < 1.4
     prior = "0.02 taken as usual error of an index (common practice, no source)"
-    if fills_gaps:
+    if stated:
+        prior = f"the source of the index states u = {stated:g}"
+    elif fills_gaps:
         prior = "what fills the gaps was assumed: air 1.00, water 1.33, resin about 1.5"
     return Change(
         name=f"index in the gaps ({name} assumed)" if fills_gaps else f"index of {name}",
@@ -231,7 +239,7 @@ def _index_change(model: StackModel, row: int, at_nm: float) -> Change:
         apply=lambda value: model.with_index(row, value, at_nm=at_nm),
         start=n,
         limits=(1.0, 1.65) if fills_gaps else (max(1.0, n - 0.35), n + 0.35),
-        prior_sd=0.2 if fills_gaps else 0.02,
+        prior_sd=stated or (0.2 if fills_gaps else 0.02),
         prior=prior,
     )
 

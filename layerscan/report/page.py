@@ -10,7 +10,6 @@ from typing import TYPE_CHECKING, Any
 from markupsafe import Markup
 
 from layerscan._version import __version__
-from layerscan.figures.comparison import CONCLUSIONS
 from layerscan.figures.measurement import describe_measurement
 from layerscan.figures.prediction import describe_prediction
 from layerscan.report import words
@@ -152,9 +151,9 @@ def average_rows(measurement: Measurement) -> list[dict[str, str]]:
         {
             "name": name,
             "mean": words.number(average.mean, average.u).partition(" ")[0],
-            "u": words.number(average.u),
-            "expanded": words.number(None if average.u is None else 2 * average.u),
-            "sd": words.number(average.sd),
+            "u": words.small(average.u),
+            "expanded": words.small(None if average.u is None else 2 * average.u),
+            "sd": words.small(average.sd, 3),
             "n": str(average.n),
         }
         for name, average in named
@@ -180,11 +179,12 @@ def _light(name: str, prediction: Prediction, svg: str, key: str) -> dict[str, A
 
 
 def _compared(name: str, comparison: Comparison, svg: str, key: str) -> dict[str, Any]:
+    explained = comparison.agreement.conclusion == "explains"
+    shown = [reason for reason in comparison.reasons if not explained or (reason.evidence or 0.0) > 0]
     return {
         "name": name,
-        "conclusion": CONCLUSIONS[comparison.agreement.conclusion],
         "sentence": comparison.sentence,
         "figure": drawing(svg, key),
         "figure_words": "Observed over predicted, with what would have passed as a band.",
-        "reasons": words.reason_rows(comparison.reasons),
+        "reasons": words.reason_rows(shown),
     }

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import hashlib
+import math
 from collections.abc import Iterable
 from functools import lru_cache
 from typing import TYPE_CHECKING, Any
@@ -33,7 +34,13 @@ def page_environment() -> Environment:
         finalize=_finalize,
     )
     environment.filters.update(
-        number=number, stated=stated, average=average_words, colour_words=colour_words, percent=percent, flag=flag_words
+        small=small,
+        number=number,
+        stated=stated,
+        average=average_words,
+        colour_words=colour_words,
+        percent=percent,
+        flag=flag_words,
     )
     environment.globals.update(unknown=NOT_KNOWN, unstated=NOT_STATED)
     return environment
@@ -53,16 +60,34 @@ def number(value: float | None, u: float | None = None) -> str:
     return NOT_KNOWN if value is None else number_text(value, u)
 
 
+def small(value: float | None, digits: int = 2) -> str:
+    """An uncertainty, a spread or a share of a budget: two significant digits (JCGM 100:2008, 7.2.6).
+
+    Examples
+    --------
+    >>> small(1.9162), small(0.0058127), small(123.4)
+    ('1.9', '0.0058', '123')
+    """
+    if value is None or not math.isfinite(value):
+        return NOT_KNOWN
+    if value == 0:
+        return "0"
+    decimals = max(0, digits - 1 - math.floor(math.log10(abs(value))))
+    return f"{value:.{decimals}f}" if decimals < 8 else f"{value:.{digits}g}"
+
+
 def stated(value: Any) -> str:
     """What somebody stated, or "not stated" where it is blank."""
     return NOT_STATED if value is None or value == "" else str(value)
 
 
 def percent(value: float | None) -> str:
-    """A share as a percentage."""
+    """A share as a percentage; what is not certain is not rounded to 100 %."""
     if value is None:
         return NOT_KNOWN
-    return f"{100 * value:.1f} %" if value < 0.1 else f"{100 * value:.0f} %"
+    if 0.995 <= value < 1:
+        return f"{100 * value:.2f} %" if value < 0.99995 else "above 99.99 %"
+    return f"{100 * value:.0f} %" if abs(value) >= 0.0995 else f"{small(100 * value)} %"
 
 
 def average_words(average: Average | None) -> str:

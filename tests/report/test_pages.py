@@ -16,7 +16,7 @@ from layerscan.report.cautions import CAUTIONS
 from layerscan.report.page import Chain, render_page, write_page
 from layerscan.report.study_page import examples, render_study_page, safe_link, write_study_page
 from layerscan.report.svg import inline_svg
-from layerscan.report.words import anchor, check_swatch
+from layerscan.report.words import anchor, check_swatch, percent
 
 ATTACKS = (
     "<script>document.title='owned'</script>",
@@ -41,7 +41,7 @@ def make_chain(name="shell_03.tif", *, text=""):
             Reason(parameters=(f"scale of all thicknesses{text}",), values=(0.914,), u=(0.011,),
                    prior=(f"shrinkage{text}",), evidence=38.2, indistinguishable_from=(f"index{text}",)),
         ),
-        sentence=f"Predicted 545 nm, observed 498 nm.{text}",
+        sentence=f"The imaged structure does not explain the observed reflectance.{text}",
     )  # fmt: skip
     svg = draw_prediction(prediction)
     return Chain(
@@ -234,6 +234,16 @@ def test_swatch_is_a_colour_or_refused(code):
 )  # fmt: skip
 def test_links_stay_beside_the_page(path, link):
     assert safe_link(path) == link
+
+
+@pytest.mark.parametrize(
+    ("share", "text"),
+    [(None, "not known"), (1.0, "100 %"), (0.5, "50 %"), (0.0316, "3.2 %"), (0.0, "0 %"), (0.9987, "99.87 %"),
+     (0.999999, "above 99.99 %")],
+)  # fmt: skip
+def test_shares_never_round_to_certainty(share, text):
+    # rule of the project: no false precision, and nothing uncertain is shown as certain
+    assert percent(share) == text
 
 
 def test_anchors_are_unique_and_plain():
