@@ -115,6 +115,7 @@ def _connect(cluster: Any, workers: int, run: RunTable) -> Iterator[Any]:
                     dashboard_address="127.0.0.1:0",  # any free port: a fixed one may be taken
                     memory_limit=int((run.memory_mib + 1024) * 2**20),
                     silence_logs=logging.CRITICAL,
+                    preload=["layerscan.study.worker_setup"],
                     env={"OMP_NUM_THREADS": "1", "OPENBLAS_NUM_THREADS": "1", "NUMBA_NUM_THREADS": "1"},
                 )
             )
