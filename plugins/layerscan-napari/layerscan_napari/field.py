@@ -94,11 +94,11 @@ class FieldControl(QObject):
         result, segments = outcome
         self.panel.layers.set_busy(False)
         self.results[self._image.unique_id] = result
-        if self._image in self.panel.image_layers():
-            if self._image is not self.panel.image:
-                self.panel.choose_image(self._image)
+        if self._image is self.panel.image:
             self.show(result, segments)
             self.shown.emit(result)
+        else:
+            self.panel.status.setText(f"The field of '{self._image.name}' is measured; choose that image to see it.")
 
     def _on_failure(self, error: Exception) -> None:
         if self.sender() is self.task:
@@ -133,8 +133,11 @@ class FieldControl(QObject):
         held = None if image is None else self.results.get(image.unique_id)
         self.panel.layers.legend.set_limits(None)
         self.panel.layers.clicked_layer.setText("Click a layer in the image to read it here.")
-        if held is not None and held.measurement is not None:
-            self.show(held)
+        if held is None or held.measurement is None:
+            return
+        self.show(held)
+        if held.prediction is None and held.job.predict is not None and held.measurement.layers and not held.notes:
+            self.start(held.job.measure.edits)  # reopened from a file: the spectrum is calculated again
 
     def forget(self, image: Any) -> None:
         """The image's pixel size has changed: its field's result no longer holds."""

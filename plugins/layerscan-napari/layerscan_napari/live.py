@@ -66,6 +66,9 @@ class LiveLine(QObject):
             self._layer.selected_data.events.items_changed.disconnect(self._on_selected)
         self._layer = layer
         self._line = None
+        if self._task is not None:  # it belongs to the layer before
+            self._waiting = True
+            self._task.cancel()
         if layer is not None:
             layer.events.set_data.connect(self._on_set_data)
             layer.events.data.connect(self._on_data)
@@ -133,7 +136,9 @@ class LiveLine(QObject):
 
     def commit(self) -> None:
         """Compute everything for the line at hand in the background; a run under way is stopped first."""
-        self._timer.stop()
+        if self._timer.isActive():  # a movement that is not shown yet
+            self._timer.stop()
+            self.refresh()
         self._rest.stop()
         line = self._read_line()
         if line != self._line:

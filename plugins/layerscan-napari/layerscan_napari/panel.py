@@ -86,7 +86,7 @@ class LayerPanel(QWidget):
         self.line_edit.setToolTip("Both ends of the line, row and column in pixels; type them instead of drawing")
         self.draw_button = tabs.button("&Draw a line", "Draw a line across the layers with the mouse", self.draw_line)
         self.keep_button = tabs.button("&Keep", "Keep this result in the table", self.work.keep)
-        self.copy_button = tabs.button("Copy &command", "Copy the call that repeats this", self.work.copy_shown)
+        self.copy_button = tabs.button("&Copy command", "Copy the call that repeats this", self.work.copy_shown)
         self.status = QLabel()
         self.status.setAccessibleName("State")
         self.status.setWordWrap(True)
@@ -99,8 +99,8 @@ class LayerPanel(QWidget):
         for title, widgets in (
             ("&Image", (self.image_box, self.page_box)),
             ("", (self.image_info,)),
-            ("&Pixel size", (self.pixel_size,)),
-            ("&Line", (self.line_edit, QLabel("width"), self.width_edit)),
+            ("Pixel si&ze", (self.pixel_size,)),
+            ("Li&ne", (self.line_edit, QLabel("width"), self.width_edit)),
         ):
             row = QHBoxLayout()
             for widget in widgets:
@@ -248,6 +248,8 @@ class LayerPanel(QWidget):
         gone = set(self._micrographs) - {layer.unique_id for layer in found}
         for key in gone:
             del self._micrographs[key]
+        if self.live.layer is not None and self.live.layer not in self.viewer.layers:
+            self.live.follow(None)
         if self.image is not held:
             self._on_image_chosen()
 
@@ -493,13 +495,17 @@ class LayerPanel(QWidget):
     def _on_theme(self, event: Any = None) -> None:
         self.plots.set_colours(self._theme_colours())
 
+    def _layer_signals(self) -> tuple[Any, ...]:
+        events = self.viewer.layers.events
+        return events.inserted, events.removed, events.renamed
+
     def showEvent(self, event: QShowEvent) -> None:
         """Begin to follow the viewer."""
         super().showEvent(event)
         if self._connected:
             return
         self._connected = True
-        for signal in (self.viewer.layers.events.inserted, self.viewer.layers.events.removed):
+        for signal in self._layer_signals():
             signal.connect(self._list_images)
         self.viewer.events.theme.connect(self._on_theme)
         self.viewer.mouse_drag_callbacks.append(self.field.on_click)
@@ -514,7 +520,7 @@ class LayerPanel(QWidget):
         if event.spontaneous() or not self._connected:  # a minimised window goes on working
             return
         self._connected = False
-        for signal in (self.viewer.layers.events.inserted, self.viewer.layers.events.removed):
+        for signal in self._layer_signals():
             signal.disconnect(self._list_images)
         self.viewer.events.theme.disconnect(self._on_theme)
         if self.field.on_click in self.viewer.mouse_drag_callbacks:

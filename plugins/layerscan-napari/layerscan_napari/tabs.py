@@ -224,11 +224,11 @@ class LayersTab(QWidget):
         self.edit_state.setWordWrap(True)
         rows = (
             ("&Boundary", self.boundary, (
-                button("&Delete", "Leave this boundary out", self._delete),
-                button("As &found", "Take back what was done to this boundary", self._restore),
+                button("Delete", "Leave this boundary out", self._delete),
+                button("As found", "Take back what was done to this boundary", self._restore),
             )),
-            ("&Shift", self.shift, (button("M&ove", "Move this boundary along the depth", self._move),)),
-            ("D&epth", self.depth, (button("&Add", "Add a boundary at this depth", self._add),)),
+            ("Shift", self.shift, (button("Move", "Move this boundary along the depth", self._move),)),
+            ("Depth", self.depth, (button("Add", "Add a boundary at this depth", self._add),)),
         )  # fmt: skip
         for number, (title, widget, buttons) in enumerate(rows):
             label = QLabel(title)
@@ -320,10 +320,10 @@ class KeptTab(QWidget):
         self.table.itemChanged.connect(self._on_item_changed)
         layout = QVBoxLayout(self)
         layout.addWidget(self.table)
-        show = button("Sho&w", "Show the selected result again, with its image and line", self._show)
-        copy = button("&Copy command", "Copy the command-line call that repeats the selected result", self._copy)
-        remove = button("&Remove", "Take the selected result out of the table", self._remove)
-        export = button("E&xport…", "Write the same documents and figures as the command line", self._export)
+        show = button("Show", "Show the selected result again, with its image and line", self._show)
+        copy = button("Copy command", "Copy the command-line call that repeats the selected result", self._copy)
+        remove = button("Remove", "Take the selected result out of the table", self._remove)
+        export = button("Export…", "Write the same documents and figures as the command line", self._export)
         save = button("Save work…", "Save images, lines, settings and results in a folder", self._save)
         reopen = button("Open work…", "Open work that was saved", self._open)
         layout.addLayout(_row(show, copy, remove))

@@ -18,7 +18,7 @@ pytest.importorskip("qtpy.QtWidgets", reason="no Qt binding is installed (see th
 
 from qtpy.QtCore import QPoint, Qt
 from qtpy.QtTest import QTest
-from qtpy.QtWidgets import QAbstractButton, QApplication, QComboBox, QLineEdit, QSpinBox
+from qtpy.QtWidgets import QAbstractButton, QApplication, QComboBox, QLabel, QLineEdit, QSpinBox
 
 from layerscan_napari import compute, overlays, worker
 
@@ -521,6 +521,16 @@ def test_that_every_control_has_a_name_and_takes_the_keyboard(window):
     assert [w.accessibleName() for w in found if not w.focusPolicy() & Qt.FocusPolicy.TabFocus] == []
 
 
+def test_that_no_two_keys_mean_two_things_at_once(window):
+    # Alt and a letter reach a control from anywhere; napari's menus have theirs
+    viewer, panel = window
+    shown = [w for kind in (QAbstractButton, QLabel) for w in panel.findChildren(kind)]
+    texts = [w.text() for w in shown] + [a.text() for a in viewer.window._qt_window.menuBar().actions()]
+    keys = [text[text.index("&") + 1].lower() for text in texts if "&" in text.replace("&&", "")]
+    assert len(keys) > 8
+    assert sorted(keys) == sorted(set(keys))
+
+
 def test_that_the_plots_follow_the_theme(window):
     viewer, panel = window
     seen = {}
@@ -542,12 +552,20 @@ def test_that_errors_become_notifications_in_plain_words(window):
     panel.line_edit.clear()
 
 
+def dock_of(panel):
+    from qtpy.QtWidgets import QDockWidget
+
+    widget = panel
+    while not isinstance(widget, QDockWidget):
+        widget = widget.parent()
+    return widget
+
+
 def test_that_hiding_the_panel_stops_its_work(window, section_file, qtbot):
     viewer, panel = window
     if panel.image is None:
         viewer.open(str(section_file), plugin="layerscan-napari")
-    dock = next(d for d in viewer.window._qt_window.findChildren(type(panel.parent())) if d.widget() is panel or
-                panel in d.findChildren(type(panel)))  # fmt: skip
+    dock = dock_of(panel)
     panel.field.results.clear()
     panel.layers.measure.click()
     dock.hide()
@@ -558,6 +576,18 @@ def test_that_hiding_the_panel_stops_its_work(window, section_file, qtbot):
     qtbot.waitUntil(lambda: worker.running() == 0, timeout=LONG_MS)
     dock.show()
     assert panel.field.on_click in viewer.mouse_drag_callbacks
+
+
+def test_that_a_removed_panel_leaves_nothing_behind(window, qtbot):
+    viewer, panel = window
+    panel.field.results.clear()
+    panel.layers.measure.click()
+    task = panel.field.task
+    viewer.window.remove_dock_widget(dock_of(panel))
+    assert task.cancelled
+    qtbot.waitUntil(lambda: worker.running() == 0, timeout=LONG_MS)
+    assert not [c for c in viewer.mouse_drag_callbacks if getattr(c, "__self__", None) is panel.field]
+    window.parts = (viewer, None)
 
 
 def test_that_the_manifest_is_valid():
