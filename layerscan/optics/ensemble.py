@@ -144,8 +144,10 @@ def draw_layers(
     fresh = float(np.sqrt(1 - rho * rho))
     if conditional and layers:
         z[:, 0] = rho * model.last_residual + fresh * z[:, 0]
-    for j in range(1, layers):
-        z[:, j] = rho * z[:, j - 1] + fresh * z[:, j]
+    if rho and layers > 1:
+        from scipy.signal import lfilter
+
+        z[:, 1:], _ = lfilter([fresh], [1.0, -rho], z[:, 1:], axis=1, zi=rho * z[:, :1])
     center = (model.kind.size - 1) / 2
     trend = np.clip(1 + model.drift_per_layer * (place - center), *DRIFT_LIMITS)
     mean = model.mean_nm[kind] * trend

@@ -86,15 +86,13 @@ def find_peaks(
     if smooth:
         y, noise = smooth_spectrum(x, y)
     threshold = max(MINIMUM_HEIGHT, NOISE_RATIO * noise)
-    bands = [band for band in read_bands(x, y) if band[3] >= threshold]
-    if not bands:
-        return ()
+    chosen: list[tuple[int | None, Band]]
     if order is None:
-        tallest = max(band[3] for band in bands)
-        chosen: list[tuple[int | None, Band]] = [(None, band) for band in bands if band[3] >= relative_height * tallest]
+        bands = [band for band in read_bands(x, y) if band[3] >= threshold]
+        tallest = max((band[3] for band in bands), default=0.0)
+        chosen = [(None, band) for band in bands if band[3] >= relative_height * tallest]
     else:
-        numbers = np.asarray(order, dtype=float)
-        chosen = [(m, band) for m, band in _by_order(x, y, numbers, bands).items()]
+        chosen = [(m, band) for m, band in _by_order(x, y, np.asarray(order, dtype=float)) if band[3] >= threshold]
     found = [
         Peak(order=m, wavelength_nm=band[0], u_wavelength_nm=None, reflectance=band[2], fwhm_nm=band[1])
         for m, band in chosen
@@ -145,23 +143,23 @@ def _first_below(y: FloatArray, level: float) -> int | None:
     return int(below[0]) if below.size else None
 
 
-def _by_order(x: FloatArray, y: FloatArray, order: FloatArray, bands: list[Band]) -> dict[int, Band]:
+def _by_order(x: FloatArray, y: FloatArray, order: FloatArray) -> list[tuple[int, Band]]:
     """The tallest band near each whole order, if nothing near that order is taller.
 
     Between two orders only side lobes are left, which rise towards their own order: a lobe that is taken for an order
     has something taller beside it. An order whose own place lies outside the spectrum is not read, since only its
     lobes may be in it.
     """
-    chosen: dict[int, Band] = {}
-    for band in bands:
-        number = float(np.interp(band[0], x, order))
-        m = round(number)
-        if m < 1 or abs(number - m) > ORDER_REACH or (m in chosen and band[3] <= chosen[m][3]):
+    chosen = []
+    lowest, highest = order.min() - ORDER_OUTSIDE, order.max() + ORDER_OUTSIDE
+    for m in range(max(int(np.ceil(lowest)), 1), int(np.floor(highest)) + 1):
+        near = np.flatnonzero(abs(order - m) <= ORDER_WINDOW)
+        top = int(near[np.argmax(y[near])])
+        if not 0 < top < y.size - 1 or y[top] <= y[top - 1] or y[top] < y[top + 1]:
             continue
-        if not order.min() - ORDER_OUTSIDE <= m <= order.max() + ORDER_OUTSIDE:
-            continue
-        if band[2] >= y[abs(order - m) <= ORDER_WINDOW].max():
-            chosen[m] = band
+        band = _read_band(x, y, top)
+        if band is not None and abs(float(np.interp(band[0], x, order)) - m) <= ORDER_REACH:
+            chosen.append((m, band))
     return chosen
 
 

@@ -53,7 +53,7 @@ if TYPE_CHECKING:
     from layerscan.records import ComplexArray, FloatArray, IntArray
 
 CHUNK_LAYERS = 40_000  # layers of the draws calculated between two reports of progress
-WORK_LIMIT = 5e12  # draws x layers x wavelengths x directions: about an hour
+WORK_LIMIT = 1e12  # draws x layers x wavelengths x directions: about a quarter of an hour
 
 
 @dataclass(frozen=True, kw_only=True, eq=False)
@@ -257,7 +257,7 @@ def _draw(
     if settings.draws * float(total) * index.shape[1] * directions > WORK_LIMIT:
         raise SettingsError(
             f"{settings.draws} draws of {total} layers at {index.shape[1]} wavelengths and {directions} directions "
-            "would take more than an hour. Give fewer draws (draws=0 gives the nominal curve alone)."
+            "would take more than a quarter of an hour. Give fewer draws (draws=0 gives the nominal curve alone)."
         )
     if 16.0 * settings.draws * index.shape[1] > MEMORY_LIMIT:
         raise SettingsError(

@@ -76,8 +76,12 @@ def build_stack(table: LayerTable, settings: PredictSettings) -> Stack:
             notes.append(
                 f"Index of {medium.name} used up to {beyond:.4g} nm outside the {low:g} to {high:g} nm of its source."
             )
-        if medium.u_index is None and medium.status != "convention":
-            flags.append("index_uncertainty_unknown")
+    unknown = [medium.name for medium in media if medium.u_index is None and medium.status != "convention"]
+    if unknown:
+        flags.append("index_uncertainty_unknown")
+        notes.append(f"No uncertainty of the index is stated for {' and '.join(unknown)}; the draws leave it out.")
+    if settings.polarisation in ("left", "right"):
+        notes.append("Circular light: isotropic layers reflect left and right alike, the mean of s and p.")
     thickness = np.array([layer.thickness_nm for layer in layers])
     known = np.array([layer.u_nm if layer.u_nm is not None else 0.0 for layer in layers])
     u = ensemble.own_uncertainty(table, thickness, known)
