@@ -69,7 +69,8 @@ class LayerDetection:
 
     ``valid`` is a coarse map of the layered area: cell (i, j) covers the square of ``valid_step_px`` pixels that starts at
     ``(i, j) * valid_step_px``. ``orientation_map_deg`` holds the local direction of the normal at ``map_row_px`` x
-    ``map_column_px``, ``coherence`` (0 to 1) how sure it is.
+    ``map_column_px``, ``coherence`` (0 to 1) how sure it is. ``aligned`` without ``layered``: no layers, but the pattern
+    has a direction and a spacing, which are given.
     """
 
     layered: bool
@@ -88,6 +89,7 @@ class LayerDetection:
     period_px: float | None = None
     u_period_px: float | None = None
     seed_px: tuple[float, float] | None = None
+    aligned: bool = False
     flags: tuple[str, ...] = ()
     evidence: Evidence = field(default_factory=Evidence)
     reason: str = ""
@@ -128,7 +130,17 @@ class _Straight:
     period: float  # level pixels
 
 
-_CONTRAST = 6.0
+@dataclass(frozen=True, kw_only=True, eq=False)
+class _Judged:
+    """A candidate with its evidence."""
+
+    statistic: float
+    candidate: _Candidate
+    straight: _Straight
+    evidence: Evidence
+
+
+_CONTRAST = 6.0  # of a tile's line over the ring, to be taken as a candidate
 
 
 def detect_layers(
@@ -175,22 +187,23 @@ def detect_layers(
     levels = build_pyramid(image, mask=mask)
     tiles = _tiles_of_levels(levels, progress)
     candidates = _candidates(levels, tiles)
-    best: tuple[float, _Candidate, _Straight, Evidence] | None = None
+    judged: list[_Judged] = []
     for candidate in candidates:
         straight = _straighten(candidate)
         if straight is None:
             continue
         evidence = _judge(candidate, straight, levels, tiles)
-        statistic = _statistic(evidence)
-        if best is None or statistic > best[0]:
-            best = (statistic, candidate, straight, evidence)
-        if statistic > 1:
+        judged.append(_Judged(statistic=_statistic(evidence), candidate=candidate, straight=straight, evidence=evidence))
+        if judged[-1].statistic > 1:
             break
     if progress is not None:
         progress("layers looked for", 1.0)
-    if best is None:
+    if not judged:
         return _nothing("no line")
-    return _answer(best, levels)
+    best = max(judged, key=lambda one: one.statistic)
+    if best.statistic > 1:
+        return _layered(best, levels)
+    return _not_layered(best, judged)
 
 
 def _nothing(reason: str) -> LayerDetection:
@@ -514,36 +527,81 @@ def _statistic(evidence: Evidence) -> float:
     )
 
 
-def _irregular(evidence: Evidence) -> float:
-    """The same for lamellae that end and branch after a few periods; above 1 is layered, but irregular."""
+def _alignment(evidence: Evidence) -> float:
+    """Above 1: an aligned pattern with a spacing, such as rods or short lamellae that end, whether layered or not."""
     return min(
-        evidence.peak / 9,
         evidence.near_persistence / 0.4,
         evidence.near_share / 0.4,
-        evidence.swings / 9.9,
-        evidence.alone / 30,
+        evidence.swings / 4.9,
+        evidence.alone / 20,
         evidence.length,
-        0.15 / max(evidence.second, 1e-6),
-        0.3 / max(evidence.rivals, 1e-6),
-        _regularity(evidence),
+        0.2 / max(evidence.second, 1e-6),
+        0.4 / max(evidence.rivals, 1e-6),
     )
 
 
 def _regularity(evidence: Evidence) -> float:
     """Even spacing and heights, weighed with how far the line stands out; few alternations must be more even."""
-    uneven = math.hypot(evidence.spacing_cv / 0.3, evidence.height_cv / 0.5, evidence.chirp)
+    uneven = math.hypot(evidence.spacing_cv / 0.3, evidence.height_cv / 0.42, evidence.chirp)
     most = 0.9 if evidence.swings < 8 else 1.6
-    return min(math.sqrt(evidence.peak / 18), most) / max(uneven, 1e-6)
+    return min(math.sqrt(evidence.peak / 20), most) / max(uneven, 1e-6)
 
 
-def _answer(best: tuple[float, _Candidate, _Straight, Evidence], levels: tuple[Level, ...]) -> LayerDetection:
-    statistic, candidate, straight, evidence = best
-    shape = levels[0].intensity.shape
-    if statistic <= 1:
+def _not_layered(best: _Judged, judged: list[_Judged]) -> LayerDetection:
+    """No layers; where the pattern is aligned all the same, its direction and spacing are given."""
+    aligned = [one for one in judged if _alignment(one.evidence) > 1]
+    if not aligned:
         return LayerDetection(
-            layered=False, periodic=False, statistic=statistic, p_value=None, region=None, flags=("no_layers_found",),
-            evidence=evidence, reason="weak",
+            layered=False, periodic=False, statistic=best.statistic, p_value=None, region=None,
+            flags=("no_layers_found",), evidence=best.evidence, reason="weak",
         )  # fmt: skip
+    one = aligned[0]
+    factor = one.candidate.level.factor
+    orientation, spread, count = _mean_direction(one.candidate)
+    spacing, u_spacing = _pooled_spacing(one.straight)
+    return LayerDetection(
+        layered=False,
+        periodic=False,
+        statistic=best.statistic,
+        p_value=None,
+        region=None,
+        aligned=True,
+        orientation_deg=orientation,
+        u_orientation_deg=spread / math.sqrt(count),
+        period_px=spacing * factor,
+        u_period_px=u_spacing * factor,
+        flags=("no_layers_found", "irregular"),
+        evidence=one.evidence,
+        reason="aligned, but not layered",
+    )
+
+
+def _pooled_spacing(straight: _Straight) -> tuple[float, float]:
+    """Dominant spacing [level px] from the mean power spectrum of all blocks, and a standard uncertainty from its width.
+
+    Blocks are pooled without their phases, since lamellae that end do not keep them.
+    """
+    used = straight.member.any(axis=0)
+    columns = straight.flat[:, used] * straight.member[:, used]
+    n = len(columns)
+    power = (np.abs(np.fft.rfft(columns * np.hanning(n + 2)[1:-1, None], 8 * n, axis=0)) ** 2).mean(axis=1)
+    frequency = np.fft.rfftfreq(8 * n)
+    here = np.flatnonzero((frequency > 0.4 / straight.period) & (frequency < 2.0 / straight.period))
+    top = int(here[np.argmax(power[here])])
+    low = high = top
+    while low > here[0] and power[low - 1] > 0.5 * power[top]:
+        low -= 1
+    while high < here[-1] and power[high + 1] > 0.5 * power[top]:
+        high += 1
+    f = float(np.average(frequency[low : high + 1], weights=power[low : high + 1]))
+    half_width = 0.5 * float(frequency[high] - frequency[low]) + 0.5 / n
+    independent = max(float(used.sum()) * straight.block / (3 * straight.period), 1.0)
+    return 1 / f, half_width / f**2 / math.sqrt(independent)
+
+
+def _layered(best: _Judged, levels: tuple[Level, ...]) -> LayerDetection:
+    statistic, candidate, straight, evidence = best.statistic, best.candidate, best.straight, best.evidence
+    shape = levels[0].intensity.shape
     level, tiles, member = candidate.level, candidate.tiles, candidate.member
     step, valid = _valid_map(candidate, straight, shape)
     rows, columns = np.nonzero(valid)
@@ -621,17 +679,21 @@ def _valid_map(candidate: _Candidate, straight: _Straight, shape: tuple[int, int
     return step, np.isin(groups, 1 + np.flatnonzero(sizes >= 0.1 * sizes.max()))
 
 
-def _global_orientation(
-    candidate: _Candidate, levels: tuple[Level, ...], step: int, valid: BoolArray
-) -> tuple[float, float | None, bool]:
-    """Mean direction of the normal, its standard uncertainty, and whether the direction varies over the field."""
+def _mean_direction(candidate: _Candidate) -> tuple[float, float, float]:
+    """Mean direction of the tiles as axes [deg], their spread [deg], and how many of them are independent."""
     tiles, member = candidate.tiles, candidate.member
     double = np.radians(2 * tiles.angle_deg[member])
     weight = np.log(tiles.contrast[member])
     vector = complex(np.sum(weight * np.exp(1j * double)) / weight.sum())
-    mean = math.degrees(np.angle(vector) / 2) % 180
     spread = math.degrees(math.sqrt(max(-2 * math.log(max(abs(vector), 1e-12)), 0.0)) / 2)
-    independent = max(member.sum() / 4, 1.0)
+    return math.degrees(np.angle(vector) / 2) % 180, spread, max(float(member.sum()) / 4, 1.0)
+
+
+def _global_orientation(
+    candidate: _Candidate, levels: tuple[Level, ...], step: int, valid: BoolArray
+) -> tuple[float, float | None, bool]:
+    """Mean direction of the normal, its standard uncertainty, and whether the direction varies over the field."""
+    mean, spread, independent = _mean_direction(candidate)
     level = next((each for each in levels if each.intensity.size <= 2**21), levels[-1])
     places = [np.floor(level.to_page(np.arange(n, dtype=float)) / step).astype(int) for n in level.intensity.shape]
     use = valid[np.ix_(*(np.minimum(place, n - 1) for place, n in zip(places, valid.shape, strict=True)))]
