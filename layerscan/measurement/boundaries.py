@@ -133,9 +133,9 @@ def _edge(u, s, box, skew):  # type: ignore[no-untyped-def]
 @njit(cache=True)  # type: ignore[untyped-decorator]
 def _reach(shared, active):  # type: ignore[no-untyped-def]
     """Distance from an edge beyond which it is a plain step."""
-    reach = 5.0 * shared[BLUR] + 0.5 * shared[BOX]
+    reach = 4.5 * shared[BLUR] + 0.5 * shared[BOX]
     if active[RIM_DECAY]:
-        reach += 6.0 * shared[RIM_DECAY]
+        reach += 3.0 * shared[RIM_DECAY]
     return reach
 
 
@@ -262,9 +262,12 @@ def _accumulate(depth, value, weight, position, level, shared, active, target, p
         for m in range(SHARED):
             if active[m]:
                 gs[m] += w * by_shared[m] * residual
-                for k in range(SHARED):
-                    corner[m, k] += w * by_shared[m] * by_shared[k]
+                for k in range(m + 1):
+                    if active[k]:
+                        corner[m, k] += w * by_shared[m] * by_shared[k]
     for m in range(SHARED):
+        for k in range(m):
+            corner[k, m] = corner[m, k]
         if active[m]:
             off = belief[0, m] - shared[m]
             corner[m, m] += belief[1, m]
@@ -647,9 +650,9 @@ def _average_models(depth, profile, weight, fit, target, precision, place, used,
         shared = fit[2].copy()
         for name, value in model.start.items():
             shared[name] = value
-        trial = fit_edges(depth, profile, weight, fit[0], fit[1], shared, active, target, precision, belief, place, 5, 0.3, False)  # noqa: E501
-        if not trial[5] or (model.log_odds <= 0 and trial[3] > fit[3] - 2 * unit):
-            continue  # gains less than it costs
+        trial = fit_edges(depth, profile, weight, fit[0], fit[1], shared, active, target, precision, belief, place, 2, 0.3, False)  # noqa: E501
+        if not trial[5] or (model.log_odds <= 0 and trial[3] > fit[3] - unit):
+            continue  # two steps gain less than the model costs
         trial = fit_edges(depth, profile, weight, *trial[:3], active, target, precision, belief, place, 10, 0.05, False)
         if trial[5]:
             candidates.append((model.log_odds, trial, active))

@@ -131,13 +131,13 @@ def sheared_mean(field, slope, group):  # type: ignore[no-untyped-def]
 
 
 @njit(cache=True)  # type: ignore[untyped-decorator]
-def _energy(field, slope):  # type: ignore[no-untyped-def]
+def _energy(field, slope, stride):  # type: ignore[no-untyped-def]
     """Energy of the sheared mean profile: what is common to all columns."""
     count, columns = field.shape
     total = 0.0
     n = 0
     s1 = 0.0
-    for d in range(count):
+    for d in range(0, count, stride):
         value = 0.0
         number = 0
         for j in range(columns):
@@ -154,7 +154,7 @@ def _energy(field, slope):  # type: ignore[no-untyped-def]
             total += value * value
             s1 += value
             n += 1
-    return total / n - (s1 / n) ** 2 if n > 0.4 * count else -1.0
+    return total / n - (s1 / n) ** 2 if n * stride > 0.4 * count else -1.0
 
 
 @njit(cache=True)  # type: ignore[untyped-decorator]
@@ -163,15 +163,18 @@ def find_slope(field, most):  # type: ignore[no-untyped-def]
     count, columns = field.shape
     step = min(2.0 / columns, 0.35)
     steps = int(most / step)
-    best, slope = _energy(field, 0.0), 0.0
+    stride = max(count // 400, 1)
+    best, slope = _energy(field, 0.0, stride), 0.0
     for i in range(1, steps + 1):
         for sign in (-1.0, 1.0):
-            value = _energy(field, sign * i * step)
+            value = _energy(field, sign * i * step, stride)
             if value > best + 1e-9 * abs(best):
                 best, slope = value, sign * i * step
     width = 0.5 * step
+    stride = max(count // 1000, 1)
+    best = _energy(field, slope, stride)
     for _ in range(7):
-        left, right = _energy(field, slope - width), _energy(field, slope + width)
+        left, right = _energy(field, slope - width, stride), _energy(field, slope + width, stride)
         bend = left - 2 * best + right
         if left > best and left >= right:
             best, slope = left, slope - width
@@ -179,7 +182,7 @@ def find_slope(field, most):  # type: ignore[no-untyped-def]
             best, slope = right, slope + width
         elif bend < 0 and width < 0.4 * step:
             moved = 0.5 * width * (left - right) / bend
-            value = _energy(field, slope + moved)
+            value = _energy(field, slope + moved, stride)
             if value > best:
                 best, slope = value, slope + moved
             width *= 0.25
