@@ -236,3 +236,16 @@ def test_windows_cover_every_station_once(stations, window, count):
     windows = split_by_width(np.zeros((stations, 3)), window_stations=window)
     assert len(windows) == count
     assert [i for w in windows for i in range(w.start, w.stop)] == list(range(stations))
+
+
+def test_rough_boundaries_specular_and_incoherent():
+    # facts table: 12 bilayers 1.56/1.34, boundaries of 20 nm rms: specular 0.76, incoherent 0.80
+    wavelength = np.arange(480.0, 581.0, 2)
+    index = np.array([1.0, 1.56, 1.34])[:, None] * np.ones(wavelength.size)
+    boundary = 20 * np.random.default_rng(1).standard_normal((400, 25))
+    stations = np.maximum(np.array([85.3, 99.3] * 12) + np.diff(boundary, axis=1), 0)
+    options = {"aperture": 0.1, "cone": NORMAL}
+    specular, _ = lateral_reflectance(index, ORDER, stations, wavelength, station_step_nm=1.0, **options)
+    incoherent, _ = lateral_reflectance(index, ORDER, stations, wavelength, station_step_nm=1e6, **options)
+    assert specular.max() == pytest.approx(0.76, abs=0.015)
+    assert incoherent.max() == pytest.approx(0.80, abs=0.01)
