@@ -65,6 +65,8 @@ def match_columns(field, centre, gain, position, level, shared, decay_active, mo
     matrix = np.zeros((edges, 3))
     right = np.zeros(edges)
     at = np.empty(edges)
+    rise = np.empty(edges)
+    bump = np.empty(edges)
     for j in range(stations):
         matrix[:] = 0.0
         right[:] = 0.0
@@ -98,25 +100,23 @@ def match_columns(field, centre, gain, position, level, shared, decay_active, mo
             b = first
             while b < edges and at[b] - d <= reach:
                 step = level[b + 1] - level[b]
-                e, _, _, _, _ = _edge(d - at[b], s, box, skew if step > 0 else -skew)
+                e, du, _, _, _ = _edge(d - at[b], s, box, skew if step > 0 else -skew)
                 total += step * e
+                rise[b] = -step * du
+                bump[b] = 0.0
                 if decay_active:
                     side = 1.0 if step > 0 else -1.0
                     v = side * (d - at[b])
-                    rim += shared[3] * _rim(v, s, shared[5])[0] + shared[4] * _rim(-v, s, shared[5])[0]
+                    bright, dark = _rim(v, s, shared[5]), _rim(-v, s, shared[5])
+                    rim += shared[3] * bright[0] + shared[4] * dark[0]
+                    bump[b] = -side * (shared[3] * bright[1] - shared[4] * dark[1])
                 last = b
                 b += 1
             slope = 1 + gamma * (1 - 2 * total)
             residual = value - (total + gamma * total * (1 - total) + rim)
             g0 = g1 = 0.0
             for b in range(first, last + 1):
-                step = level[b + 1] - level[b]
-                _, du, _, _, _ = _edge(d - at[b], s, box, skew if step > 0 else -skew)
-                g = -slope * step * du
-                if decay_active:
-                    side = 1.0 if step > 0 else -1.0
-                    v = side * (d - at[b])
-                    g -= side * (shared[3] * _rim(v, s, shared[5])[1] - shared[4] * _rim(-v, s, shared[5])[1])
+                g = slope * rise[b] + bump[b]
                 right[b] += g * residual
                 matrix[b, 0] += g * g
                 if b > first:
