@@ -36,7 +36,7 @@ def say_peaks(prediction: Prediction, pair: Pair, match: PeakMatch | None, verdi
     opening = OPENINGS[conclusion].format(what=pair.kind)
     doubts = "; ".join(verdict.doubts)
     if match is None:
-        return _join([f"{opening}: {doubts}", *pair.notes])
+        return _join([f"{opening}: {doubts}", *pair.notes, "Next: predict and measure over a wider range of wavelengths"])
     parts = [f"{opening}: {doubts}" if doubts else opening, _numbers(pair, match, verdict)]
     span = verdict.agreement.passing_peak_range_nm
     if span is not None:
@@ -53,7 +53,9 @@ def say_peaks(prediction: Prediction, pair: Pair, match: PeakMatch | None, verdi
         parts.append("The uncertainty of an index is not stated and is left out")
     if conclusion == "explains":
         parts.append("Agreement does not prove a mechanism")
-    parts += _reasons(conclusion, found)
+    statistic = verdict.agreement.statistic
+    if found.note or statistic is None or conclusion == "contradicts":
+        parts += _reasons(found)
     parts.append(_next(conclusion, prediction, verdict, found))
     return _join([*parts, *pair.notes])
 
@@ -102,11 +104,9 @@ def _p_text(p_value: float) -> str:
     return "< 0.0001" if p_value < 1e-4 else f"= {p_value:.2g}"
 
 
-def _reasons(conclusion: str, found: Found) -> list[str]:
+def _reasons(found: Found) -> list[str]:
     if found.note:
         return [found.note[0].upper() + found.note[1:]]
-    if conclusion == "explains":
-        return []
     if not found.reasons:
         return ["No single change of thickness, index, assignment, side, angle, aperture or number of layers would "
                 "bring the peak there"]  # fmt: skip
@@ -126,8 +126,10 @@ def _next(conclusion: str, prediction: Prediction, verdict: Verdict, found: Foun
         return "Next: state the uncertainty of the pixel size (pixel_size='VALUE +- U nm'), from a length standard"
     if conclusion == "explains":
         return "Next: measure at several angles, where a multilayer's peak moves as predicted and a pigment's does not"
-    if verdict.doubts and "no uncertainty" in verdict.doubts[0]:
+    if verdict.agreement.statistic is None:
         return "Next: predict again with the uncertainty of the layers and draws"
+    if conclusion == "cannot_tell":
+        return "Next: measure a smaller spot with a small aperture, and more sections, so that both bands say more"
     for reason in found.reasons:
         for key, advice in NEXT:
             if key in reason.parameters[0]:

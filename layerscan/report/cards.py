@@ -156,12 +156,14 @@ def _scale_bar(thumbnail: Thumbnail) -> str:
         return ""
     bar_nm = nice_length(thumbnail.width_px * thumbnail.pixel_size_nm)
     bar = bar_nm / thumbnail.pixel_size_nm
-    right, low = thumbnail.width_px - 10, thumbnail.height_px - 6
-    box = max(bar + 8, 44.0)
+    size = max(thumbnail.width_px / 26, 5.0)  # of the letters
+    box = max(bar + size, 4.8 * size)
+    middle, low = thumbnail.width_px - box / 2, thumbnail.height_px - 0.7 * size
     return (
-        f'<rect x="{right - bar / 2 - box / 2:.1f}" y="{low - 17:.1f}" width="{box:.1f}" height="21" fill="#fff" '
-        f'fill-opacity=".85"/><path style="stroke:#000;stroke-width:3" d="M{right - bar:.1f} {low}H{right}"/>'
-        f'<text x="{right - bar / 2:.1f}" y="{low - 5:.1f}" text-anchor="middle">{length_text(bar_nm)}</text>'
+        f'<rect x="{middle - box / 2:.1f}" y="{low - 1.8 * size:.1f}" width="{box:.1f}" height="{2.5 * size:.1f}" '
+        f'fill="#fff" fill-opacity=".85"/><path style="stroke:#000;stroke-width:3" '
+        f'd="M{middle - bar / 2:.1f} {low:.1f}h{bar:.1f}"/><text x="{middle:.1f}" y="{low - 0.5 * size:.1f}" '
+        f'style="font-size:{size:.1f}px" text-anchor="middle">{length_text(bar_nm)}</text>'
     )
 
 
