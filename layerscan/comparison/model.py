@@ -32,6 +32,12 @@ class StackModel:
     aperture: float = 0.0
     polarisation: str = "unpolarised"
 
+    @property
+    def work(self) -> float:
+        """Layers times wavelengths times directions and polarisations of one calculation."""
+        directions = 16 if self.aperture > 0 or self.aoi_deg > 0 else 1
+        return float(len(self.thickness_nm)) * self.wavelength_nm.size * directions
+
     def curve(self, *, through: bool = False) -> FloatArray:
         """Reflectance, or 1 - T, so that bands always point upwards."""
         import numpy as np

@@ -24,6 +24,7 @@ ALIKE_RMS = 0.02
 of known thickness to 0.007-0.011 at best and 0.02-0.05 in general (data of arXiv:2602.06316)."""
 
 UNKNOWN_TOLERANCE_NM = 2.0  # how near a peak must come where nothing states an uncertainty
+WORK_LIMIT = 2e7  # layers x wavelengths x directions of one calculation; some two hundred are made
 GRID_POINTS = 16
 JUMP = 0.08  # a band that moves further than this (relative) from one step to the next has been lost
 REACHED_NM = 0.5  # a solution whose peak is further than this from the target is none: the peak jumps there
@@ -110,6 +111,8 @@ def find_reasons(
         model = rebuild_stack(prediction)
     except InputError as error:
         return Found(note=f"no reasons were sought: {error}")
+    if model.work > WORK_LIMIT:
+        return Found(note=f"no reasons were sought: with {len(model.thickness_nm)} layers that would take too long")
     follow = _Follower(through=pair.through, order=match.predicted.order)
     now = follow.peak(model, match.predicted.wavelength_nm)
     if now is None:
@@ -210,7 +213,7 @@ def possible_changes(
             unit="times those seen",
             apply=lambda value: model.repeated(round(value)),
             start=1.0,
-            choices=(2.0, 4.0, 10.0) if 2 <= len(model.thickness_nm) <= 2000 else (),
+            choices=(2.0, 4.0, 10.0) if 2 <= len(model.thickness_nm) and 10 * model.work <= WORK_LIMIT else (),
             prior="the frame shows a part of the stack",
         ),
         Change(

@@ -36,7 +36,8 @@ def say_peaks(prediction: Prediction, pair: Pair, match: PeakMatch | None, verdi
     opening = OPENINGS[conclusion].format(what=pair.kind)
     doubts = "; ".join(verdict.doubts)
     if match is None:
-        return _join([f"{opening}: {doubts}", *pair.notes, "Next: predict and measure over a wider range of wavelengths"])
+        advice = "Next: predict and measure over a wider range of wavelengths"
+        return _join([f"{opening}: {doubts}", *pair.notes, advice])
     parts = [f"{opening}: {doubts}" if doubts else opening, _numbers(pair, match, verdict)]
     span = verdict.agreement.passing_peak_range_nm
     if span is not None:

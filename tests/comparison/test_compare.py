@@ -280,6 +280,17 @@ def test_stack_with_equal_ends_has_one_layer_at_the_seam():
     assert all(a != b for a, b in zip(twice.sequence[1:-1], twice.sequence[2:-1], strict=False))
 
 
+def test_huge_stack_is_compared_without_reasons():
+    # a stack of 50,000 layers would be calculated some two hundred times
+    prediction = make_prediction()
+    many = tuple([90.0, 130.0] * 25_000)
+    sequence = ("air", *(["chitin", "air"] * 25_000), "absorber matched to air")
+    huge = replace(prediction, structure=replace(prediction.structure, thickness_nm=many, sequence=sequence))
+    wavelength = np.arange(380.0, 781.0)
+    seen = Spectrum(wavelength_nm=wavelength, value=bell(wavelength, 500.0), kind="reflectance")
+    assert "50000 layers that would take too long" in compare_light(huge, seen, ABSOLUTE).sentence
+
+
 def test_prediction_without_its_layers_gives_no_reasons():
     prediction = make_prediction()
     bare = replace(prediction, structure=replace(prediction.structure, thickness_nm=()))
