@@ -213,7 +213,7 @@ def possible_changes(
             unit="times those seen",
             apply=lambda value: model.repeated(round(value)),
             start=1.0,
-            choices=(2.0, 4.0, 10.0) if 2 <= len(model.thickness_nm) and 10 * model.work <= WORK_LIMIT else (),
+            choices=(2.0, 4.0, 10.0) if len(model.thickness_nm) >= 2 and 10 * model.work <= WORK_LIMIT else (),
             prior="the frame shows a part of the stack",
         ),
         Change(
