@@ -356,6 +356,8 @@ def track_columns(field, first, nodes, node_step, node_start, half, reach, memor
                 sure[z] = max(value, 0.0) ** 2 if value > 0.1 else 0.0
                 quality[z, j] = value
             for z in range(nodes):
+                if quality[z, j] <= -1.0:
+                    continue
                 weight, total = 1e-3, 0.0
                 for y in range(max(z - 1, 0), min(z + 2, nodes)):
                     part = sure[y] * (1.0 if y == z else 0.5)
@@ -366,7 +368,16 @@ def track_columns(field, first, nodes, node_step, node_start, half, reach, memor
                 step = min(max(step, -1.5), 1.5) * trust
                 now[z] += speed[z] + 0.5 * step
                 speed[z] = 0.98 * speed[z] + 0.12 * step
-                shift[z, j] = now[z]
+            for z in range(nodes):  # a node outside the picture goes with the nearest one inside
+                if quality[z, j] > -1.0:
+                    continue
+                for away in range(1, nodes):
+                    low, high = z - away, z + away
+                    near = low if low >= 0 and quality[low, j] > -1.0 else high
+                    if 0 <= near < nodes and quality[near, j] > -1.0:
+                        now[z], speed[z] = now[near], speed[near]
+                        break
+            shift[:, j] = now
             seen += 1
             rate = 1.0 / min(seen, memory)
             for d in range(count):
@@ -381,6 +392,34 @@ def track_columns(field, first, nodes, node_step, node_start, half, reach, memor
                     if value == value:
                         template[d] = template[d] + rate * (value - template[d]) if template[d] == template[d] else value
     return shift, quality
+
+
+@njit(cache=True)  # type: ignore[untyped-decorator]
+def hold_unseen(field, shift, node_start, node_step, half):  # type: ignore[no-untyped-def]
+    """Shift in which nodes whose window lies mostly outside the picture go with the nearest one inside."""
+    count, columns = field.shape
+    nodes = shift.shape[0]
+    out = shift.copy()
+    seen = np.zeros(nodes, np.bool_)
+    for j in range(columns):
+        for z in range(nodes):
+            centre = int(node_start + z * node_step + shift[z, j])
+            low, high = max(centre - half, 0), min(centre + half + 1, count)
+            n = 0
+            for d in range(low, high):
+                if field[d, j] == field[d, j]:
+                    n += 1
+            seen[z] = n >= max(6, (2 * half + 1) // 2)
+        for z in range(nodes):
+            if seen[z]:
+                continue
+            for away in range(1, nodes):
+                low, high = z - away, z + away
+                near = low if low >= 0 and seen[low] else high
+                if 0 <= near < nodes and seen[near]:
+                    out[z, j] = shift[near, j]
+                    break
+    return out
 
 
 @njit(cache=True)  # type: ignore[untyped-decorator]

@@ -14,6 +14,7 @@ from layerscan.measurement.field import (
     StraightField,
     aligned_mean,
     fit_frame,
+    hold_unseen,
     refine_shift,
     sample_field,
     settle_shift,
@@ -135,8 +136,10 @@ def _align(field: NDArray[np.float32], period: float) -> tuple[FloatArray, float
     shift, _ = track_columns(field, first, nodes, node_step, node_start, half, reach, MEMORY)
     template = aligned_mean(field, shift, node_start, node_step)
     shift = settle_shift(field, template, shift, node_start, node_step, half, int(0.7 * period) + 1, 0.15)
+    shift = hold_unseen(field, shift, node_start, node_step, half)
     for width in (4.0, 2.5):
         template = aligned_mean(field, shift, node_start, node_step)
         shift = refine_shift(field, template, shift, node_start, node_step, half, reach, width)
+        shift = hold_unseen(field, shift, node_start, node_step, half)
     shift -= np.average(shift, axis=1, weights=np.maximum(covered, 1e-9))[:, None]
     return shift, node_start, node_step
