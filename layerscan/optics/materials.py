@@ -71,9 +71,8 @@ def find_medium(text: str, *, folder: str | Path | None = None) -> Medium:
     key = body.casefold()
     if key in catalogue:
         return catalogue[key]
-    path = Path(body).expanduser()
-    if len(body) < 1000 and path.is_file():
-        return read_table(path)
+    if _is_file(body):
+        return read_table(Path(body).expanduser())
     import difflib
 
     near = (
@@ -85,6 +84,13 @@ def find_medium(text: str, *, folder: str | Path | None = None) -> Medium:
         f"Material '{text}' is not in the catalogue and is no file. {known}Give a catalogue name (layerscan materials "
         "lists them), an index such as 'n=1.56 +- 0.01' or 'n=1.68+0.03i', or a table file of wavelength, n and k."
     )
+
+
+def _is_file(text: str) -> bool:
+    try:
+        return Path(text).expanduser().is_file()
+    except (OSError, ValueError, RuntimeError):  # no text for a path: too long, a null byte, an unknown ~user
+        return False
 
 
 def list_media(folder: str | Path | None = None) -> tuple[Medium, ...]:
@@ -171,6 +177,7 @@ def _typed_medium(text: str) -> Medium:
 def read_table(path: Path) -> Medium:
     """Read a table of wavelength, n and, if there, k; separators are blanks, commas or semicolons.
 
+    A comma is a decimal sign where semicolons or tabs separate, or where blanks do and no number has a point.
     The wavelength is taken as um where a header says so or every value lies below 30, else as nm.
 
     Raises
@@ -184,7 +191,7 @@ def read_table(path: Path) -> Medium:
         raise MaterialError(f"Material table '{path}' cannot be read: {error.strerror}.") from None
     rows, header = [], ""
     for line in text.splitlines():
-        parts = [part for part in re.split(r"[;\t ]+|,", line.strip()) if part]
+        parts = _split(line)
         try:
             rows.append([float(part) for part in parts[:3]])
         except ValueError:
@@ -195,9 +202,20 @@ def read_table(path: Path) -> Medium:
         raise MaterialError(f"Material table '{path.name}' has {len(rows)} usable rows. {form}")
     table = np.array(rows)
     table = table[np.argsort(table[:, 0])]
-    if re.search(r"\b(um|µm|μm|micron|micrometer|micrometre)", header) or ("nm" not in header and table[-1, 0] < 30):
+    if re.search(r"(?<![a-z])(um|µm|μm|micro(n|met(er|re)))s?(?![a-z])", header) or (
+        "nm" not in header and table[-1, 0] < 30
+    ):
         table[:, 0] *= 1e3
     return _table_medium(table, path)
+
+
+def _split(line: str) -> list[str]:
+    """Numbers of one row as text with a decimal point."""
+    body = line.strip()
+    blanks = re.search(r"\d\s+[-+.\d]", body) and "." not in body
+    if re.search(r"\d,\d", body) and (";" in body or "\t" in body or blanks):
+        body = re.sub(r"(?<=\d),(?=\d)", ".", body)
+    return [part for part in re.split(r"[;\s,]+", body) if part]
 
 
 def _table_medium(table: FloatArray, path: Path) -> Medium:

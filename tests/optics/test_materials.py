@@ -178,6 +178,8 @@ def test_typed_index(text, n, u):
         ("n=1.5-0.1i", "k = -0.1 < 0"),
         ("n=-1.5", "positive refractive index"),
         ("n=0", "positive refractive index"),
+        ("no\0name", "is not in the catalogue"),
+        ("x" * 5000, "is not in the catalogue"),
     ],
 )
 def test_bad_material_is_named(text, message):
@@ -193,6 +195,9 @@ def test_bad_material_is_named(text, message):
         "# um\n0.4 1.50 0.01\n0.5 1.48 0.02\n0.7 1.47 0\n",
         "wavelength (nm);n;k\n700;1.47;0\n400;1.50;0.01\n500;1.48;0.02\n",
         "0.4\t1.50\t0.01\n0.5\t1.48\t0.02\n0.7\t1.47\t0\n",
+        "nm; n; k\n400;1,50;0,01\n500;1,48;0,02\n700;1,47;0\n",
+        "wavelength_um,n,k\n0.4, 1.50, 0.01\n0.5, 1.48, 0.02\n0.7, 1.47, 0\n",
+        "400 1,50 0,01\n500 1,48 0,02\n700 1,47 0,0\n",
     ],
 )
 def test_table_file(tmp_path, text):
