@@ -556,6 +556,7 @@ class Comparison:
     observed_source: str = ""
     observed_sha256: str | None = None
     scale: float | None = None  # factor on the observed spectrum where --scale free
+    predicted_colour: Colour | None = None  # of the quantity and wavelengths that were compared
     observed_colour: Colour | None = None
     observed_peaks: tuple[Peak, ...] = ()
     notes: tuple[str, ...] = ()  # doubts about the observed spectrum

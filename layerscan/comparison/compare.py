@@ -88,8 +88,10 @@ def compare_light(
         observed_source=observed.source,
         observed_sha256=observed.sha256,
         scale=pair.scale,
+        predicted_colour=colours[0] if colours else None,
         observed_colour=colours[1] if colours else None,
         observed_peaks=seen,
+        notes=(*observed.doubts, *pair.notes),
     )
 
 

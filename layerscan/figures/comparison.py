@@ -42,7 +42,7 @@ def comparison_drawing(comparison: Comparison, prediction: Prediction, observed:
         axes, side = figure.add_subplot(grid[0, 0]), figure.add_subplot(grid[0, 1])
         words = figure.add_subplot(grid[1, :])
         _draw_spectra(axes, comparison, prediction, observed)
-        swatches = [("predicted", prediction.colour, "-")]
+        swatches = [("predicted", comparison.predicted_colour or prediction.colour, "-")]
         if comparison.observed_colour is not None:
             swatches.append(("observed", comparison.observed_colour, "--"))
         style.draw_swatches(side, swatches)

@@ -257,8 +257,8 @@ def draw_swatches(axes: Axes, swatches: Sequence[tuple[str, Colour, str]]) -> No
 
 def colour_text(colour: Colour) -> str:
     """L*, a*, b* and what to know about the swatch, in two short lines."""
-    light, a, b = colour.lab
-    first = f"L* {light:.0f}, a* {a:.0f}, b* {b:.0f}"
+    light, a, b = (round(value) for value in colour.lab)
+    first = f"L* {light}, a* {a}, b* {b}"
     if not colour.in_gamut:
         return f"{first}\nnearest in sRGB: {colour.srgb}"
     return f"{first}\nsRGB {colour.srgb}"

@@ -110,7 +110,7 @@ def main_peak(peaks: Iterable[Peak]) -> Peak | None:
 
 def swatch_words(colour: Colour) -> str:
     """Text alternative of a swatch."""
-    light, a, b = colour.lab
+    light, a, b = (round(value, 1) + 0.0 for value in colour.lab)
     shown = "" if colour.in_gamut else ", outside sRGB, nearest shown"
     return f"{colour_words(colour)} (L* {light:.1f}, a* {a:.1f}, b* {b:.1f}{shown})"
 

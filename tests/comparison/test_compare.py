@@ -383,3 +383,12 @@ def test_ranges_that_do_not_meet_are_refused(prediction):
     seen = Spectrum(wavelength_nm=wavelength, value=bell(wavelength, 950.0), kind="reflectance")
     with pytest.raises(InputError, match="share 0 nm"):
         compare_light(prediction, seen, ABSOLUTE)
+
+
+def test_colours_are_those_of_what_was_compared(prediction):
+    # like with like: light that passes has the colour of the transmittance, and doubts of the reader are carried on
+    seen = replace(seen_of(prediction, kind="transmittance"), doubts=("Taken as percent.",))
+    answer = compare_light(prediction, seen, ABSOLUTE)
+    assert answer.predicted_colour.lab != prediction.colour.lab
+    assert answer.notes == ("Taken as percent.",)
+    assert answer.delta_e00 < 1.5
