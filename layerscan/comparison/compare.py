@@ -65,7 +65,7 @@ def compare_light(
     match = agree.match_peaks(agree.predicted_peaks(pair, prediction), seen)
     verdict = agree.judge_peaks(match, calibrated=calibrated)
     found = find_reasons(prediction, pair, match, progress=progress)
-    flags = [*prediction.flags, *pair.flags, *found.flags]
+    flags = [*prediction.flags, *pair.flags]
     if match is None:
         flags.append("no_peak")
     elif match.order_uncertain:

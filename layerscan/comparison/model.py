@@ -12,6 +12,9 @@ from layerscan.errors import InputError
 if TYPE_CHECKING:
     from layerscan.records import ComplexArray, FloatArray, Medium, Prediction
 
+WORK_LIMIT = 2e7
+"""Layers x wavelengths x directions of one calculation beyond which no reasons are sought: that takes two hundred."""
+
 REACH = 0.15
 """How far beyond the predicted range the model reaches, relative, so that a peak can be followed in and out."""
 
