@@ -747,7 +747,7 @@ def _truth(
         exists=exists[keep], visible_px=visible_px, visible_from=clear, layer_phase=tuple(all_phases[first + 1 : last + 1]),
         outer_phase=(all_phases[first], all_phases[last + 1]), step=np.diff(levels)[keep], thickness_px=np.array(thickness),
         period_px=None, period_n=0, period_ends=None,
-        orientation_deg=None if inside else _mean_orientation(recipe, centre, shape, drift),
+        orientation_deg=None if inside else _mean_orientation(recipe, centre, shape, drift, lateral, wave),
         blur_px=recipe.blur_px, noise=math.sqrt(recipe.noise**2 + poisson), contrast=contrast, roughness_px=np.array(rough),
         artefact=artefact, drift=drift, pixel_size_nm=recipe.pixel_size_nm, centre=centre, normal_scale=scale,
     )  # fmt: skip
@@ -761,15 +761,23 @@ def _truth(
     )
 
 
-def _mean_orientation(recipe: Recipe, centre: tuple[float, float], shape: tuple[int, int], drift: np.ndarray) -> float:
-    """Direction of the normal averaged over the frame as an axis (double-angle mean)."""
+def _mean_orientation(
+    recipe: Recipe,
+    centre: tuple[float, float],
+    shape: tuple[int, int],
+    drift: np.ndarray,
+    lateral: np.ndarray,
+    wave: np.ndarray,
+) -> float:
+    """Direction of the normal averaged over the frame as an axis (double-angle mean), waviness and drift included."""
     shear = float(np.polyfit(np.arange(len(drift)), drift, 1)[0]) if drift.any() else 0.0
-    theta = np.radians(recipe.orientation_deg)
-    if recipe.radius_px is not None:
-        r, c = np.mgrid[0 : shape[0] : 16, 0 : shape[1] : 16]
-        theta = np.arctan2(r - centre[0], c - centre[1])
-    theta = np.arctan2(np.sin(theta) + shear * np.cos(theta), np.cos(theta))
-    return float(np.degrees(np.angle(np.mean(np.exp(2j * theta))) / 2) % 180)
+    r, c = np.mgrid[0 : shape[0] - recipe.banner_rows : 8, 0 : shape[1] : 8].astype(float)
+    _, place = _coordinates(recipe, centre, r, c + np.interp(r, np.arange(len(drift)), drift))
+    theta = np.radians(recipe.orientation_deg) if recipe.radius_px is None else np.arctan2(r - centre[0], c - centre[1])
+    slope = np.interp(place, lateral, np.gradient(wave))
+    g_column, g_row = np.cos(theta) + slope * np.sin(theta), np.sin(theta) - slope * np.cos(theta)
+    angle = np.arctan2(g_row + shear * g_column, g_column)
+    return float(np.degrees(np.angle(np.mean(np.exp(2j * angle))) / 2) % 180)
 
 
 # --- named kinds ----------------------------------------------------------------------------------------------------

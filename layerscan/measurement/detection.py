@@ -9,7 +9,16 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from layerscan.errors import InputError
-from layerscan.measurement.orientation import OrientationMap, StreamGrid, Tiles, analyse_tiles, smooth_map, trace_grid
+from layerscan.measurement.orientation import (
+    OrientationMap,
+    Rotation,
+    StreamGrid,
+    Tiles,
+    analyse_tiles,
+    refine_orientation,
+    smooth_map,
+    trace_grid,
+)
 from layerscan.measurement.pyramid import Level, build_pyramid
 
 if TYPE_CHECKING:
@@ -611,7 +620,9 @@ def _layered(best: _Judged, levels: tuple[Level, ...]) -> LayerDetection:
     )  # fmt: skip
     field_map = straight.field_map
     angle = np.degrees(0.5 * np.arctan2(field_map.sin2, field_map.cos2)) % 180
-    orientation, u_orientation, varies = _global_orientation(candidate, levels, step, valid)
+    direction = _global_orientation(candidate, levels, step, valid)
+    if direction.flat is not None:
+        angle = np.full_like(angle, direction.angle_deg)
     seed = straight.grid.origin
     return LayerDetection(
         layered=True,
@@ -621,8 +632,8 @@ def _layered(best: _Judged, levels: tuple[Level, ...]) -> LayerDetection:
         region=region,
         valid=valid,
         valid_step_px=step,
-        orientation_deg=orientation,
-        u_orientation_deg=u_orientation,
+        orientation_deg=direction.angle_deg,
+        u_orientation_deg=direction.u_deg,
         orientation_map_deg=angle,
         coherence=np.where(member, tiles.coherence, 0.0),
         map_row_px=level.to_page(tiles.row),
@@ -632,7 +643,7 @@ def _layered(best: _Judged, levels: tuple[Level, ...]) -> LayerDetection:
         seed_px=(
             float(level.to_page(straight.grid.row[seed])), float(level.to_page(straight.grid.column[seed])),
         ),
-        flags=("orientation_varies",) if varies else (),
+        flags=("orientation_varies",) if direction.varies else (),
         evidence=evidence,
     )  # fmt: skip
 
@@ -689,10 +700,18 @@ def _mean_direction(candidate: _Candidate) -> tuple[float, float, float]:
     return math.degrees(np.angle(vector) / 2) % 180, spread, max(float(member.sum()) / 4, 1.0)
 
 
-def _global_orientation(
-    candidate: _Candidate, levels: tuple[Level, ...], step: int, valid: BoolArray
-) -> tuple[float, float | None, bool]:
-    """Mean direction of the normal, its standard uncertainty, and whether the direction varies over the field."""
+@dataclass(frozen=True, kw_only=True, eq=False)
+class _Direction:
+    """Mean direction of the normal; ``flat`` holds the fit of one straight direction where that describes the layers."""
+
+    angle_deg: float
+    u_deg: float
+    varies: bool
+    flat: Rotation | None
+
+
+def _global_orientation(candidate: _Candidate, levels: tuple[Level, ...], step: int, valid: BoolArray) -> _Direction:
+    """Mean direction of the tiles, or that of the layers as straight lines where they leave it by no more than noise."""
     mean, spread, independent = _mean_direction(candidate)
     level = next((each for each in levels if each.intensity.size <= 2**21), levels[-1])
     places = [np.floor(level.to_page(np.arange(n, dtype=float)) / step).astype(int) for n in level.intensity.shape]
@@ -700,13 +719,15 @@ def _global_orientation(
     if level.valid is not None:
         use = use & (level.valid > 0.5)
     period = 1 / candidate.frequency * candidate.level.factor / level.factor
-    extent = math.sqrt(float(use.sum()))
-    if spread > 6 or extent < 2 * period:
-        return mean, spread / math.sqrt(independent), spread > 6
-    from layerscan.measurement.orientation import refine_orientation
-
+    tiles_say = _Direction(angle_deg=mean, u_deg=spread / math.sqrt(independent), varies=spread > 2, flat=None)
+    if spread > 8 or use.sum() < 4 * period**2:
+        return tiles_say
     fine = refine_orientation(level.intensity, use, angle_deg=mean)
-    offset = abs((fine.angle_deg - mean + 90) % 180 - 90)
-    if not fine.converged or offset > max(3 * spread / math.sqrt(independent), 1.0):
-        return mean, spread / math.sqrt(independent), spread > 2
-    return fine.angle_deg, fine.u_deg, spread > 2
+    offset = math.radians(abs((fine.angle_deg - mean + 90) % 180 - 90))
+    if not fine.converged or offset * math.sqrt(float(use.sum())) > 0.5 * period:
+        return tiles_say
+    wave = math.sqrt(max(fine.wave_px**2 - fine.u_wave_px**2, 0.0))
+    bend = math.degrees(3 * wave / math.sqrt(float(use.sum())))  # what waviness leaves undecided about a mean direction
+    if fine.wave_px < max(2 * fine.u_wave_px, 0.1):
+        return _Direction(angle_deg=fine.angle_deg, u_deg=math.hypot(fine.u_deg, bend), varies=False, flat=fine)
+    return _Direction(angle_deg=fine.angle_deg, u_deg=math.hypot(fine.u_deg, bend), varies=spread > 2, flat=None)

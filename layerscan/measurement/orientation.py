@@ -286,6 +286,12 @@ class Rotation:
     u_deg: float
     noise: float
     converged: bool
+    wave_px: float  # rms depth by which the layers leave the straight line
+    u_wave_px: float  # what noise alone would give
+    origin: FloatArray  # row and column of the middle, and minus half the depth of the profile
+    step_px: float
+    profile: FloatArray  # mean intensity against depth, in steps of ``step_px``
+    count: FloatArray  # pixels in each bin of the profile
 
 
 def refine_orientation(
@@ -317,9 +323,7 @@ def refine_orientation(
     at the Cramer-Rao bound sigma^2 / sum (f' s)^2 with f known, but for what f costs. It cannot see waviness: for wavy
     layers the answer is the straight line that fits best.
     """
-    from scipy.ndimage import gaussian_filter1d
-
-    from layerscan.measurement.orientation_kernels import bin_profile, rotation_normal_equations
+    from layerscan.measurement.orientation_kernels import lateral_shifts, rotation_normal_equations
 
     rows, columns = np.nonzero(use.any(axis=1))[0], np.nonzero(use.any(axis=0))[0]
     middle = (0.5 * (rows[0] + rows[-1]), 0.5 * (columns[0] + columns[-1]))
@@ -329,12 +333,7 @@ def refine_orientation(
     theta = math.radians(angle_deg)
     u, noise, converged = math.inf, math.inf, False
     for _ in range(rounds):
-        total, number = np.zeros(count), np.zeros(count)
-        bin_profile(image, use, math.cos(theta), math.sin(theta), origin, step_px, total, number)
-        known = number > 0
-        profile = np.interp(np.arange(count), np.flatnonzero(known), total[known] / number[known])
-        slope = gaussian_filter1d(profile, 0.7 / step_px, order=1) / step_px
-        profile = gaussian_filter1d(profile, 0.35 / step_px)
+        profile, slope, number = _profile_across(image, use, theta, origin, step_px, count)
         a, b, e, n = rotation_normal_equations(
             image, use, math.cos(theta), math.sin(theta), origin, step_px, profile, slope
         )
@@ -347,4 +346,33 @@ def refine_orientation(
         if abs(change) < 0.1 * u:
             converged = True
             break
-    return Rotation(angle_deg=math.degrees(theta) % 180, u_deg=math.degrees(u), noise=noise, converged=converged)
+    profile, slope, number = _profile_across(image, use, theta, origin, step_px, count)
+    lateral = np.array([-reach, max(2 * reach / 24, 2.0)])
+    weight, moment = np.zeros(25), np.zeros(25)
+    lateral_shifts(
+        image, use, math.cos(theta), math.sin(theta), origin, step_px, profile, slope, lateral, weight, moment
+    )
+    seen = weight > 0.2 * weight.max()
+    shift, share = moment[seen] / np.maximum(weight[seen], 1e-30), weight[seen] / max(float(weight[seen].sum()), 1e-30)
+    wave = math.sqrt(float(np.sum(share * (shift - np.sum(share * shift)) ** 2))) if seen.any() else math.inf
+    u_wave = noise * math.sqrt(float(np.sum(share / np.maximum(weight[seen], 1e-30)))) if seen.any() else math.inf
+    return Rotation(
+        angle_deg=math.degrees(theta) % 180, u_deg=math.degrees(u), noise=noise, converged=converged, wave_px=wave,
+        u_wave_px=u_wave, origin=origin, step_px=step_px, profile=profile, count=number,
+    )  # fmt: skip
+
+
+def _profile_across(
+    image: NDArray[np.float32], use: BoolArray, theta: float, origin: FloatArray, step_px: float, count: int
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Mean intensity against depth for a direction, a little smoothed, its slope, and the pixels in each bin."""
+    from scipy.ndimage import gaussian_filter1d
+
+    from layerscan.measurement.orientation_kernels import bin_profile
+
+    total, number = np.zeros(count), np.zeros(count)
+    bin_profile(image, use, math.cos(theta), math.sin(theta), origin, step_px, total, number)
+    known = number > 0
+    profile = np.interp(np.arange(count), np.flatnonzero(known), total[known] / number[known])
+    slope = gaussian_filter1d(profile, 0.7 / step_px, order=1) / step_px
+    return gaussian_filter1d(profile, 0.35 / step_px), slope, number

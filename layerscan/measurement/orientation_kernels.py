@@ -197,3 +197,25 @@ def rotation_normal_equations(
                 e += miss * miss
                 n += 1.0
     return a, b, e, n
+
+
+@njit(cache=True)  # type: ignore[untyped-decorator]
+def lateral_shifts(
+    image: F4, use: NDArray[np.bool_], cos: float, sin: float, origin: F8, width: float, profile: F8, slope: F8,
+    lateral: F8, weight: F8, moment: F8,
+) -> None:  # fmt: skip
+    """Sums of f'^2 and f' r over pixels in bins of the lateral place (``lateral`` = first place, bin width)."""
+    for r in range(image.shape[0]):
+        base = (r - origin[0]) * sin - origin[1] * cos - origin[2]
+        side = (r - origin[0]) * cos + origin[1] * sin
+        for c in range(image.shape[1]):
+            if use[r, c]:
+                d = (base + c * cos) / width - 0.5
+                i = int(d)
+                b = int((side - c * sin - lateral[0]) / lateral[1])
+                if d < 0 or i >= len(profile) - 1 or b < 0 or b >= len(weight):
+                    continue
+                part = d - i
+                f = slope[i] * (1 - part) + slope[i + 1] * part
+                weight[b] += f * f
+                moment[b] += f * (image[r, c] - (profile[i] * (1 - part) + profile[i + 1] * part))
