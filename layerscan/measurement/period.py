@@ -65,7 +65,7 @@ def estimate_period(intensity: Any, *, step_nm: float) -> Period:
     x = np.arange(n) - 0.5 * (n - 1)
     flat = value - np.polyval(np.polyfit(x, value, 1), x)
     frequency, harmonics, statistic = _start(flat)
-    frequency, harmonics, rest, u_frequency = _refine(value, x, frequency, harmonics)
+    frequency, harmonics, rest, u_frequency = _refine_best(value, x, frequency, harmonics)
     if frequency * n < LEAST_PERIODS - 0.05:
         raise MeasurementError(
             f"Only {frequency * n:.1f} periods fit in the profile of {n} samples. At least three are needed: give a longer profile."
@@ -131,7 +131,6 @@ def _start(flat: FloatArray) -> tuple[float, int, float]:
         score[better] = value[better]
         count[better] = m
     best = int(np.argmax(score))
-    # a submultiple explains no less: go up while a multiple explains nearly all of it with fewer harmonics
     if score[best] < 2 * log_n + 6:
         raise MeasurementError(
             "No period stands out of the noise of the profile. Give a line that crosses at least three periods of the layers, "
@@ -141,26 +140,41 @@ def _start(flat: FloatArray) -> tuple[float, int, float]:
 
 
 def _design(x: FloatArray, frequency: float, harmonics: int) -> FloatArray:
-    columns = [np.ones_like(x), x / len(x)]
+    """Columns: one, slope, then cosine and sine of each harmonic (built by multiplying up the first)."""
+    design = np.empty((len(x), 2 * harmonics + 2))
+    design[:, 0], design[:, 1] = 1.0, x / len(x)
+    first = np.exp(2j * math.pi * frequency * x)
+    wave = first.copy()
     for m in range(1, harmonics + 1):
-        columns += [np.cos(2 * math.pi * m * frequency * x), np.sin(2 * math.pi * m * frequency * x)]
-    return np.stack(columns, axis=1)
+        design[:, 2 * m], design[:, 2 * m + 1] = wave.real, wave.imag
+        wave = wave * first
+    return design
 
 
-def _refine(value: FloatArray, x: FloatArray, frequency: float, harmonics: int) -> tuple[float, int, FloatArray, float]:
+def _refine_best(value: FloatArray, x: FloatArray, frequency: float, harmonics: int) -> tuple[float, int, FloatArray, float]:
+    """Refine the start and its multiples, which explain a profile as well with fewer harmonics; best by BIC."""
+    tried = [_refine(value, x, frequency * k, harmonics) for k in (1, 2, 3, 4) if k == 1 or frequency * k < 0.4]
+    best = min(tried, key=lambda fit: fit[0])
+    return best[1], best[2], best[3], best[4]
+
+
+def _refine(
+    value: FloatArray, x: FloatArray, frequency: float, harmonics: int
+) -> tuple[float, float, int, FloatArray, float]:
     """Gauss-Newton on frequency and amplitudes for every number of harmonics near the start; best by BIC."""
     n = len(x)
+    floor = 1e-20 * max(float(value @ value), 1e-300)
     best: tuple[float, float, int, FloatArray, float] | None = None
     most = min(MOST_HARMONICS, max(int(0.5 / frequency), 1), max((n - 4) // 2, 1))
     for m in range(1, most + 1):
         if m > harmonics + 2:
             break
         f, rest, u = _gauss_newton(value, x, frequency, m)
-        score = n * math.log(max(float((rest**2).sum()), 1e-300) / n) + (2 * m) * math.log(n)
+        score = n * math.log(max(float(rest @ rest), floor) / n) + (2 * m) * math.log(n)
         if best is None or score < best[0]:
             best = (score, f, m, rest, u)
     assert best is not None
-    return best[1], best[2], best[3], best[4]
+    return best
 
 
 def _gauss_newton(value: FloatArray, x: FloatArray, frequency: float, harmonics: int) -> tuple[float, FloatArray, float]:
@@ -171,14 +185,15 @@ def _gauss_newton(value: FloatArray, x: FloatArray, frequency: float, harmonics:
     rest = value
     for _ in range(12):
         design = _design(x, f, harmonics)
-        coefficient, *_ = np.linalg.lstsq(design, value, rcond=None)
+        gram = design.T @ design
+        coefficient = np.linalg.solve(gram, design.T @ value)
         rest = value - design @ coefficient
         slope = np.zeros(n)
         for m in range(1, harmonics + 1):
             a, b = coefficient[2 * m], coefficient[2 * m + 1]
             turn = 2 * math.pi * m
             slope += turn * x * (b * np.cos(turn * f * x) - a * np.sin(turn * f * x))
-        projected = slope - design @ np.linalg.lstsq(design, slope, rcond=None)[0]
+        projected = slope - design @ np.linalg.solve(gram, design.T @ slope)
         curvature = float(projected @ projected)
         if not curvature > 0:
             break
