@@ -18,6 +18,7 @@ Polarisation = Literal["s", "p", "unpolarised", "left", "right"]
 CONE_TOLERANCE = 5e-4  # of reflectance, between the rule used and one of twice as many directions
 CONE_NODES = (4, 8, 16, 32, 64, 128)
 FINE_NODES = 160  # points per dimension from which the rule of an oblique cone is made
+VALUES_AT_ONCE = 1_000_000  # of reflectance over stacks, directions, polarisations and wavelengths
 SLIT_STEPS = 6  # points of calculation per bandwidth
 
 
@@ -137,14 +138,16 @@ def observe_stacks(
     names = polarisations_needed(cone, polarisation)
     shape = (sequence.shape[0], wavelength_nm.size)
     reflectance, transmittance = np.zeros(shape), np.zeros(shape)
-    for number, (angle, weight) in enumerate(zip(cone.aoi_deg, cone.weight, strict=True)):
+    together = max(VALUES_AT_ONCE // (shape[0] * shape[1] * len(names)), 1)
+    for start in range(0, cone.aoi_deg.size, together):
+        some = slice(start, start + together)
         r, t = reflectance_transmittance(
-            index, sequence, thickness_nm, wavelength_nm, aoi_deg=(float(angle),), polarisations=names
+            index, sequence, thickness_nm, wavelength_nm, aoi_deg=cone.aoi_deg[some].tolist(), polarisations=names
         )
-        reflectance += (weight / len(names)) * r[:, 0].sum(axis=1)
-        transmittance += (weight / len(names)) * t[:, 0].sum(axis=1)
+        reflectance += np.einsum("a,sapw->sw", cone.weight[some] / len(names), r)
+        transmittance += np.einsum("a,sapw->sw", cone.weight[some] / len(names), t)
         if tick is not None:
-            tick((number + 1) / cone.weight.size)
+            tick(min(start + together, cone.weight.size) / cone.weight.size)
     return reflectance, transmittance
 
 
@@ -167,8 +170,20 @@ def converged_cone(
     aperture: float,
     incident_index: float,
     polarisation: Polarisation = "unpolarised",
+    tolerance: float = CONE_TOLERANCE,
 ) -> tuple[Cone, float]:
     """Smallest cone rule that this stack needs, and the error of its quadrature.
+
+    Parameters
+    ----------
+    index, sequence, thickness_nm, wavelength_nm
+        One stack, as in ``observe_stacks``.
+    aoi_deg, aperture, incident_index
+        As in ``make_cone``.
+    polarisation : str
+    tolerance : float
+        Largest error of reflectance, at any wavelength, that is accepted; not reached with the finest rule, the error
+        returned says so.
 
     Returns
     -------
@@ -185,7 +200,7 @@ def converged_cone(
         fine = make_cone(aoi_deg=aoi_deg, aperture=aperture, incident_index=incident_index, nodes=nodes)
         now, _ = observe_stacks(index, sequence, thickness_nm, wavelength_nm, cone=fine, polarisation=polarisation)
         error = float(abs(now - before).max())
-        if error <= CONE_TOLERANCE:
+        if error <= tolerance:
             break
         before, coarse = now, fine
     return coarse, error

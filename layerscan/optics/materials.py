@@ -129,7 +129,10 @@ def extrapolation_nm(medium: Medium, wavelength_nm: FloatArray) -> float:
 
 def material_record(medium: Medium) -> dict[str, Any]:
     """What a document keeps of a medium: where its index comes from."""
-    at_d = index_of(medium, np.array([SODIUM_D_NM]))[0]
+    try:
+        at_d: complex | None = complex(index_of(medium, np.array([SODIUM_D_NM]))[0])
+    except MaterialError:  # a formula that has no value there
+        at_d = None
     return {
         "name": medium.name,
         "source": medium.source,
@@ -138,8 +141,8 @@ def material_record(medium: Medium) -> dict[str, Any]:
         "range_nm": None if medium.range_nm is None else list(medium.range_nm),
         "u_index": medium.u_index,
         "temperature_c": medium.temperature_c,
-        "n_589": float(at_d.real),
-        "k_589": float(at_d.imag),
+        "n_589": None if at_d is None else at_d.real,
+        "k_589": None if at_d is None else at_d.imag,
         "kind": medium.kind,
         "note": medium.note,
     }

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import sys
 from dataclasses import dataclass
+from functools import partial
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -53,6 +54,7 @@ if TYPE_CHECKING:
     from layerscan.records import ComplexArray, FloatArray, IntArray
 
 CHUNK_LAYERS = 40_000  # layers of the draws calculated between two reports of progress
+DRAWS_TOLERANCE = 5e-3  # of the quadrature over the cone, small against what the draws spread
 WORK_LIMIT = 1e12  # draws x layers x wavelengths x directions: about a quarter of an hour
 
 
@@ -161,28 +163,33 @@ def _calculate(stack: Stack, settings: PredictSettings, tell: Progress, *, what:
         )
     rng = np.random.default_rng(settings.seed)
     sequence, thickness = nominal_structure(stack, settings, rng)
-    cone, error = conditions.converged_cone(
-        index, sequence[None], thickness[None], grid, aoi_deg=settings.angle, aperture=settings.aperture,
-        incident_index=float(index[0].real[grid.size // 2]), polarisation=settings.polarisation,
+    find_cone = partial(
+        conditions.converged_cone, index, sequence[None], thickness[None], grid, aoi_deg=settings.angle,
+        aperture=settings.aperture, incident_index=float(index[0].real[grid.size // 2]),
+        polarisation=settings.polarisation,
     )  # fmt: skip
+    cone, error = find_cone()
+    coarse = find_cone(tolerance=DRAWS_TOLERANCE)[0] if settings.draws else cone
     slit = (
         None
         if settings.bandwidth <= 0
         else conditions.slit_weights(grid, wavelength, bandwidth_nm=settings.bandwidth).T
     )
 
-    def observe(n: ComplexArray, order: IntArray, d: FloatArray) -> tuple[FloatArray, FloatArray]:
-        r, t = conditions.observe_stacks(n, order, d, grid, cone=cone, polarisation=settings.polarisation)
+    def observe(
+        n: ComplexArray, order: IntArray, d: FloatArray, rule: conditions.Cone = coarse
+    ) -> tuple[FloatArray, FloatArray]:
+        r, t = conditions.observe_stacks(n, order, d, grid, cone=rule, polarisation=settings.polarisation)
         return (r, t) if slit is None else (r @ slit, t @ slit)
 
-    r, t = observe(index, sequence[None], thickness[None])
+    r, t = observe(index, sequence[None], thickness[None], cone)
     numbers = order_numbers(index, sequence, thickness, grid, wavelength, settings.angle)
     peaks = find_peaks(wavelength, r[0], order=numbers, smooth=False) if wavelength.size >= 5 else ()
     colour = colour_of_spectrum(wavelength, r[0], illuminant=settings.illuminant, observer_deg=settings.observer)
     flags: list[str] = []
     lower = upper = t_lower = t_upper = None
     if settings.draws:
-        drawn = _draw(stack, settings, index, cone.weight.size, rng, observe, tell, what)
+        drawn = _draw(stack, settings, index, coarse.weight.size, rng, observe, tell, what)
         reflected, transmitted, factor = drawn
         lower, upper = np.quantile(reflected, (0.025, 0.975), axis=0)
         t_lower, t_upper = np.quantile(transmitted, (0.025, 0.975), axis=0)

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import itertools
 import os
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from functools import partial
@@ -349,18 +349,23 @@ def _run(
     for medium in incident_media:
         rows = np.flatnonzero(order[:, 0] == medium)
         part = (order, thickness) if incident_media.size == 1 else (order[rows], thickness[rows])
-        together = max(CONSTANTS_AT_ONCE // n.size, 1)
-        for start in range(0, angles.size, together):
-            some = slice(start, start + together)
-            tables = prepare_constants(
-                n, int(medium), wavelength, angles[some], calculated, float(part[1].max(initial=0))
-            )
-            jobs = _jobs(tables, part, rows, start, (first, second), amplitude, workers)
-            _share(jobs, workers)
+        thickest = float(part[1].max(initial=0.0))
+        for angle, wave in _blocks(angles.size, wavelength.size, n.shape[0]):
+            tables = prepare_constants(n[:, wave], int(medium), wavelength[wave], angles[angle], calculated, thickest)
+            _share(_jobs(tables, part, rows, angle.start, wave.start, (first, second), amplitude, workers), workers)
     if calculated == kinds:
         return first, second
     pick = [0 if shared else calculated.index(kind) for kind in kinds]
     return np.ascontiguousarray(first[:, :, pick]), np.ascontiguousarray(second[:, :, pick])
+
+
+def _blocks(angles: int, wavelengths: int, materials: int) -> Iterator[tuple[slice, slice]]:
+    """Angles and wavelengths whose optical constants are prepared together; few where there are many materials."""
+    wave = min(max(CONSTANTS_AT_ONCE // materials, 1), wavelengths)
+    together = max(CONSTANTS_AT_ONCE // (materials * wave), 1)
+    for start in range(0, wavelengths, wave):
+        for angle in range(0, angles, together):
+            yield slice(angle, min(angle + together, angles)), slice(start, min(start + wave, wavelengths))
 
 
 def _threads(threads: int | None, work: int) -> int:
@@ -462,6 +467,7 @@ def _jobs(
     part: tuple[IntArray, FloatArray],
     rows: IntArray,
     first_angle: int,
+    first_wavelength: int,
     out: tuple[FloatArray, FloatArray],
     amplitude: bool,
     workers: int,
@@ -472,8 +478,8 @@ def _jobs(
     order, thickness = part
 
     def job(angle: int, tile: int, first: int, last: int) -> None:
-        start = tile * tables.width
-        stop = min(start + tables.width, tables.wavelengths)
+        start = first_wavelength + tile * tables.width
+        stop = first_wavelength + min((tile + 1) * tables.width, tables.wavelengths)
         kernel.run_tile(
             tables.media[angle, tile], tables.front[angle, tile], tables.real[angle, tile], order[first:last],
             thickness[first:last], rows[first:last], first_angle + angle, start, stop, tables.width, amplitude, *out,
