@@ -91,7 +91,7 @@ def compare_light(
         predicted_colour=colours[0] if colours else None,
         observed_colour=colours[1] if colours else None,
         observed_peaks=seen,
-        notes=(*observed.doubts, *pair.notes),
+        notes=observed.doubts,
     )
 
 

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from pathlib import Path
-from typing import TYPE_CHECKING, Literal
+from typing import TYPE_CHECKING, Any, Literal
 
 from layerscan.figures import style
 from layerscan.figures.style import Drawing, number_text
@@ -92,7 +92,7 @@ def draw_overlay(
     pixel = measurement.image.pixel_size
     row_nm, column_nm = (pixel.row_nm, pixel.column_nm) if pixel else (1.0, 1.0)
     picture, block = style.grey_picture(intensity, longest_px=longest_px)
-    rows, columns = picture.shape[0] * block, picture.shape[1] * block
+    rows, columns = (min(n * block, size) for n, size in zip(picture.shape, intensity.shape, strict=True))
     extent = (-0.5 * column_nm, (columns - 0.5) * column_nm, (rows - 0.5) * row_nm, -0.5 * row_nm)
     axes.imshow(picture, cmap="gray", vmin=0, vmax=1, extent=extent, interpolation="none")
     axes.locator_params(nbins=5)
@@ -172,10 +172,11 @@ def _averages(measurement: Measurement) -> list[tuple[str, Average]]:
 def _usable_pixels(micrograph: Micrograph) -> FloatArray:
     import numpy as np
 
-    intensity = np.asarray(micrograph.load(), dtype=np.float64)
+    intensity: Any = np.asarray(micrograph.load())
     if micrograph.mask is not None:
-        intensity = np.where(micrograph.mask, intensity, np.nan)
-    return intensity
+        intensity = np.where(micrograph.mask, intensity, np.float32(np.nan))
+    result: FloatArray = intensity
+    return result
 
 
 # --- the parts of the overlay ---------------------------------------------------------------------------------------

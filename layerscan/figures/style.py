@@ -198,13 +198,15 @@ def grey_picture(intensity: FloatArray, *, longest_px: int) -> tuple[FloatArray,
 
     block = max(1, -(-max(intensity.shape) // longest_px))
     rows, columns = (max(1, size // block) for size in intensity.shape)
-    part = np.asarray(intensity[: rows * block, : columns * block], dtype=np.float64)
-    block_rows, block_columns = part.shape[0] // rows, part.shape[1] // columns
-    boxes = part.reshape(rows, block_rows, columns, block_columns)
-    finite = np.isfinite(boxes)
-    total = np.where(finite, boxes, 0.0).sum(axis=(1, 3))
-    count = finite.sum(axis=(1, 3))
-    small = np.divide(total, count, out=np.full(total.shape, np.nan), where=count > 0)
+    tall, wide = min(block, intensity.shape[0]), min(block, intensity.shape[1])
+    small = np.full((rows, columns), np.nan)
+    for row in range(rows):  # strip by strip: a large image is never copied whole
+        strip = np.asarray(intensity[row * tall : (row + 1) * tall, : columns * wide], dtype=np.float64)
+        boxes = strip.reshape(strip.shape[0], columns, wide)
+        finite = np.isfinite(boxes)
+        count = finite.sum(axis=(0, 2))
+        total = np.where(finite, boxes, 0.0).sum(axis=(0, 2))
+        np.divide(total, count, out=small[row], where=count > 0)
     known = small[np.isfinite(small)]
     if known.size == 0:
         return np.ones_like(small), block
