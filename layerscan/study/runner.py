@@ -27,6 +27,8 @@ Work = Callable[[Unit], UnitResult]
 _TOPIC = "layerscan-study"
 _WINDOW_PER_WORKER = 2
 
+CLUSTER_LOST = "The cluster was lost. What was recorded is safe: run the same command again."
+
 
 def run_units(
     units: Sequence[Unit],
@@ -196,6 +198,11 @@ def _address_space_bytes() -> int | None:
         return None
 
 
+def _read_allowed_failures(dask_scheduler: Any) -> int:
+    """How often the scheduler itself tries a task again whose worker died."""
+    return int(dask_scheduler.allowed_failures)
+
+
 # --- in the caller --------------------------------------------------------------------------------------------------
 
 
@@ -227,6 +234,7 @@ class _Engine:
         self.caller = (socket.gethostname(), os.getpid())
         self.slots, self.slots_asked = 0, 0.0
         self.session = uuid.uuid4().hex[:8]
+        self.scheduler_retries = int(self.client.run_on_scheduler(_read_allowed_failures))
 
     def run(self) -> None:
         """Submit in a small window until nothing is left."""
@@ -289,24 +297,34 @@ class _Engine:
                 futures.append(self.finished.get_nowait())
         records = []
         for future in futures:
-            attempt = self.running.pop(future)
-            records += self._take(future, attempt)
-            future.release()
+            attempt = self.running.pop(future, None)
+            if attempt is not None:  # a future may report twice: lost, then finished
+                records += self._take(future, attempt)
+                future.release()
         if records:
             self.ledger.record(records)
         if not futures and self.client.status not in ("running", "connecting"):
-            raise LayerscanError("The cluster was lost. What was recorded is safe: run the same command again.")
+            raise LayerscanError(CLUSTER_LOST)
         self._report(start)
 
     def _take(self, future: Any, attempt: _Attempt) -> list[TaskRecord]:
         """Records of an ended attempt; none where the unit goes back to be tried again."""
+        error: BaseException | None = None
         if future.status == "finished":
-            return self._take_result(future.result(), attempt)
-        if future.status != "error":
-            raise LayerscanError(f"The cluster dropped '{attempt.unit.name}' ({future.status}). Run again.")
-        error = future.exception()
-        lost = type(error).__name__ == "KilledWorker"
-        if self._may_try_again(attempt):
+            try:
+                return self._take_result(future.result(timeout=60), attempt)
+            except LayerscanError:
+                raise
+            except Exception as failed:  # the worker died with the result, or cannot send it
+                error = failed
+        elif future.status == "error":
+            error = future.exception()
+        elif self.client.status not in ("running", "connecting"):
+            raise LayerscanError(CLUSTER_LOST)
+        lost = error is None or type(error).__name__ == "KilledWorker"
+        # a scheduler that tried it on several workers by itself has done what our own retries are for
+        tried_enough = lost and attempt.alone and self.scheduler_retries > 0
+        if self._may_try_again(attempt) and not tried_enough:
             self.suspects.append((attempt.unit, attempt.number + 1))
             return []
         kind, reason = self._explain_loss(attempt) if lost else ("unexpected error", f"{type(error).__name__}: {error}")

@@ -103,6 +103,21 @@ def test_poison_deadline_memory_and_bugs_end_as_failures_and_blame_no_other(make
     assert all(tasks[path].state == "done" for path in innocent)
 
 
+@pytest.mark.slow
+def test_a_cluster_with_its_own_retries_and_two_threads_a_worker_blames_no_other(make_study, monkeypatch):
+    # dask's own settings: a task is tried on four workers before it fails, and a worker's tasks die with it
+    from distributed import LocalCluster
+
+    monkeypatch.setenv("PYTHONPATH", str(Path(__file__).parent))
+    files = {f"images/A_{k}_0.txt": f"{200 + k} {201 + k} slow" for k in range(20)}
+    files["images/A_3_0.txt"] = "203 kill"
+    folder = make_study(files)
+    with LocalCluster(n_workers=2, threads_per_worker=2, dashboard_address="127.0.0.1:0", silence_logs=50) as cluster:
+        outcome = session.run_study(folder, cluster=cluster.scheduler_address, work=fake_work.measure_text)
+    assert (outcome.done, outcome.failed) == (19, 1)
+    assert outcome.failures[0][0] == "images/A_3_0.txt"
+
+
 def test_an_interrupted_run_goes_on_where_it_stopped(make_study, lots, run):
     # records.Progress: raising Interrupted in the callback stops the run
     folder = make_study({name: text + " slow" for name, text in lots.items()})
