@@ -1,12 +1,14 @@
-"""Figures of a study's page: specimens, predicted against observed, drift, spectra. Records in, SVG out."""
+"""Figures of a study: specimens, predicted against observed, drift, spectra; for the page, and as files on request."""
 
 from __future__ import annotations
 
+from pathlib import Path
 from typing import TYPE_CHECKING
 
 from layerscan.figures import style
+from layerscan.figures.export import write_drawing
 from layerscan.figures.prediction import finish_axes
-from layerscan.figures.style import Drawing, number_text, render_svg
+from layerscan.figures.style import Drawing, number_text
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -27,7 +29,47 @@ GROUP_LOOKS = (
 )
 
 
-def draw_specimens(summary: StudySummary) -> str | None:
+def study_drawings(summary: StudySummary) -> dict[str, Drawing]:
+    """Every figure of a study by a short name that can be that of a file."""
+    drawings = {"specimens": specimens_drawing(summary), "one_to_one": one_to_one_drawing(summary.peaks, summary.line)}
+    drawings |= {f"drift_{n}": drift_drawing(row) for n, row in enumerate(summary.drift, 1)}
+    drawings |= {f"spectrum_{n}": light_drawing(pair) for n, pair in enumerate(summary.light, 1)}
+    return {name: drawing for name, drawing in drawings.items() if drawing is not None}
+
+
+def write_study_figures(
+    folder: str | Path, summary: StudySummary, *, suffixes: Sequence[str] = (".pdf", ".tif")
+) -> tuple[Path, ...]:
+    """Write the figures of a study as files for a manuscript: PDF, and TIFF at 600 dots per inch.
+
+    Parameters
+    ----------
+    folder : path
+        Made where it does not exist.
+    summary : StudySummary
+    suffixes : sequence of str
+        Among .svg, .pdf, .tif.
+
+    Returns
+    -------
+    tuple of Path
+        The files, in the order of the page.
+
+    Raises
+    ------
+    SettingsError
+        Another suffix.
+    """
+    folder = Path(folder)
+    folder.mkdir(parents=True, exist_ok=True)
+    return tuple(
+        write_drawing(drawing, folder / f"{name}{suffix}")
+        for name, drawing in study_drawings(summary).items()
+        for suffix in suffixes
+    )
+
+
+def specimens_drawing(summary: StudySummary) -> Drawing | None:
     """Means of the specimens with U (k = 2), by group, and the group's mean with its interval as a band."""
     quantity = summary.quantity
     rows = [
@@ -70,18 +112,16 @@ def draw_specimens(summary: StudySummary) -> str | None:
     words = "; ".join(
         f"{group}: {number_text(mean.mean, mean.u)}" for group in groups if (mean := means.get(group)) is not None
     )
-    return render_svg(
-        Drawing(
-            width_in=8.5,
-            height_in=4.2,
-            title=f"{axis_words(quantity)} of each specimen",
-            description=f"Specimen means with U (k = 2) by group; bands: group mean with its interval. {words}",
-            compose=compose,
-        )
+    return Drawing(
+        width_in=8.5,
+        height_in=4.2,
+        title=f"{axis_words(quantity)} of each specimen",
+        description=f"Specimen means with U (k = 2) by group; bands: group mean with its interval. {words}",
+        compose=compose,
     )
 
 
-def draw_one_to_one(pairs: Sequence[PeakPair], line: LineFit | None) -> str | None:
+def one_to_one_drawing(pairs: Sequence[PeakPair], line: LineFit | None) -> Drawing | None:
     """Observed against predicted peaks with both u, the 1:1 line and the fitted line."""
     if not pairs:
         return None
@@ -116,18 +156,16 @@ def draw_one_to_one(pairs: Sequence[PeakPair], line: LineFit | None) -> str | No
         axes.set_aspect("equal")
         axes.legend(loc="upper left", bbox_to_anchor=(1.02, 1.0))
 
-    return render_svg(
-        Drawing(
-            width_in=6.6,
-            height_in=4.8,
-            title="Observed against predicted peak",
-            description=f"{len(pairs)} specimens with their uncertainties. " + (line.sentence if line else ""),
-            compose=compose,
-        )
+    return Drawing(
+        width_in=6.6,
+        height_in=4.8,
+        title="Observed against predicted peak",
+        description=f"{len(pairs)} specimens with their uncertainties. " + (line.sentence if line else ""),
+        compose=compose,
     )
 
 
-def draw_drift(row: DriftRow) -> str | None:
+def drift_drawing(row: DriftRow) -> Drawing | None:
     """Means against position with U (k = 2), and the fitted line with the interval of its slope as a band."""
     if len(row.points) < 2:
         return None
@@ -149,18 +187,16 @@ def draw_drift(row: DriftRow) -> str | None:
             axes.legend(loc="upper left", bbox_to_anchor=(0.0, -0.17), ncols=2)
         axes.set(xlabel=f"{row.along} ({row.position_unit})", ylabel=axis_words(row.quantity))
 
-    return render_svg(
-        Drawing(
-            width_in=7.0,
-            height_in=3.8,
-            title=f"{axis_words(row.quantity)} along {row.along}, {row.group}",
-            description=row.sentence or "Means against position.",
-            compose=compose,
-        )
+    return Drawing(
+        width_in=7.0,
+        height_in=3.8,
+        title=f"{axis_words(row.quantity)} along {row.along}, {row.group}",
+        description=row.sentence or "Means against position.",
+        compose=compose,
     )
 
 
-def draw_light_pair(pair: LightPair) -> str:
+def light_drawing(pair: LightPair) -> Drawing:
     """Observed over predicted spectrum of one specimen, with the 95 % band and the orders."""
 
     def compose(figure: Figure) -> None:
@@ -186,14 +222,12 @@ def draw_light_pair(pair: LightPair) -> str:
         finish_axes(axes, f"{pair.kind} (0 to 1)" if pair.kind != "absorbance" else "absorbance")
         _label_orders(axes, pair, wavelength)
 
-    return render_svg(
-        Drawing(
-            width_in=7.2,
-            height_in=4.0,
-            title=f"Observed and predicted {pair.kind}: {pair.specimen}",
-            description=pair.sentence or f"Predicted {pair.kind} of {pair.specimen}.",
-            compose=compose,
-        )
+    return Drawing(
+        width_in=7.2,
+        height_in=4.0,
+        title=f"Observed and predicted {pair.kind}: {pair.specimen}",
+        description=pair.sentence or f"Predicted {pair.kind} of {pair.specimen}.",
+        compose=compose,
     )
 
 

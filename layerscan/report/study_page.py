@@ -11,13 +11,14 @@ from urllib.parse import quote
 from markupsafe import Markup
 
 from layerscan._version import __version__
-from layerscan.figures.style import colour_words
+from layerscan.figures.style import colour_words, render_svg
 from layerscan.report import cards, study_figures, words
 from layerscan.report.cautions import CAUTIONS
 from layerscan.report.methods import describe_methods
 from layerscan.report.page import drawing, replace_file
 
 if TYPE_CHECKING:
+    from layerscan.figures.style import Drawing
     from layerscan.records import Colour
     from layerscan.report.summary import Estimate, ImageRow, LightPair, StudySummary
 
@@ -26,8 +27,6 @@ EXAMPLES = 12
 
 MOST_FIGURES = 60
 """Spectra drawn one by one; further specimens stand in the table only, and the page says so."""
-
-DECISIONS = {"pass": "pass", "fail": "fail", "undecided": "undecided"}
 
 
 def write_study_page(path: str | Path, summary: StudySummary) -> Path:
@@ -55,8 +54,8 @@ def render_study_page(summary: StudySummary) -> str:
     rest = summary.images if len(summary.images) > EXAMPLES else ()
     light = summary.light[:MOST_FIGURES]
     figures = {
-        "specimens": _figure(study_figures.draw_specimens(summary), "specimens"),
-        "one_to_one": _figure(study_figures.draw_one_to_one(summary.peaks, summary.line), "peaks"),
+        "specimens": _figure(study_figures.specimens_drawing(summary), "specimens"),
+        "one_to_one": _figure(study_figures.one_to_one_drawing(summary.peaks, summary.line), "peaks"),
     }
     return (
         words.page_environment()
@@ -76,7 +75,7 @@ def render_study_page(summary: StudySummary) -> str:
             ],
             light=[_light(pair, f"l{n}") for n, pair in enumerate(light)],
             light_left_out=len(summary.light) - len(light),
-            drift=[(row, _figure(study_figures.draw_drift(row), f"d{n}")) for n, row in enumerate(summary.drift)],
+            drift=[(row, _figure(study_figures.drift_drawing(row), f"d{n}")) for n, row in enumerate(summary.drift)],
             main=[
                 (group, estimate)
                 for group, estimates in summary.groups
@@ -123,8 +122,8 @@ def safe_link(path: str | None) -> str | None:
     return quote(clean)
 
 
-def _figure(svg: str | None, key: str) -> Markup | None:
-    return None if svg is None else drawing(svg, key)
+def _figure(figure: Drawing | None, key: str) -> Markup | None:
+    return None if figure is None else drawing(render_svg(figure), key)
 
 
 def _card(image: ImageRow, key: str, points: int) -> dict[str, Any]:
@@ -141,7 +140,7 @@ def _card(image: ImageRow, key: str, points: int) -> dict[str, Any]:
 def _light(pair: LightPair, key: str) -> dict[str, Any]:
     return {
         "pair": pair,
-        "figure": drawing(study_figures.draw_light_pair(pair), key),
+        "figure": _figure(study_figures.light_drawing(pair), key),
         "predicted": _swatch(pair.predicted_colour),
         "observed": _swatch(pair.observed_colour),
     }

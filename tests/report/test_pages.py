@@ -7,13 +7,14 @@ import pytest
 from figures.made_records import make_measurement, make_prediction
 from report.made_study import make_image, make_summary
 
-from layerscan.errors import InputError
+from layerscan.errors import InputError, SettingsError
 from layerscan.figures.measurement import draw_measurement
 from layerscan.figures.prediction import draw_prediction
 from layerscan.records import Agreement, Comparison, Reason
 from layerscan.report import cards
 from layerscan.report.cautions import CAUTIONS
 from layerscan.report.page import Chain, render_page, write_page
+from layerscan.report.study_figures import write_study_figures
 from layerscan.report.study_page import examples, render_study_page, safe_link, write_study_page
 from layerscan.report.svg import inline_svg
 from layerscan.report.words import anchor, check_swatch, percent
@@ -288,6 +289,18 @@ def test_page_is_complete_or_absent(tmp_path):
     assert sorted(path.name for path in tmp_path.iterdir()) == ["page.html", "report.html"]
     with pytest.raises(OSError, match="missing"):
         write_page(tmp_path / "missing" / "page.html", [], title="nothing")
+
+
+def test_study_figures_leave_as_files(tmp_path):
+    # on request: every figure of the page as a file; only the formats that were asked for
+    summary = make_summary(images=1)
+    files = write_study_figures(tmp_path / "figures", replace(summary, light=summary.light[:2]), suffixes=(".pdf",))
+    assert [file.name for file in files] == [
+        "specimens.pdf", "one_to_one.pdf", "drift_1.pdf", "spectrum_1.pdf", "spectrum_2.pdf"
+    ]  # fmt: skip
+    assert all(file.read_bytes().startswith(b"%PDF") for file in files)
+    with pytest.raises(SettingsError, match=r"\.docx"):
+        write_study_figures(tmp_path, summary, suffixes=(".docx",))
 
 
 def test_empty_study_can_be_shown():
