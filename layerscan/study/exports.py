@@ -1,12 +1,13 @@
-"""Tables of a study as CSV and Parquet, each written whole or not at all."""
+"""Tables of a study as CSV and Parquet, figures as files: each written whole or not at all."""
 
 from __future__ import annotations
 
 import csv
 import io
+import re
 from collections.abc import Mapping, Sequence
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from layerscan.document_files import write_file
 from layerscan.study.results import (
@@ -17,6 +18,9 @@ from layerscan.study.results import (
     layer_rows,
     make_table,
 )
+
+if TYPE_CHECKING:
+    from layerscan.report.summary import StudySummary
 
 _ACTIVE = ("=", "+", "-", "@", "＝", "＋", "－", "＠", "\t", "\r", "\n")
 """A text cell that begins with one of these is run as a formula by spreadsheet programs."""
@@ -38,6 +42,48 @@ def write_exports(folder: Path, results: StudyResults) -> tuple[Path, ...]:
         if data is not None:
             written.append(write_file(folder / f"{name}.parquet", data))
     return tuple(written)
+
+
+def write_figures(folder: Path, summary: StudySummary, formats: Sequence[str]) -> tuple[Path, ...]:
+    """Write the figures of a study's page as files for a manuscript.
+
+    Parameters
+    ----------
+    folder : Path
+        They go into its ``figures`` folder.
+    summary : StudySummary
+    formats : sequence of {"svg", "pdf", "tif", "tiff"}
+        A TIFF has 600 dots per inch.
+
+    Raises
+    ------
+    SettingsError
+        Another format.
+    """
+    from layerscan.figures.export import write_drawing
+    from layerscan.report import study_figures
+
+    drawings = {
+        "specimens": study_figures.specimens_drawing(summary),
+        "one_to_one": study_figures.one_to_one_drawing(summary.peaks, summary.line),
+    }
+    for drift in summary.drift:
+        drawings[f"drift_{_file_name(drift.group)}"] = study_figures.drift_drawing(drift)
+    for number, pair in enumerate(summary.light):
+        name = f"light_{_file_name(pair.group)}_{_file_name(pair.specimen)}_{number}"
+        drawings[name] = study_figures.light_drawing(pair)
+    target = folder / "figures"
+    target.mkdir(exist_ok=True)
+    return tuple(
+        write_drawing(drawing, target / f"{name}.{suffix}")
+        for name, drawing in drawings.items()
+        if drawing is not None
+        for suffix in formats
+    )
+
+
+def _file_name(text: str) -> str:
+    return re.sub(r"[^A-Za-z0-9]+", "_", text).strip("_")[:40] or "_"
 
 
 def table_csv(columns: Sequence[str], rows: Sequence[Mapping[str, Any]]) -> str:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+from collections.abc import Sequence
 from dataclasses import dataclass
 from datetime import UTC, datetime
 from pathlib import Path
@@ -160,13 +161,15 @@ def run_study(
         return _finish(ledger, folder, tasks)
 
 
-def report_study(folder: str | os.PathLike[str]) -> StudyOutcome:
+def report_study(folder: str | os.PathLike[str], *, figures: Sequence[str] = ()) -> StudyOutcome:
     """Write exports and page again from a finished or unfinished study; nothing is measured.
 
     Parameters
     ----------
     folder : path
         Where the study's ledger lies.
+    figures : sequence of {"svg", "pdf", "tif", "tiff"}
+        Formats in which the page's figures are written as files too; TIFF at 600 dots per inch.
 
     Raises
     ------
@@ -174,18 +177,20 @@ def report_study(folder: str | os.PathLike[str]) -> StudyOutcome:
         There is no ledger, or it was written by a newer layerscan.
     """
     with Ledger(folder) as ledger:
-        return _finish(ledger, Path(folder), None)
+        return _finish(ledger, Path(folder), None, figures)
 
 
-def _finish(ledger: Ledger, folder: Path, tasks: TaskList | None) -> StudyOutcome:
+def _finish(ledger: Ledger, folder: Path, tasks: TaskList | None, figures: Sequence[str] = ()) -> StudyOutcome:
     from layerscan.report.study_page import write_study_page
-    from layerscan.study.exports import write_exports
+    from layerscan.study.exports import write_exports, write_figures
     from layerscan.study.results import collect_results
     from layerscan.study.workup import summarise
 
     results = collect_results(ledger)
     summary = summarise(results)
     written = [str(path) for path in write_exports(folder, results)]
+    if figures:
+        written += [str(path) for path in write_figures(folder, summary, figures)]
     report = str(folder / PAGE_NAME)
     write_study_page(folder / PAGE_NAME, summary)
     without = sum(image.state == "done" and not image.counts for image in results.images)

@@ -6,7 +6,7 @@ from pathlib import Path
 import fake_work
 import pytest
 
-from layerscan.errors import InputError, Interrupted, LayerscanError
+from layerscan.errors import InputError, Interrupted, LayerscanError, SettingsError
 from layerscan.study import session
 from layerscan.study.ledger import Ledger
 from layerscan.study.notebook import open_study
@@ -203,6 +203,21 @@ def test_the_report_needs_neither_plan_nor_images(make_study, lots, run, tmp_pat
         path.unlink() if path.is_file() else path.rmdir()
     again = session.report_study(tmp_path / "out")
     assert (again.answer, again.done) == (first.answer, 12)
+
+
+def test_figures_are_written_on_request(make_study, lots, run):
+    # issue: "Figures also as PDF and 600 dpi TIFF on request"
+    from PIL import Image
+
+    folder = make_study(lots)
+    run(folder)
+    written = session.report_study(folder, figures=("pdf", "tiff")).written
+    assert str(folder / "figures" / "specimens.pdf") in written
+    assert (folder / "figures" / "specimens.pdf").read_bytes().startswith(b"%PDF")
+    with Image.open(folder / "figures" / "specimens.tiff") as image:
+        assert image.info["dpi"] == (600, 600)
+    with pytest.raises(SettingsError, match=r"ends in '\.bmp'"):
+        session.report_study(folder, figures=("bmp",))
 
 
 def test_a_cluster_that_does_not_answer_is_refused(make_study, lots):
