@@ -17,8 +17,9 @@ from numba import njit
 if TYPE_CHECKING:
     from layerscan.records import BoolArray, FloatArray
 
-BLUR, BOX, GAMMA, RIM_BRIGHT, RIM_DARK, RIM_DECAY, SKEW = range(7)
-SHARED = 7
+BLUR, BOX, GAMMA, RIM_BRIGHT, RIM_DARK, RIM_DECAY, SKEW, DARK_LEVEL, BRIGHT_LEVEL = range(9)
+SHARED = 9
+EDGE = 7  # the first parameters are of the edge, the last two the mean levels of the phases less 0 and 1
 _ROOT2 = math.sqrt(2.0)
 _NORM = 1.0 / math.sqrt(2.0 * math.pi)
 
@@ -182,7 +183,7 @@ def model_profile(depth, position, level, shared, active):  # type: ignore[no-un
 def _accumulate(depth, value, weight, position, level, shared, active, target, precision, belief, place, band, border, corner, g, gs):  # type: ignore[no-untyped-def]  # noqa: E501
     """Normal equations at the present parameters; returns the cost. Order: level 0, edge 0, level 1, edge 1, ...
 
-    ``belief`` (2, 7) is the mean and the precision of what is known beforehand of each shared parameter, ``place``
+    ``belief`` (2, 9) is the mean and the precision of what is known beforehand of each shared parameter, ``place``
     (2, edges) of each position (precision 0: nothing).
     """
     band[:] = 0.0
@@ -256,10 +257,10 @@ def _accumulate(depth, value, weight, position, level, shared, active, target, p
             g[first + p] += a * residual
             for q in range(p + 1):
                 band[first + p, p - q] += a * row[q]
-            for m in range(SHARED):
+            for m in range(EDGE):
                 if active[m]:
                     border[first + p, m] += a * by_shared[m]
-        for m in range(SHARED):
+        for m in range(EDGE):
             if active[m]:
                 gs[m] += w * by_shared[m] * residual
                 for k in range(m + 1):
@@ -280,9 +281,13 @@ def _accumulate(depth, value, weight, position, level, shared, active, target, p
             g[2 * b + 1] += place[1, b] * off
             cost += place[1, b] * off * off
     for i in range(edges + 1):
-        off = target[i] - level[i]
+        m = DARK_LEVEL if target[i] < 0.5 else BRIGHT_LEVEL
+        off = target[i] + shared[m] - level[i]
         band[2 * i, 0] += precision[i]
         g[2 * i] += precision[i] * off
+        border[2 * i, m] -= precision[i]
+        corner[m, m] += precision[i]
+        gs[m] -= precision[i] * off
         cost += precision[i] * off * off
     return cost
 
@@ -421,6 +426,9 @@ def fit_edges(depth, value, weight, position, level, shared, active, target, pre
             new_shared[RIM_DECAY] = min(
                 max(shared[RIM_DECAY] + step_shared[RIM_DECAY], 0.6 * shared[RIM_DECAY], 0.3), 1.6 * shared[RIM_DECAY]
             )
+        for m in range(EDGE, SHARED):
+            if active[m]:
+                new_shared[m] = shared[m] + min(max(step_shared[m], -0.3), 0.3)
         new_position = position.copy()
         new_level = level.copy()
         limit = max(0.5 * shared[BLUR], 0.3)
@@ -557,14 +565,15 @@ def fit_boundaries(
     target = np.where(np.arange(segments) % 2 == 0, float(bright_first), float(not bright_first))
     free = np.zeros(segments, bool)
     free[0], free[-1] = other
-    shared = np.array([blur, 0.0, 0.0, 0.0, 0.0, 2.0, 0.0])
-    active = np.zeros(SHARED, bool)
-    active[BLUR] = True
+    shared = np.zeros(SHARED)
+    shared[BLUR], shared[RIM_DECAY] = blur, 2.0
+    active = plain_model()
     state = (position.astype(np.float64), target.copy() if level is None else level.astype(np.float64), shared)
     if level is not None:
-        target = target + np.where(free, 0.0, _phase_shift(state[1], target, free))
+        shared[EDGE:] = _phase_levels(state[1] - target, target, free)
     used = int((weight > 0).sum())
     belief = np.zeros((2, SHARED))
+    belief[1, EDGE:] = 1e-3
     place = np.zeros((2, len(position))) if place is None else place
     scatter = 0.15 if scatter is None else scatter
     fit = None
@@ -572,8 +581,7 @@ def fit_boundaries(
         precision = np.where(free, 1e-6, 1 / scatter**2)
         fit = fit_edges(depth, profile, weight, *state, active, target, precision, belief, place, 8, 0.3, False)
         state = fit[:3]
-        target = target + np.where(free, 0.0, _phase_shift(state[1], target, free))
-        off = (state[1] - target)[~free]
+        off = (state[1] - target - np.where(target < 0.5, state[2][DARK_LEVEL], state[2][BRIGHT_LEVEL]))[~free]
         previous, scatter = scatter, float(np.clip(1.2 * np.sqrt(np.mean(off**2)) if len(off) > 4 else 0.15, 0.01, 0.3))
         if abs(previous - scatter) < 0.2 * scatter:
             break
@@ -587,12 +595,20 @@ def fit_boundaries(
     )
 
 
-def _phase_shift(level: FloatArray, target: FloatArray, free: BoolArray) -> FloatArray:
-    out = np.zeros_like(level)
+def plain_model() -> BoolArray:
+    """Which shared parameters a plain edge has: blur and the phases' levels."""
+    active = np.zeros(SHARED, bool)
+    active[[BLUR, DARK_LEVEL, BRIGHT_LEVEL]] = True
+    return active
+
+
+def _phase_levels(off: FloatArray, target: FloatArray, free: BoolArray) -> FloatArray:
+    """Median offset of each phase's levels from 0 and 1."""
+    out = np.zeros(2)
     for k in (0, 1):
         chosen = (np.round(target) == k) & ~free
         if chosen.any():
-            out[np.round(target) == k] = np.median(level[chosen] - target[chosen])
+            out[k] = np.median(off[chosen])
     return out
 
 
@@ -627,8 +643,8 @@ def _beliefs(blur: float, unit: float) -> FloatArray:
     Common practice, no source: edge brightening is a fraction of the contrast and about as wide as the blur; gamma
     stays near 1; a projection box is of the order of the blur.
     """
-    mean = np.array([0.0, 0.0, 0.0, 0.0, 0.0, 1.3 * blur, 0.0])
-    sd = np.array([math.inf, 4.0 * blur, 0.2, 0.4, 0.25, 0.4 * blur, 0.5])
+    mean = np.array([0.0, 0.0, 0.0, 0.0, 0.0, 1.3 * blur, 0.0, 0.0, 0.0])
+    sd = np.array([math.inf, 4.0 * blur, 0.2, 0.4, 0.25, 0.4 * blur, 0.5, 3.0, 3.0])
     return np.stack([mean, unit / sd**2])
 
 
@@ -637,8 +653,7 @@ def _average_models(depth, profile, weight, fit, target, precision, place, used,
 
     Returns (position, level, shared, cost, covariance, active, covariance between models, position of the best).
     """
-    plain = np.zeros(SHARED, bool)
-    plain[BLUR] = True
+    plain = plain_model()
     blur = float(fit[2][BLUR])
     unit = fit[3] / used
     belief = _beliefs(blur, unit)
@@ -685,7 +700,7 @@ def _average_models(depth, profile, weight, fit, target, precision, place, used,
 
 def _occam(inverse: FloatArray, active: BoolArray, belief: FloatArray, unit: float) -> float:
     """Half the logarithm of how much the data narrow the free nuisance parameters down."""
-    free = [m for m in np.flatnonzero(active) if m != BLUR]
+    free = [m for m in np.flatnonzero(active) if BLUR < m < EDGE]
     if not free:
         return 0.0
     sign, log_det = np.linalg.slogdet(inverse[np.ix_(free, free)] * unit)

@@ -61,7 +61,8 @@ def _tile_grid(rows: int, columns: int, lowest: float) -> dict[str, NDArray[np.f
     kx = np.fft.fftfreq(columns)[None, :] + np.zeros((rows, 1))
     k = np.hypot(kx, ky)
     half = (kx > 0) | ((kx == 0) & (ky > 0))
-    band = np.flatnonzero(half & (k >= lowest / min(rows, columns)) & (k <= HIGHEST))
+    cycles = np.hypot(ky * rows, kx * columns)  # in the tile, along the wave's own direction
+    band = np.flatnonzero(half & (cycles >= lowest) & (k <= HIGHEST))
     return {
         "window": window,
         "band": band,

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from layerscan.measurement.boundaries import SHARED, EdgeFit, Hints, fit_boundaries, model_profile
+from layerscan.measurement.boundaries import SHARED, EdgeFit, Hints, fit_boundaries, model_profile, plain_model
 from layerscan.measurement.segmentation import BRIGHT, DARK, OTHER, segment_profile
 
 if TYPE_CHECKING:
@@ -170,12 +170,12 @@ def _start_blur(value: FloatArray, weight: FloatArray, position: FloatArray, bri
     segments = len(position) + 1
     level = np.where(np.arange(segments) % 2 == 0, float(bright_first), float(not bright_first))
     depth = np.arange(len(value), dtype=np.float64)
-    active = np.zeros(SHARED, bool)
-    active[0] = True
+    active = plain_model()
     inside = (depth > position[0]) & (depth < position[-1]) & (weight > 0)
     best = (math.inf, 1.0)
     for blur in np.geomspace(0.6, max(0.2 * period, 1.0), 6):
-        shared = np.array([blur, 0.0, 0.0, 0.0, 0.0, 2.0, 0.0])
+        shared = np.zeros(SHARED)
+        shared[0] = blur
         off = (value - model_profile(depth, position, level, shared, active))[inside]
         cost = float(np.mean(np.minimum(off**2, 0.25))) if len(off) else 0.0
         best = min(best, (cost, float(blur)))

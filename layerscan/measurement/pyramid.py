@@ -96,7 +96,7 @@ def _halve(image: Float32Array) -> Float32Array:
 
 
 def build_pyramid(
-    intensity: NDArray[np.floating], *, mask: BoolArray | None = None, smallest_px: int = 48
+    intensity: NDArray[np.floating], *, mask: BoolArray | None = None, smallest_px: int = 24
 ) -> tuple[Level, ...]:
     """Average a picture over 1, 2, 4 ... pixels until its shorter side would fall below ``smallest_px``.
 

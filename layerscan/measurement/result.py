@@ -11,7 +11,13 @@ import numpy as np
 from layerscan._version import __version__
 from layerscan.geometry import GeometryFactor, correct_lengths
 from layerscan.measurement import budget as budgets
-from layerscan.measurement.statistics import average_thickness, corrected_spread, describe_stack, longest_run
+from layerscan.measurement.statistics import (
+    average_thickness,
+    corrected_spread,
+    describe_stack,
+    longest_run,
+    steady_span,
+)
 from layerscan.records import (
     Average,
     Boundary,
@@ -355,6 +361,11 @@ def _period(
     mean = span / n * scale
     c = found.covariance
     u_fit = math.sqrt(max(float(c[first, first] + c[last, last] - 2 * c[first, last]), 0.0)) / n * scale
+    run_slice = slice(first, last + 1)
+    steady = steady_span(found.depth[run_slice], c[run_slice, run_slice], found.phase[first + 1 : last + 1])
+    if steady is not None and found.edited is None:
+        mean += steady[0] / n * scale
+        u_fit = steady[1] / n * scale
     single = [(i, i + 2) for i in range(first, last - 1, 2)]
     periods = np.array([found.depth[b] - found.depth[a] for a, b in single]) * scale
     transform = np.zeros((len(single), len(found.depth)))
