@@ -81,6 +81,24 @@ def peak_flops() -> float:
     return 144 * 16 * 2 * rounds / processor_time(lambda: multiply_add(x, 0.9, 0.1, rounds), 20)
 
 
+def draws_over_kernel() -> float:
+    """Whole prediction with 500 draws over the transfer calculation of 500 such stacks."""
+    from layerscan.optics.predict import predict_light
+    from layerscan.records import Layer, LayerTable
+    from layerscan.settings import PredictSettings
+
+    layers = tuple(
+        Layer(index=i, phase="dark" if i % 2 else "bright", thickness_nm=100.0, u_nm=2.0) for i in range(100)
+    )
+    table = LayerTable(layers=layers, source="invented", u_scale_relative=0.01)
+    settings = PredictSettings(dark="n=1.56 +- 0.01", bright="n=1.34", incident="n=1.33", draws=500)
+    index = np.array([1.33, 1.56, 1.34])[:, None] * np.ones(WAVELENGTHS)
+    stacks = np.repeat([[0, *[2, 1] * 50, 0]], 500, axis=0), np.full((500, 100), 100.0)
+    predict_light(table, settings)
+    whole = processor_time(lambda: predict_light(table, settings), 7)
+    return whole / processor_time(lambda: reflectance_transmittance(index, *stacks, WAVELENGTH, threads=1), 7)
+
+
 def main() -> None:
     import tmm
     import tmm_faster
@@ -140,6 +158,9 @@ def main() -> None:
             results[name]["times_arithmetic_limit"] = round(own_time / limit, 2)
             results[name]["target_times_arithmetic_limit"] = 3
             print(f"job b: {own_time / limit:.2f} times the arithmetic limit (target at most 3)")
+    results["draws"] = {"times_bare_kernel": round(draws_over_kernel(), 2)}
+    print(f"500 draws of 100 layers with peaks, limits and colour: {results['draws']['times_bare_kernel']} times the "
+          "transfer calculation alone")  # fmt: skip
     pairs = [
         (clock_time(lambda: ours(STACKS, normal, 1)), clock_time(lambda: ours(STACKS, normal, 2))) for _ in range(15)
     ]

@@ -282,8 +282,8 @@ def _finish(front: Any, state: Any, field: int, lossless: bool, amplitude: bool,
 
 
 @compile_cached(  # type: ignore[untyped-decorator]
-    "void(float64[:,::1], float64[:,::1], boolean[::1], int64[:,::1], float64[:,::1], int64[::1], int64, int64, int64,"
-    " int64, boolean, float64[:,:,:,::1], float64[:,:,:,::1])"
+    "void(float64[:,::1], float64[:,::1], boolean[::1], int64[:,::1], float64[:,::1], int64[::1], int64[::1], int64,"
+    " int64, int64, int64, boolean, float64[:,:,:,::1], float64[:,:,:,::1])"
 )
 def run_tile(
     constants: Any,
@@ -292,6 +292,7 @@ def run_tile(
     sequence: Any,
     thickness: Any,
     rows: Any,
+    source: Any,
     angle: int,
     start: int,
     stop: int,
@@ -304,7 +305,8 @@ def run_tile(
 
     ``constants`` is (materials, rows x STRIDE), ``front`` (polarisations, 2 STRIDE); ``real`` says which materials
     have real kz over the whole tile. ``count`` wavelengths are calculated, padding included; results go to
-    ``first`` and ``second``, (stacks, angles, polarisations, wavelengths), at ``rows``, ``angle`` and start to stop.
+    ``first`` and ``second``, (stacks, angles, polarisations, wavelengths), at ``rows``, ``angle`` and start to stop;
+    ``source`` says which calculated polarisation each one there takes.
     """
     polarisations = front.shape[0]
     state = np.zeros(STATE_ROWS * STRIDE)
@@ -336,13 +338,13 @@ def run_tile(
                 if step % RENORMALISE == RENORMALISE - 1:
                     _renormalise(state, field, count)
         row = rows[stack]
-        for p in range(polarisations):
+        for q in range(source.size):
             _finish(
-                front[p],
+                front[source[q]],
                 state,
-                (FIELD + p * FIELD_ROWS) * STRIDE,
+                (FIELD + source[q] * FIELD_ROWS) * STRIDE,
                 lossless,
                 amplitude,
-                first[row, angle, p, start:stop],
-                second[row, angle, p, start:stop],
+                first[row, angle, q, start:stop],
+                second[row, angle, q, start:stop],
             )

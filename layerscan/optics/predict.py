@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import sys
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import partial
 from typing import TYPE_CHECKING, Any
 
@@ -13,6 +13,8 @@ from layerscan._version import __version__
 from layerscan.errors import SettingsError
 from layerscan.optics import conditions, ensemble
 from layerscan.optics.colour import (
+    FIRST_NM,
+    LAST_NM,
     colour_difference,
     colour_of_spectrum,
     lab_of_xyz,
@@ -160,6 +162,11 @@ def _calculate(stack: Stack, settings: PredictSettings, tell: Progress, *, what:
         raise SettingsError(
             f"The incident medium '{stack.media[0].name}' absorbs; reflectance is not defined there. "
             "Give one with k = 0."
+        )
+    if wavelength[0] > LAST_NM or wavelength[-1] < FIRST_NM:
+        raise SettingsError(
+            f"Wavelengths '{settings.wavelengths}' hold nothing of the visible range, so that no colour exists. "
+            f"Let them reach into {FIRST_NM} to {LAST_NM} nm."
         )
     rng = np.random.default_rng(settings.seed)
     sequence, thickness = nominal_structure(stack, settings, rng)
@@ -310,11 +317,12 @@ def _peaks_of_draws(
     for curve, scale in zip(reflected, factor, strict=True):
         own = find_peaks(wavelength, curve, order=None if numbers is None else numbers * scale, smooth=False)
         for place, peak in enumerate(nominal):
-            same = [p for p in own if p.order == peak.order]
+            target = peak.wavelength_nm * float(scale)
+            reach = peak.fwhm_nm if peak.order is None else np.inf
+            same = [p for p in own if p.order == peak.order and abs(p.wavelength_nm - target) <= reach]
             if not same:
                 continue
-            distance = [abs(p.wavelength_nm - peak.wavelength_nm * float(scale)) for p in same]
-            best = same[int(np.argmin(distance))]
+            best = same[int(np.argmin([abs(p.wavelength_nm - target) for p in same]))]
             found[place].append((best.wavelength_nm, best.reflectance, best.fwhm_nm))
     peaks, uncertain = [], False
     for peak, values in zip(nominal, found, strict=True):
@@ -337,8 +345,7 @@ def _peaks_of_draws(
 
 
 def _with_radius(colour: Colour, wavelength: FloatArray, reflected: FloatArray, settings: PredictSettings) -> Colour:
-    from dataclasses import replace
-
+    """The colour with the radius that holds 95 % of the draws."""
     weights = tristimulus_weights(wavelength, illuminant=settings.illuminant, observer_deg=settings.observer)
     white = white_point(illuminant=settings.illuminant, observer_deg=settings.observer)
     difference = colour_difference(np.array(colour.lab), lab_of_xyz(reflected @ weights, white))

@@ -99,6 +99,11 @@ def build_stack(table: LayerTable, settings: PredictSettings) -> Stack:
             thickness, np.array(numbers), u, from_boundaries=table.station_thickness_nm is not None
         )
         flags.append("layers_extended")
+        notes.append(
+            f"{settings.layers - seen} further layers were drawn as the {seen} complete ones are: correlation of "
+            f"neighbours {model.correlation:.2f}, drift {100 * model.drift_per_layer:.2g} % per layer. The nominal "
+            "structure holds one such draw; each draw of the limits has its own."
+        )
     near_cut, far_cut = _cut_ends(table, settings)
     stations = table.station_thickness_nm
     return Stack(

@@ -342,21 +342,23 @@ def _run(
     distinct = sorted(set(kinds))
     shared = bool(np.all(angles == 0.0)) and len(distinct) > 1  # at normal incidence s and p are the same
     calculated = distinct[:1] if shared else distinct
-    shape = (order.shape[0], angles.size, len(calculated), wavelength.size)
+    source = np.array([0 if shared else calculated.index(kind) for kind in kinds])
+    shape = (order.shape[0], angles.size, len(kinds), wavelength.size)
     first, second = np.empty(shape), np.empty(shape)
     workers = _threads(threads, order.size * wavelength.size * angles.size)
     incident_media = np.unique(order[:, 0])
     for medium in incident_media:
         rows = np.flatnonzero(order[:, 0] == medium)
-        part = (order, thickness) if incident_media.size == 1 else (order[rows], thickness[rows])
-        thickest = float(part[1].max(initial=0.0))
+        work = _Work(
+            order=order if rows.size == order.shape[0] else order[rows],
+            thickness=thickness if rows.size == order.shape[0] else thickness[rows],
+            rows=rows, source=source, amplitude=amplitude, first=first, second=second,
+        )  # fmt: skip
+        thickest = float(work.thickness.max(initial=0.0))
         for angle, wave in _blocks(angles.size, wavelength.size, n.shape[0]):
             tables = prepare_constants(n[:, wave], int(medium), wavelength[wave], angles[angle], calculated, thickest)
-            _share(_jobs(tables, part, rows, angle.start, wave.start, (first, second), amplitude, workers), workers)
-    if calculated == kinds:
-        return first, second
-    pick = [0 if shared else calculated.index(kind) for kind in kinds]
-    return np.ascontiguousarray(first[:, :, pick]), np.ascontiguousarray(second[:, :, pick])
+            _share(_jobs(tables, work, angle.start, wave.start, workers), workers)
+    return first, second
 
 
 def _blocks(angles: int, wavelengths: int, materials: int) -> Iterator[tuple[slice, slice]]:
@@ -389,6 +391,23 @@ def _share(jobs: list[Callable[[], None]], workers: int) -> None:
     with ThreadPoolExecutor(workers) as pool:
         for done in [pool.submit(job) for job in jobs]:
             done.result()
+
+
+@dataclass(frozen=True, kw_only=True, eq=False)
+class _Work:
+    """Stacks lit from one medium, and where their results go.
+
+    ``rows`` places them among all stacks; ``source`` says which calculated polarisation each one of the results takes;
+    ``first`` and ``second`` are R and T, or real and imaginary part of the amplitude.
+    """
+
+    order: IntArray
+    thickness: FloatArray
+    rows: IntArray
+    source: IntArray
+    amplitude: bool
+    first: FloatArray
+    second: FloatArray
 
 
 @dataclass(frozen=True, kw_only=True, eq=False)
@@ -463,34 +482,27 @@ def prepare_constants(
 
 
 def _jobs(
-    tables: Constants,
-    part: tuple[IntArray, FloatArray],
-    rows: IntArray,
-    first_angle: int,
-    first_wavelength: int,
-    out: tuple[FloatArray, FloatArray],
-    amplitude: bool,
-    workers: int,
+    tables: Constants, work: _Work, first_angle: int, first_wavelength: int, workers: int
 ) -> list[Callable[[], None]]:
     """One call of the kernel for each angle, tile of wavelengths and share of the stacks."""
     from layerscan.optics import kernel
 
-    order, thickness = part
-
-    def job(angle: int, tile: int, first: int, last: int) -> None:
+    def job(angle: int, tile: int, begin: int, end: int) -> None:
         start = first_wavelength + tile * tables.width
         stop = first_wavelength + min((tile + 1) * tables.width, tables.wavelengths)
         kernel.run_tile(
-            tables.media[angle, tile], tables.front[angle, tile], tables.real[angle, tile], order[first:last],
-            thickness[first:last], rows[first:last], first_angle + angle, start, stop, tables.width, amplitude, *out,
+            tables.media[angle, tile], tables.front[angle, tile], tables.real[angle, tile], work.order[begin:end],
+            work.thickness[begin:end], work.rows[begin:end], work.source, first_angle + angle, start, stop,
+            tables.width, work.amplitude, work.first, work.second,
         )  # fmt: skip
 
-    shares = 1 if workers == 1 else min(order.shape[0], 4 * workers)
-    edges = np.linspace(0, order.shape[0], shares + 1).astype(int)
+    stacks = work.order.shape[0]
+    shares = 1 if workers == 1 else min(stacks, 4 * workers)
+    edges = np.linspace(0, stacks, shares + 1).astype(int)
     angles, tiles = tables.media.shape[:2]
     return [
-        partial(job, angle, tile, int(first), int(last))
+        partial(job, angle, tile, int(begin), int(end))
         for angle in range(angles)
         for tile in range(tiles)
-        for first, last in itertools.pairwise(edges)
+        for begin, end in itertools.pairwise(edges)
     ]

@@ -470,6 +470,7 @@ def test_record_is_complete():
         ({"bright": "chitin"}, SettingsError, r"dark layers have no material.*--dark"),
         ({"dark": "chitn", "bright": "air"}, MaterialError, "nearest names are chitin"),
         ({"dark": "n=1.5", "bright": "n=1.3", "incident": "n=1.4+0.1i"}, SettingsError, "absorbs"),
+        ({"dark": "n=1.5", "bright": "n=1.3", "wavelengths": "900:1700:1"}, SettingsError, "no colour exists"),
         ({"dark": "n=1.5", "bright": "n=1.3", "aperture": 1.2}, SettingsError, "aperture of 1.2"),
         ({"dark": "n=1.5", "bright": "n=1.3", "draws": 100_000, "wavelengths": "380:780:0.1"}, SettingsError, "draws"),
         ({"dark": "n=1.5", "bright": "n=1.3", "vary": "strain=-1:0:0.5"}, SettingsError, "strain -1 leaves no layers"),
