@@ -218,6 +218,8 @@ def compare_specimens(
     specimens: Sequence[Specimen], study: StudyTable, quantity: str | None = None
 ) -> tuple[TestRow, ...]:
     """Tests between groups on the specimens' means of the study's quantity."""
+    if not study.compare_groups:
+        return ()
     quantity = quantity or study.quantity
     found = [(s, estimate) for s in specimens if (estimate := s.estimate(quantity)) is not None]
     present = {s.group for s, _ in found}

@@ -52,26 +52,52 @@ def predicted_peak(specimen: Specimen) -> PeakMean | None:
     return mean_peak([peak for image in specimen.images if (peak := image.main_peak()) is not None])
 
 
+def matched_peaks(specimen: Specimen) -> tuple[PeakMean, PeakMean] | None:
+    """Predicted and observed peak of a specimen as its comparisons matched them, of the order that most of them share.
+
+    Tallest peaks of both sides need not be of one order; only a comparison says which belong together.
+    """
+    pairs = []
+    for image in specimen.images:
+        for task in image.compare.values():
+            pair = _match(image, task.document or {})
+            if pair is not None:
+                pairs.append(pair)
+    if not pairs:
+        return None
+    orders = [predicted["order"] for predicted, _ in pairs]
+    chosen = [pair for pair in pairs if pair[0]["order"] == max(orders, key=orders.count)]
+    predicted, observed = mean_peak([p for p, _ in chosen]), mean_peak([o for _, o in chosen])
+    return None if predicted is None or observed is None else (predicted, observed)
+
+
+def _match(image: ImageResult, answer: Mapping[str, Any]) -> tuple[Mapping[str, Any], Mapping[str, Any]] | None:
+    """The two peaks whose difference a comparison states; of transmittance, dips near the predicted peaks."""
+    difference = answer.get("peak_difference_nm")
+    pairs = [
+        (predicted, observed)
+        for predicted in (image.prediction or {}).get("peaks") or ()
+        for observed in answer.get("observed_peaks") or ()
+    ]
+    if difference is None or not pairs:
+        return None
+
+    def distance(pair: tuple[Mapping[str, Any], Mapping[str, Any]]) -> float:
+        return abs(float(pair[0]["wavelength_nm"]) - float(pair[1]["wavelength_nm"]) - float(difference))
+
+    predicted, observed = min(pairs, key=distance)
+    return {**predicted, "wavelength_nm": observed["wavelength_nm"] + difference}, observed
+
+
 def observed_spectra(results: StudyResults, specimen: Specimen) -> list[SpectrumResult]:
     """Spectra of a specimen that count."""
     own = (s for s in results.spectra if (s.group, s.specimen) == (specimen.group, specimen.name))
     return [s for s in own if s.state == "done" and s.document is not None]
 
 
-def observed_peak(specimen: Specimen, spectra: Iterable[SpectrumResult]) -> PeakMean | None:
+def observed_peak(spectra: Iterable[SpectrumResult]) -> PeakMean | None:
     """Main observed peak (of transmittance: dip) of a specimen over its spectra."""
-    return mean_peak([peak for spectrum in spectra if (peak := _read_peak(specimen, spectrum)) is not None])
-
-
-def _read_peak(specimen: Specimen, spectrum: SpectrumResult) -> Mapping[str, Any] | None:
-    """The peak as a comparison read it, with its uncertainty; as read from the spectrum alone where there is none."""
-    for image in specimen.images:
-        compared = image.compare.get(spectrum.unit.key)
-        peaks = (compared.document or {}).get("observed_peaks") if compared else None
-        if peaks:
-            tallest: Mapping[str, Any] = max(peaks, key=lambda peak: float(peak["reflectance"]))
-            return tallest
-    return spectrum.main_peak()
+    return mean_peak([peak for spectrum in spectra if (peak := spectrum.main_peak()) is not None])
 
 
 def representative_image(specimen: Specimen) -> ImageResult | None:
@@ -186,7 +212,7 @@ def specimen_rows(
     rows = []
     for specimen in specimens:
         spectra = observed_spectra(results, specimen)
-        predicted, observed = predicted_peak(specimen), observed_peak(specimen, spectra)
+        predicted, observed = matched_peaks(specimen) or (predicted_peak(specimen), observed_peak(spectra))
         image = representative_image(specimen)
         prediction = (image.prediction if image else None) or {}
         estimates = [e for name in quantities if (e := specimen.estimate(name)) is not None]
@@ -222,14 +248,14 @@ def _first_colour(spectra: Sequence[SpectrumResult]) -> Colour | None:
 
 
 def peak_pairs(results: StudyResults, specimens: Sequence[Specimen]) -> tuple[PeakPair, ...]:
-    """Predicted and observed main peak of each specimen that has both."""
+    """Predicted and observed peak of each specimen that was compared with a spectrum."""
     pairs = []
     for specimen in specimens:
-        spectra = observed_spectra(results, specimen)
-        predicted, observed = predicted_peak(specimen), observed_peak(specimen, spectra)
-        if predicted is None or observed is None:
+        matched = matched_peaks(specimen)
+        if matched is None:
             continue
-        kinds = [(s.document or {})["kind"] for s in spectra]
+        predicted, observed = matched
+        kinds = [(s.document or {})["kind"] for s in observed_spectra(results, specimen)] or ["reflectance"]
         pairs.append(
             PeakPair(
                 group=specimen.group,

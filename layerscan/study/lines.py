@@ -169,6 +169,11 @@ def _describe(line: StraightLine, n: int, *, known: bool, level: float) -> LineF
         f"1:1 line (p = {say_p(p_one)}); at {line.pivot:.0f} nm observed minus predicted is {offset:+.2g} nm "
         f"(u = {u_offset:.2g} nm)."
     )
+    if known and float(chdtrc(nu, line.chi_square)) < 0.05:
+        sentence += (
+            f" The points scatter more than their uncertainties allow (chi-square {line.chi_square:.3g} on {nu} "
+            "degrees of freedom): something else differs between specimens, and u was widened for it."
+        )
     if not known:
         sentence += " Uncertainties are not stated for every point: the scatter was shared equally between the axes."
     return LineFit(

@@ -52,6 +52,7 @@ class StudyTable(Settings):
     )
     level: float = Field(0.95, gt=0.5, lt=1, description="confidence level of intervals and tests")
     groups: tuple[str, ...] = Field((), description="groups in the order to show; a group without images is said")
+    compare_groups: bool = Field(True, description="whether groups are tested against each other")
     adjust: Literal["holm", "tukey", "dunnett"] = Field("holm", description="adjustment for several groups")
     reference_group: Text = Field(None, description="group that Dunnett's test compares the others with")
     equivalence: LengthText | None = Field(

@@ -97,6 +97,7 @@ def make_image(group: str, specimen: str, section: int, period: float, **more) -
     light = TaskRecord(
         key="p" + key, kind="predict", unit=key, state="done", settings={}, versions={}, document=prediction
     )
+    more_compare = more.pop("compare", {})
     row = {
         "path": f"{key}.tif",
         "group": group,
@@ -114,7 +115,7 @@ def make_image(group: str, specimen: str, section: int, period: float, **more) -
         reason=row["exclude"],
         task=task,
         predict=light,
-        compare={},
+        compare=more_compare,
         layers=layers,
     )
 
@@ -135,6 +136,24 @@ def make_spectrum(group: str, specimen: str, peak_nm: float) -> SpectrumResult:
         key="s" + specimen, kind="spectrum", unit=specimen, state="done", settings={}, versions={}, document=document
     )
     return SpectrumResult(unit=UnitRow(key=specimen, kind="spectrum", row=row), state="done", reason=None, task=task)
+
+
+def make_comparison(predicted_nm: float, observed_nm: float) -> TaskRecord:
+    """A comparison that matched this observed peak, although a taller one of another order was seen too."""
+    peak = {"order": None, "wavelength_nm": observed_nm, "u_wavelength_nm": 3.0, "reflectance": 0.6, "fwhm_nm": 50.0}
+    document = {
+        "peak_difference_nm": predicted_nm - observed_nm,
+        "u_peak_difference_nm": 5.0,
+        "delta_e00": None,
+        "observed_peaks": [peak, {**peak, "wavelength_nm": 700.0, "reflectance": 0.9}],
+        "agreement": {"conclusion": "explains"},
+        "sentence": "x",
+        "reasons": [],
+        "flags": [],
+    }
+    return TaskRecord(
+        key=f"c{predicted_nm}", kind="compare", unit="u", state="done", settings={}, versions={}, document=document
+    )
 
 
 COLOUR = {
@@ -276,18 +295,22 @@ def test_the_budget_adds_up_to_the_uncertainty_of_the_mean():
 
 def test_predicted_and_observed_peaks_meet_specimen_by_specimen():
     # issue: "Predicted against observed peak per specimen: the 1:1 line"
-    spectra = [
-        make_spectrum(group, specimen, 2.5 * sum(periods) / 2 + 1)
-        for group, specimens in PERIODS.items()
-        for specimen, periods in specimens.items()
-    ]
-    summary = summarise(make_results(two_lots(), spectra, predict={"dark": "chitin", "bright": "air"}))
+    spectra, images = [], []
+    for group, specimens in PERIODS.items():
+        for specimen, periods in specimens.items():
+            observed = 2.5 * sum(periods) / 2 + 1
+            spectra.append(make_spectrum(group, specimen, observed))
+            for i, period in enumerate(periods):
+                compare = {specimen: make_comparison(2.5 * period, observed)}
+                images.append(make_image(group, specimen, i, float(period), compare=compare))
+    summary = summarise(make_results(images, spectra, predict={"dark": "chitin", "bright": "air"}))
     assert [p.specimen for p in summary.peaks] == ["a1", "a2", "a3", "b1", "b2", "b3"]
     assert summary.peaks[0].predicted_nm == pytest.approx(502.5)
     assert summary.peaks[0].u_predicted_nm == pytest.approx(math.hypot(2.5, 4.0))
     assert (summary.line.slope, summary.line.offset_nm) == pytest.approx((1.0, 1.0), abs=1e-6)
     assert "compatible with the 1:1 line" in summary.answer
     assert len(summary.light) == 6
+    assert {row.conclusion for row in summary.specimens} == {"explains"}
     assert math.isnan(summary.light[0].observed[2])
     assert [m.name for m in summary.methods.materials] == ["chitin"]
 
