@@ -19,12 +19,12 @@ EDGE_MODEL = "edge model"
 UNTRACED = "stations where an end is not traced"
 
 ADVICE = {
-    CALIBRATION: "Calibrate the magnification with a certified grating or lattice; half the uncertainty of the pixel size "
-    "halves that of the period.",
+    CALIBRATION: "Calibrate the magnification with a certified grating or lattice: half the uncertainty of the "
+    "pixel size halves that of the period.",
     FIT: "Record four times the dose, or four times the length along the layers.",
     EDGE_MODEL: "Record at twice the magnification, so that edges are sampled better.",
     UNTRACED: "Record a field in which both ends of the stack are seen along their whole length.",
-    "obliquity": "Cut or image a second section at a known angle to the first, which halves the doubt of the obliquity.",
+    "obliquity": "Cut or image a second section at a known angle to the first; that halves the doubt.",
     "stage tilt": "Measure the stage tilt on a flat reference surface.",
     "compression": "Measure the compression on round profiles in the same section, or cut with an oscillating knife.",
     "shrinkage": "Measure the shrinkage on the same specimen before and after preparation.",

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -201,6 +201,10 @@ def detect_layers(
         straight = _straighten(candidate)
         if straight is None:
             continue
+        longer = _fundamental(straight)
+        if longer is not None:
+            candidate = replace(candidate, frequency=1 / longer)
+            straight = _straighten(candidate) or straight
         evidence = _judge(candidate, straight, levels, tiles)
         judged.append(_Judged(statistic=_statistic(evidence), candidate=candidate, straight=straight, evidence=evidence))
         if judged[-1].statistic > 1:
@@ -378,6 +382,33 @@ def _aligned(straight: _Straight) -> tuple[FloatArray, BoolArray]:
     return filled, seen
 
 
+def _fundamental(straight: _Straight) -> float | None:
+    """Longer period [level px] at which the mean profile repeats clearly better than at the candidate's, if there is one.
+
+    Layers much thinner than the gaps between them have harmonics as strong as the fundamental.
+    """
+    filled, seen = _aligned(straight)
+    number = seen.sum(axis=1)
+    rows = np.flatnonzero(number >= max(2, 0.3 * number.max()))
+    if len(rows) < 4 * straight.period:
+        return None
+    mean = (filled.sum(axis=1) / np.maximum(number, 1))[rows[0] : rows[-1] + 1]
+    mean = mean - mean.mean()
+    n = len(mean)
+    spectrum = np.abs(np.fft.rfft(mean, 2 * n)) ** 2
+    likeness = np.fft.irfft(spectrum, 2 * n)[: int(n / 2.2)] / (n - np.arange(int(n / 2.2)))
+    peaks = np.flatnonzero((likeness[1:-1] >= likeness[:-2]) & (likeness[1:-1] > likeness[2:])) + 1
+    peaks = peaks[peaks > 0.6 * straight.period]
+    if len(peaks) == 0 or likeness[peaks].max() <= 0:
+        return None
+    lag = int(peaks[np.flatnonzero(likeness[peaks] >= 0.8 * likeness[peaks].max())[0]])
+    beside = likeness[round(0.8 * straight.period) : round(1.2 * straight.period) + 1]
+    if lag < 1.3 * straight.period or likeness[lag] < 0.3 * likeness[0] or beside.max() > 0.6 * likeness[lag]:
+        return None
+    before, here, after = likeness[lag - 1 : lag + 2]
+    return lag + 0.5 * float((before - after) / min(before - 2 * here + after, -1e-30))
+
+
 def _judge(
     candidate: _Candidate, straight: _Straight, levels: tuple[Level, ...], all_tiles: tuple[Tiles, ...]
 ) -> Evidence:
@@ -494,7 +525,6 @@ def _alternations(mean: FloatArray, frequency: float) -> tuple[float, float, flo
     if len(turn) < 3:
         return 0.0, math.inf, math.inf, 0.0
     height = np.abs(np.diff(smooth[turn]))
-    height = height[height > 0.1 * np.median(height)]
     rank = max(3, round(0.5 * frequency * len(mean)))  # a quarter of the alternations that fit
     floor = 0.33 * float(np.sort(height)[-min(rank, len(height))])
     values, places = list(smooth[turn]), list(turn)
@@ -517,6 +547,9 @@ def _alternations(mean: FloatArray, frequency: float) -> tuple[float, float, flo
     spread = float(np.median(np.abs(spacing - middle))) * 1.4826 / middle
     order = np.diff(place)
     chirp = float(np.polyfit(np.linspace(0, 1, len(order)), np.log(order), 1)[0])
+    within = (turn[:-1] >= places[0]) & (turn[1:] <= places[-1])
+    height = height[within]
+    height = height[height > 0.1 * np.median(height)]
     uneven = float(height.std() / height.mean())
     return float(swings), spread, uneven, chirp
 
@@ -621,6 +654,13 @@ def _layered(best: _Judged, levels: tuple[Level, ...]) -> LayerDetection:
     field_map = straight.field_map
     angle = np.degrees(0.5 * np.arctan2(field_map.sin2, field_map.cos2)) % 180
     direction = _global_orientation(candidate, levels, step, valid)
+    purity = _harmonics(candidate, straight, levels)
+    if _is_hum(direction, purity, levels):
+        return LayerDetection(
+            layered=False, periodic=False, statistic=statistic, p_value=None, region=None,
+            flags=("no_layers_found", "scan_lines"), evidence=evidence, reason="one sinusoid locked to the scan lines",
+        )  # fmt: skip
+    flags = [*(["orientation_varies"] if direction.varies else []), *(["confirm_with_second_section"] if purity < _PURE else [])]
     if direction.flat is not None:
         angle = np.full_like(angle, direction.angle_deg)
     seed = straight.grid.origin
@@ -643,9 +683,52 @@ def _layered(best: _Judged, levels: tuple[Level, ...]) -> LayerDetection:
         seed_px=(
             float(level.to_page(straight.grid.row[seed])), float(level.to_page(straight.grid.column[seed])),
         ),
-        flags=("orientation_varies",) if direction.varies else (),
+        flags=tuple(flags),
         evidence=evidence,
     )  # fmt: skip
+
+
+def _harmonics(candidate: _Candidate, straight: _Straight, levels: tuple[Level, ...]) -> float:
+    """Energy of the second and third harmonic over the fundamental's, read on a fine level; 0 for a pure sinusoid."""
+    from layerscan.measurement.orientation_kernels import block_means
+
+    coarse = candidate.level
+    fine = next((each for each in levels if each.intensity.size <= 2**22), levels[-1])
+    if fine.factor > coarse.factor:
+        fine = coarse
+    grid = straight.grid
+    mean, number = np.zeros_like(straight.flat), np.zeros_like(straight.flat)
+    usable = fine.valid if fine.valid is not None else fine.intensity[:1, :1]
+    row, column = fine.from_page(coarse.to_page(grid.row)), fine.from_page(coarse.to_page(grid.column))
+    block_means(fine.intensity, usable, fine.valid is not None, row, column, grid.stride, straight.block, mean, number)
+    good = number >= 0.5 * straight.block
+    read = replace(straight, flat=_high_pass(mean, good, straight.period), member=straight.member & good)
+    filled, seen = _aligned(read)
+    count = seen.sum(axis=1)
+    rows = np.flatnonzero(count >= max(2, 0.3 * count.max()))
+    if len(rows) < 2.2 * straight.period:
+        return math.inf
+    profile = (filled.sum(axis=1) / np.maximum(count, 1))[rows[0] : rows[-1] + 1]
+    return _profile_peak(profile, 1 / straight.period)[2]
+
+
+_PURE = 0.03  # harmonics of a sinusoid: knife chatter, mains hum; sharp-edged layers have 0.1 and more
+
+
+def _is_hum(direction: _Direction, purity: float, levels: tuple[Level, ...]) -> bool:
+    """Whether this is a weak sinusoid locked to the scan lines: straight to a fraction of noise, along the rows, pure.
+
+    Mains pick-up adds one sinusoid in time, which the raster lays out as rows or slightly slanted lines over a picture of
+    something else. Where the sinusoid is most of the picture it is taken for what the specimen shows.
+    """
+    flat = direction.flat
+    if flat is None or purity > 0.5 * _PURE or abs(direction.angle_deg - 90) > 4:
+        return False
+    level = next((each for each in levels if each.intensity.size <= 2**21), levels[-1])
+    weight = flat.count / max(float(flat.count.sum()), 1.0)
+    centre = float(np.sum(weight * flat.profile))
+    explained = float(np.sum(weight * (flat.profile - centre) ** 2))
+    return explained < 0.35 * float(level.intensity.var())
 
 
 def _valid_map(candidate: _Candidate, straight: _Straight, shape: tuple[int, int]) -> tuple[int, BoolArray]:

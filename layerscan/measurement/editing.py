@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import dataclasses
+import itertools
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -61,7 +62,8 @@ def apply_edits(found: FoundLayers, settings: MeasureSettings, *, unit_nm: float
             assert index is not None
             keep[index] = False
         elif verb == "move":
-            assert index is not None and length is not None
+            assert index is not None
+            assert length is not None
             shift[index] += length / scale
             edited[index] = True
         else:
@@ -81,15 +83,17 @@ def _rebuild(
     ]
     order = [entry[1] for entry in sorted(entries)]
     if order != sorted(order):
-        raise MeasurementError("An edit moves a boundary past its neighbour. Move it less, or delete one and add another.")
+        raise MeasurementError(
+            "An edit moves a boundary past its neighbour. Move it less, or delete one and add another."
+        )
     for depth in added:
         near = int(np.argmin(np.abs(found.depth - depth)))
         entries.append((depth, near, depth - float(found.depth[near]), True, True))
     entries.sort()
     if len(entries) < 2:
         raise MeasurementError("Fewer than two boundaries are left after the edits, so no layer is left.")
-    depth = np.array([entry[0] for entry in entries])
-    if np.any(np.diff(depth) < 1e-6):
+    places: FloatArray = np.array([entry[0] for entry in entries])
+    if np.any(np.diff(places) < 1e-6):
         raise MeasurementError("An edit puts two boundaries at the same place. Delete one of them.")
     source = np.array([entry[1] for entry in entries])
     offset = np.array([entry[2] for entry in entries])
@@ -99,13 +103,13 @@ def _rebuild(
         covariance[i, :] = covariance[:, i] = 0.0
         covariance[i, i] = found.covariance[source[i], source[i]]
     toward_row, toward_column = _normal_step(found)
-    origin = depth[0]
+    origin = float(places[0])
     return dataclasses.replace(
         found,
-        depth=depth - origin,
+        depth=places - origin,
         covariance=covariance,
-        phase=_phases(found, depth),
-        ends=(max(found.ends[0] + depth[0], 0.0), max(found.ends[1] + float(found.depth[-1]) - depth[-1], 0.0)),
+        phase=_phases(found, places),
+        ends=(max(found.ends[0] + origin, 0.0), max(found.ends[1] + float(found.depth[-1] - places[-1]), 0.0)),
         profile_depth=found.profile_depth - origin,
         station_depth=found.station_depth[source] + offset[:, None] - origin,
         u_station=found.u_station[source],
@@ -136,7 +140,7 @@ def _phases(found: FoundLayers, depth: FloatArray) -> tuple[Phase, ...]:
     limits = np.concatenate([[-np.inf], found.depth, [np.inf]])
     new = np.concatenate([[found.depth[0] - found.ends[0] - 1], depth, [found.depth[-1] + found.ends[1] + 1]])
     out: list[Phase] = []
-    for low, high in zip(new[:-1], new[1:], strict=True):
+    for low, high in itertools.pairwise(new):
         overlap = np.minimum(limits[1:], high) - np.maximum(limits[:-1], low)
         out.append(found.phase[int(np.argmax(overlap))])
     opposite: dict[Phase, Phase] = {"dark": "bright", "bright": "dark"}

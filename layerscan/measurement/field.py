@@ -1,8 +1,8 @@
 """The straightened field: a curvilinear grid whose depth runs along the layer normal and whose stations follow layers.
 
-Two steps. A ``Frame`` (straight, or circular arcs about a centre that may lie inside the picture) is fitted to the local
-orientation map; then the columns are aligned by correlation with an evolving mean profile, so that the layers of a wavy
-stack become straight. Coordinates here are pixels of a square grid, called (row, column) as everywhere.
+Two steps. A ``Frame`` (straight, or circular arcs about a centre that may lie inside the picture) is fitted to the
+local orientation map; then the columns are aligned by correlation with an evolving mean profile, so that the layers of
+a wavy stack become straight. Coordinates are pixels of a square grid, called (row, column) as everywhere.
 """
 
 from __future__ import annotations
@@ -19,7 +19,7 @@ from layerscan.errors import MeasurementError
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
-    from layerscan.records import BoolArray, FloatArray
+    from layerscan.records import FloatArray
 
     Image = NDArray[np.float32]
 
@@ -51,7 +51,8 @@ class Frame:
         to_centre_n, to_centre_t = 1 / k - along_n, -along_t
         radius = np.hypot(to_centre_n, to_centre_t)
         sign = math.copysign(1.0, k)
-        return 1 / k - sign * radius, np.arctan2(-sign * to_centre_t, sign * to_centre_n) / k
+        turn: FloatArray = np.arctan2(-sign * to_centre_t, sign * to_centre_n) / k
+        return 1 / k - sign * radius, turn
 
     def extent(self, region: tuple[int, int, int, int]) -> tuple[float, float, float, float]:
         """Smallest and largest depth and station inside a region of the picture."""
@@ -85,13 +86,14 @@ class StraightField:
         low = np.minimum(at.astype(np.int64), max(len(self.shift) - 2, 0))
         high = np.minimum(low + 1, len(self.shift) - 1)
         part = at - low
-        moved = self.shift[low, station] * (1 - part) + self.shift[high, station] * part
-        return self.depth_start + depth + moved
+        moved: FloatArray = self.shift[low, station] * (1 - part) + self.shift[high, station] * part
+        return self.depth_start + moved + depth
 
     def to_picture(self, depth: FloatArray, station: NDArray[np.int64]) -> tuple[FloatArray, FloatArray]:
         """Row and column of aligned depths [samples] at station numbers (broadcast together)."""
         along = self.frame_depth(depth, station)
-        return frame_to_picture(self.frame, along, self.station_start + self.station_step * station)
+        place: FloatArray = self.station_start + self.station_step * station.astype(np.float64)
+        return frame_to_picture(self.frame, along, place)
 
 
 def frame_to_picture(frame: Frame, depth: FloatArray, station: FloatArray) -> tuple[FloatArray, FloatArray]:
@@ -156,9 +158,7 @@ def _search_frame(angle, weight, row, column, k_max):  # type: ignore[no-untyped
     return best
 
 
-def fit_frame(
-    *, angle_rad: FloatArray, weight: FloatArray, row: FloatArray, column: FloatArray, size: float
-) -> Frame:
+def fit_frame(*, angle_rad: FloatArray, weight: FloatArray, row: FloatArray, column: FloatArray, size: float) -> Frame:
     """Fit straight or circular layers to a map of local normals.
 
     Parameters
@@ -203,7 +203,7 @@ def interpolate(image, row, column):  # type: ignore[no-untyped-def]
     rows, columns = image.shape
     if not (-0.001 <= row <= rows - 0.999 and -0.001 <= column <= columns - 0.999):
         return np.nan
-    r, c = int(math.floor(row + 1e-9)), int(math.floor(column + 1e-9))
+    r, c = math.floor(row + 1e-9), math.floor(column + 1e-9)
     if r < 0:
         r = 0
     if c < 0:
@@ -239,7 +239,9 @@ def interpolate(image, row, column):  # type: ignore[no-untyped-def]
 
 
 @njit(cache=True)  # type: ignore[untyped-decorator]
-def sample_field(image, frame, depth_start, step, count, station_start, station_step, inner, shift, node_start, node_step):  # type: ignore[no-untyped-def]  # noqa: E501
+def sample_field(  # type: ignore[no-untyped-def]
+    image, frame, depth_start, step, count, station_start, station_step, inner, shift, node_start, node_step
+):
     """Sample the picture on the grid; each station is the mean of ``inner`` lines spread over its width."""
     stations = shift.shape[1]
     nodes = shift.shape[0]
@@ -295,7 +297,7 @@ def sample_field(image, frame, depth_start, step, count, station_start, station_
 def _best_shift(template, field, j, centre, half, start, reach, score):  # type: ignore[no-untyped-def]
     """Shift of column j against the template in a window: normalised correlation, parabola through its peak."""
     count = template.size
-    base = int(math.floor(start + 0.5))
+    base = math.floor(start + 0.5)
     low, high = max(centre - half, 0), min(centre + half + 1, count)
     best, where = -2.0, 0
     for q in range(-reach, reach + 1):
@@ -386,11 +388,13 @@ def track_columns(field, first, nodes, node_step, node_start, half, reach, memor
                 part = min(max(at - z, 0.0), 1.0)
                 y = min(z + 1, nodes - 1)
                 e = d + now[z] * (1 - part) + now[y] * part
-                low = int(math.floor(e))
+                low = math.floor(e)
                 if 0 <= low < count - 1:
                     value = field[low, j] * (1 - (e - low)) + field[low + 1, j] * (e - low)
                     if value == value:
-                        template[d] = template[d] + rate * (value - template[d]) if template[d] == template[d] else value
+                        template[d] = (
+                            template[d] + rate * (value - template[d]) if template[d] == template[d] else value
+                        )
     return shift, quality
 
 
@@ -436,7 +440,7 @@ def aligned_mean(field, shift, node_start, node_step):  # type: ignore[no-untype
         y = min(z + 1, nodes - 1)
         for j in range(columns):
             e = d + shift[z, j] * (1 - part) + shift[y, j] * part
-            low = int(math.floor(e))
+            low = math.floor(e)
             if 0 <= low < count - 1:
                 value = field[low, j] * (1 - (e - low)) + field[low + 1, j] * (e - low)
                 if value == value:
@@ -450,7 +454,7 @@ def aligned_mean(field, shift, node_start, node_step):  # type: ignore[no-untype
 @njit(cache=True)  # type: ignore[untyped-decorator]
 def refine_shift(field, template, shift, node_start, node_step, half, reach, width):  # type: ignore[no-untyped-def]
     """Correlate every column with the whole mean profile again and smooth the corrections along the stations."""
-    count, columns = field.shape
+    _count, columns = field.shape
     nodes = shift.shape[0]
     raw = np.zeros((nodes, columns))
     weight = np.zeros((nodes, columns))
@@ -462,7 +466,7 @@ def refine_shift(field, template, shift, node_start, node_step, half, reach, wid
             at, value = _best_shift(template, field, j, centre, half, shift[z, j], reach, score)
             raw[z, j] = at - shift[z, j]
             weight[z, j] = value * value if value > 0.1 and abs(raw[z, j]) < reach else 0.0
-    reach_j = int(math.ceil(2.5 * width))
+    reach_j = math.ceil(2.5 * width)
     for z in range(nodes):
         for j in range(columns):
             n, s1, s2, v0, v1 = 1e-9, 0.0, 0.0, 0.0, 0.0
@@ -490,7 +494,7 @@ def settle_shift(field, template, shift, node_start, node_step, half, reach, pri
     The gain of a correction is its correlation with the mean profile, shared with the neighbouring nodes; a change of
     the correction from column to column costs ``price`` for each sample.
     """
-    count, columns = field.shape
+    _count, columns = field.shape
     nodes = shift.shape[0]
     width = 2 * reach + 1
     gain = np.zeros((nodes, columns, width))

@@ -32,7 +32,8 @@ LEAST_Z = 6.0  # of the correlation between the two halves of the band
 LEAST_BOUNDARIES = 3
 MOST_SLOPE = 1.2
 _TOO_SHORT = (
-    "Only {} samples of the line lie in the image; at least {} are needed. Move the line into the image or make it longer."
+    "Only {} samples of the line lie in the image; at least {} are needed. Move the line into the image "
+    "or make it longer."
 )
 
 
@@ -69,8 +70,8 @@ def sample_band(
     """
     length = math.hypot(stop[0] - start[0], stop[1] - start[1])
     angle = math.atan2(stop[0] - start[0], stop[1] - start[1])
-    columns = max(int(round(width_px)), 1)
-    count = int(math.floor(length + 1e-9)) + 1
+    columns = max(round(width_px), 1)
+    count = math.floor(length + 1e-9) + 1
     frame = Frame(row=start[0], column=start[1], angle_rad=angle, curvature=0.0)
     shift = np.zeros((1, columns))
     field = sample_field(
@@ -95,7 +96,7 @@ def sheared_mean(field, slope, group):  # type: ignore[no-untyped-def]
         j0, j1 = g * group, min((g + 1) * group, columns)
         middle = 0.5 * (j0 + j1 - 1) - 0.5 * (columns - 1)
         shift = slope * middle
-        whole = int(math.floor(shift + 1e-9))
+        whole = math.floor(shift + 1e-9)
         x = shift - whole
         if x < 1e-6:
             x = 0.0
@@ -142,7 +143,7 @@ def _energy(field, slope, stride):  # type: ignore[no-untyped-def]
         number = 0
         for j in range(columns):
             at = d + slope * (j - 0.5 * (columns - 1))
-            low = int(math.floor(at))
+            low = math.floor(at)
             if low < 0 or low + 1 >= count:
                 continue
             v = field[low, j] + (at - low) * (field[low + 1, j] - field[low, j])
@@ -220,7 +221,8 @@ def measure_line_of(
     from layerscan.measurement.measure import prepare_picture
     from layerscan.settings import parse_width
 
-    assert settings.line is not None and micrograph.pixel_size is not None
+    assert settings.line is not None
+    assert micrograph.pixel_size is not None
     size = micrograph.pixel_size
     unit = min(size.row_nm, size.column_nm)
     value, of = parse_width(settings.width) if settings.width else (10.0, "px")
@@ -363,7 +365,7 @@ def measure_line(
         orientation_rad=orientation % math.pi, u_orientation_rad=None,
         spacing=spacing * cosine, u_spacing=u_spacing * cosine,
         spacing_method="power spectrum of the line profile",
-        profile_depth=(np.arange(high - low) - float(stack.position[0])) * cosine, profile=mean,
+        profile_depth=(np.arange(high - low, dtype=np.float64) - float(stack.position[0])) * cosine, profile=mean,
         station_depth=depth[:, None], u_station=u[:, None], row=row[:, None], column=column[:, None],
         station_step=1.0, roughness=nothing, correlation_length=nothing, lateral_noise=u,
         flags=() if sure else ("line_taken_as_normal",),
@@ -413,7 +415,7 @@ def _stands_out(field: NDArray[np.float32], slope: float, mean: FloatArray) -> f
     left, right = np.ascontiguousarray(field[:, : half - gap]), np.ascontiguousarray(field[:, -(half - gap) :])
     first, _, number = sheared_mean(left, slope, 1)
     second, _, other = sheared_mean(right, slope, 1)
-    apart = int(round(slope * (columns - (half - gap))))  # each half is sheared about its own middle
+    apart = round(slope * (columns - (half - gap)))  # each half is sheared about its own middle
     first = np.where(number == number.max(), first, np.nan)
     second = np.where(other == other.max(), second, np.nan)
     if apart > 0:
@@ -450,9 +452,7 @@ def profile_period(mean: FloatArray) -> float | None:
     return strongest_spacing(mean)
 
 
-def _band_region(
-    picture: Picture, start: tuple[float, float], stop: tuple[float, float], width: float
-) -> Region:
+def _band_region(picture: Picture, start: tuple[float, float], stop: tuple[float, float], width: float) -> Region:
     """Region of the picture that holds the band."""
     rows, columns = picture.intensity.shape
     half = 0.5 * width

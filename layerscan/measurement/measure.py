@@ -126,7 +126,9 @@ def prepare_picture(micrograph: Micrograph, region: Region | None) -> Picture:
     usable = np.isfinite(image)
     if not usable.any():
         where = "the region" if region else "the image"
-        raise InputError(f"No pixel of {where} is usable: all are not finite or excluded. Choose another image or region.")
+        raise InputError(
+            f"No pixel of {where} is usable: all are not finite or excluded. Choose another image or region."
+        )
     if _is_saturated(image, micrograph.stored_type):
         flags.append("saturated")
     size = micrograph.pixel_size
@@ -146,7 +148,7 @@ def _is_saturated(image: NDArray[np.float32], stored_type: str) -> bool:
         return False
     low, high = np.nanmin(image), np.nanmax(image)
     at_ends = np.count_nonzero(image == low), np.count_nonzero(image == high)
-    return max(at_ends) > SATURATED_SHARE * image.size and sum(at_ends) < image.size
+    return bool(max(at_ends) > SATURATED_SHARE * image.size and sum(at_ends) < image.size)
 
 
 def _stretch(image: NDArray[np.float32], factor: float, axis: int) -> NDArray[np.float32]:
@@ -168,7 +170,7 @@ def _measure_field(
 ) -> Measurement:
     _say(progress, "preparing the kernels (the first run compiles them)", 0.02)
     from layerscan.measurement.detection import detect_layers
-    from layerscan.measurement.straighten import OrientationMap, straighten
+    from layerscan.measurement.straighten import straighten
     from layerscan.measurement.tracking import follow_layers
 
     image = picture.intensity
@@ -193,9 +195,7 @@ def _measure_field(
         from layerscan.measurement.editing import apply_edits
 
         found = apply_edits(found, settings, unit_nm=picture.unit_nm)
-    result = build_measurement(
-        micrograph, settings, detection, found, unit_nm=picture.unit_nm, flags=picture.flags
-    )
+    result = build_measurement(micrograph, settings, detection, found, unit_nm=picture.unit_nm, flags=picture.flags)
     _say(progress, "measured", 1.0)
     return result
 
@@ -231,8 +231,10 @@ def _detection(seen: LayerDetection, picture: Picture) -> Detection:
 def _orientation_map(seen: LayerDetection):  # type: ignore[no-untyped-def]
     from layerscan.measurement.straighten import OrientationMap
 
-    assert seen.orientation_map_deg is not None and seen.coherence is not None
-    assert seen.map_row_px is not None and seen.map_column_px is not None
+    assert seen.orientation_map_deg is not None
+    assert seen.coherence is not None
+    assert seen.map_row_px is not None
+    assert seen.map_column_px is not None
     rows, columns = np.meshgrid(seen.map_row_px, seen.map_column_px, indexing="ij")
     weight = seen.coherence.astype(np.float64)
     if seen.valid is not None:
@@ -262,7 +264,8 @@ def _layered_depths(seen: LayerDetection, straight: StraightField) -> tuple[floa
     if seen.valid is None or not seen.valid.any():
         return None
     i, j = np.nonzero(seen.valid)
-    depth, _ = straight.frame.to_frame((i + 0.5) * seen.valid_step_px, (j + 0.5) * seen.valid_step_px)
+    step = float(seen.valid_step_px)
+    depth, _ = straight.frame.to_frame((i.astype(np.float64) + 0.5) * step, (j.astype(np.float64) + 0.5) * step)
     half = 0.5 * seen.valid_step_px
     return float(depth.min()) - half - straight.depth_start, float(depth.max()) + half - straight.depth_start
 
@@ -274,12 +277,12 @@ def describe_field(
     stack, traces = followed.stack, followed.traces
     edges, stations = followed.depth.shape
     number = np.broadcast_to(np.arange(stations), followed.depth.shape)
-    along = straight.station_start + straight.station_step * number
+    along: FloatArray = straight.station_start + straight.station_step * number.astype(np.float64)
     from layerscan.measurement.field import frame_to_picture
 
     row, column = frame_to_picture(straight.frame, followed.depth, along)
     inside = _inside(picture.intensity, row, column)
-    depth = np.where(inside, followed.depth, np.nan)
+    np.where(inside, followed.depth, np.nan)
     row, column = picture.to_page(row, column)
     cosine = followed.cosine
     local = np.where(inside, followed.normal, np.nan)
@@ -308,7 +311,7 @@ def describe_field(
         spacing=spacing,
         u_spacing=u_spacing,
         spacing_method="power spectrum of the straightened mean profile",
-        profile_depth=np.arange(count) - float(stack.position[0]),
+        profile_depth=np.arange(count, dtype=np.float64) - float(stack.position[0]),
         profile=followed.profile,
         station_depth=local - shift,
         u_station=traces.u,

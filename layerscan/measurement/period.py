@@ -62,13 +62,14 @@ def estimate_period(intensity: Any, *, step_nm: float) -> Period:
     """
     value = _checked(intensity, step_nm)
     n = len(value)
-    x = np.arange(n) - 0.5 * (n - 1)
+    x: FloatArray = np.arange(n, dtype=np.float64) - 0.5 * (n - 1)
     flat = value - np.polyval(np.polyfit(x, value, 1), x)
     frequency, harmonics, statistic = _start(flat)
     frequency, harmonics, rest, u_frequency = _refine_best(value, x, frequency, harmonics)
     if frequency * n < LEAST_PERIODS - 0.05:
         raise MeasurementError(
-            f"Only {frequency * n:.1f} periods fit in the profile of {n} samples. At least three are needed: give a longer profile."
+            f"Only {frequency * n:.1f} periods fit in the profile of {n} samples. At least three are needed: "
+            "give a longer profile."
         )
     flags = []
     if 1 / frequency < 4:
@@ -93,12 +94,18 @@ def _checked(intensity: Any, step_nm: float) -> FloatArray:
         raise MeasurementError(f"The profile holds {value.dtype}, not real numbers. Give one line of intensities.")
     value = value.astype(np.float64)
     if not (isinstance(step_nm, int | float | np.number) and math.isfinite(step_nm) and step_nm > 0):
-        raise MeasurementError(f"The step {step_nm!r} nm must be positive and finite. Give the distance between samples in nm.")
+        raise MeasurementError(
+            f"The step {step_nm!r} nm must be positive and finite. Give the distance between samples in nm."
+        )
     if len(value) < 8:
-        raise MeasurementError(f"The profile has {len(value)} samples; a period needs at least 8, and three periods in them.")
+        raise MeasurementError(
+            f"The profile has {len(value)} samples; a period needs at least 8, and three periods in them."
+        )
     if not np.isfinite(value).all():
         bad = int((~np.isfinite(value)).sum())
-        raise MeasurementError(f"{bad} of {len(value)} samples of the profile are not finite. Fill or leave out the gap first.")
+        raise MeasurementError(
+            f"{bad} of {len(value)} samples of the profile are not finite. Fill or leave out the gap first."
+        )
     if not np.ptp(value) > 1e-12 * max(float(np.abs(value).max()), 1e-300):
         raise MeasurementError("The profile is constant, so it has no period. Give a line that crosses the layers.")
     return value
@@ -112,7 +119,7 @@ def _start(flat: FloatArray) -> tuple[float, int, float]:
         size *= 2
     power = np.abs(np.fft.rfft(flat, size)) ** 2
     total = float((flat**2).sum())
-    low = max(int(math.floor((LEAST_PERIODS - 1.0) / n * size)), 1)
+    low = max(math.floor((LEAST_PERIODS - 1.0) / n * size), 1)
     high = len(power) - 1
     candidates = np.arange(low, int(0.5 * size / 1) + 1)
     candidates = candidates[candidates <= high]
@@ -133,8 +140,8 @@ def _start(flat: FloatArray) -> tuple[float, int, float]:
     best = int(np.argmax(score))
     if score[best] < 2 * log_n + 6:
         raise MeasurementError(
-            "No period stands out of the noise of the profile. Give a line that crosses at least three periods of the layers, "
-            "wider if the picture is noisy."
+            "No period stands out of the noise of the profile. Give a line that crosses at least three periods "
+            "of the layers, wider if the picture is noisy."
         )
     return float(candidates[best] / size), int(count[best]), float(score[best])
 
@@ -151,7 +158,9 @@ def _design(x: FloatArray, frequency: float, harmonics: int) -> FloatArray:
     return design
 
 
-def _refine_best(value: FloatArray, x: FloatArray, frequency: float, harmonics: int) -> tuple[float, int, FloatArray, float]:
+def _refine_best(
+    value: FloatArray, x: FloatArray, frequency: float, harmonics: int
+) -> tuple[float, int, FloatArray, float]:
     """Refine the start and its multiples, which explain a profile as well with fewer harmonics; best by BIC."""
     tried = [_refine(value, x, frequency * k, harmonics) for k in (1, 2, 3, 4) if k == 1 or frequency * k < 0.4]
     best = min(tried, key=lambda fit: fit[0])
@@ -177,7 +186,9 @@ def _refine(
     return best
 
 
-def _gauss_newton(value: FloatArray, x: FloatArray, frequency: float, harmonics: int) -> tuple[float, FloatArray, float]:
+def _gauss_newton(
+    value: FloatArray, x: FloatArray, frequency: float, harmonics: int
+) -> tuple[float, FloatArray, float]:
     n = len(x)
     f = frequency
     limit = 0.6 / n

@@ -8,7 +8,8 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from layerscan.measurement.boundaries import SHARED, EdgeFit, Hints, fit_boundaries, model_profile, plain_model
+from layerscan.measurement.boundaries import EdgeFit, Hints, fit_boundaries, plain_model
+from layerscan.measurement.edges import SHARED, model_profile
 from layerscan.measurement.segmentation import BRIGHT, DARK, OTHER, segment_profile
 
 if TYPE_CHECKING:
@@ -165,7 +166,9 @@ def _segment(
     return edges, found.phase, np.interp(at, centres, found.level[0]), np.interp(at, centres, found.level[1])
 
 
-def _start_blur(value: FloatArray, weight: FloatArray, position: FloatArray, bright_first: bool, period: float) -> float:
+def _start_blur(
+    value: FloatArray, weight: FloatArray, position: FloatArray, bright_first: bool, period: float
+) -> float:
     """Blur, from a geometric grid, whose plain model lies nearest the profile."""
     segments = len(position) + 1
     level = np.where(np.arange(segments) % 2 == 0, float(bright_first), float(not bright_first))
@@ -199,7 +202,7 @@ def _beyond(fit: EdgeFit, other: tuple[bool, bool], count: int) -> tuple[float |
 def _with_beyond(
     fit: EdgeFit, level: FloatArray, beyond: tuple[float | None, float | None], period: float
 ) -> tuple[FloatArray, FloatArray, FloatArray, slice]:
-    """Positions and levels with the supposed boundaries put in, what is known of them, and the slice of the real ones."""
+    """Positions and levels with the supposed boundaries put in, what is known of them, the slice of the real ones."""
     position = fit.position
     place = np.zeros((2, len(position)))
     first = 0
@@ -277,13 +280,15 @@ def _revise(
     nominal = np.where(np.arange(segments) % 2 == 0, float(bright_first), float(not bright_first))
     depth = np.arange(len(value), dtype=np.float64)
     off = np.where(weight > 0, value - model_profile(depth, position, fit.level, fit.shared, fit.active), 0.0)
-    half = max(int(round(blur)), 1)
+    half = max(round(blur), 1)
     inside = (weight > 0) & (depth > position[0]) & (depth < position[-1])
     noise = 1.4826 * float(np.median(np.abs(off[inside]))) if inside.any() else 0.0
     if segments > 4:
         width = np.diff(position)
         level = fit.level
-        own = np.minimum(np.abs(level[1:-1] - level[:-2]), np.abs(level[1:-1] - level[2:]))  # smaller step of each layer
+        own = np.minimum(
+            np.abs(level[1:-1] - level[:-2]), np.abs(level[1:-1] - level[2:])
+        )  # smaller step of each layer
         filled = _fill(width / blur)
         doubt = own * filled < np.maximum(0.12, 3.5 * noise / np.sqrt(np.maximum(width, 1.0)))
         if doubt.any():
@@ -293,7 +298,8 @@ def _revise(
     index = np.searchsorted(position, depth)
     sign = np.where(nominal[index] > 0.5, -1.0, 1.0)
     gap = np.minimum(
-        np.abs(depth - position[np.clip(index, 0, len(position) - 1)]), np.abs(depth - position[np.clip(index - 1, 0, None)])
+        np.abs(depth - position[np.clip(index, 0, len(position) - 1)]),
+        np.abs(depth - position[np.clip(index - 1, 0, None)]),
     )
     allowed = (weight > 0) & (gap > 1.2 * blur) & (index > 0) & (index < len(position))
     score = np.where(allowed, smooth * sign, 0.0)

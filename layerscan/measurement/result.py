@@ -210,7 +210,7 @@ def build_measurement(
     if period is not None and period.sd is not None and period.sd > 0.25 * period.mean:
         gathered.append("irregular")
     for flag in ("near_nyquist", "not_resolved", "boundary_incomplete", "termination"):
-        if any(flag in item.flags for item in (*layers, *boundaries)):
+        if any(flag in item.flags for item in layers) or any(flag in item.flags for item in boundaries):
             gathered.append(flag)
     spacing = None
     if found.spacing is not None:
@@ -409,6 +409,6 @@ def _profile(found: FoundLayers, scale: float) -> Profile:
     return Profile(
         depth_nm=depth,
         intensity=value.astype(np.float64),
-        frequency_per_nm=np.fft.rfftfreq(size, step),
+        frequency_per_nm=np.fft.rfftfreq(size, step).astype(np.float64),
         power=power / max(float(power.max()), 1e-300),
     )

@@ -55,7 +55,7 @@ def _duration_tables(log_mean, log_sd, longest, tail):  # type: ignore[no-untype
 
 
 @njit(cache=True)  # type: ignore[untyped-decorator]
-def _viterbi(profile, level, noise, scatter, density, survival, start_level, end_level, end_cost):  # type: ignore[no-untyped-def]  # noqa: E501
+def _viterbi(profile, level, noise, scatter, density, survival, start_level, end_level, end_cost):  # type: ignore[no-untyped-def]
     """Best sequence: returns (edges, phases). Start and end level NaN: the stack reaches that end of the profile."""
     count = profile.size
     longest = density.shape[1] - 1

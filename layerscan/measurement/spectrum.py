@@ -20,7 +20,7 @@ def _power(profile: FloatArray, pad: int) -> tuple[FloatArray, int]:
     n = len(value)
     x = np.arange(n) - 0.5 * (n - 1)
     value = value - value.mean() - x * float((x * value).sum() / (x * x).sum())
-    size = 1 << max(int(math.ceil(math.log2(pad * n))), 3)
+    size = 1 << max(math.ceil(math.log2(pad * n)), 3)
     return np.abs(np.fft.rfft(value * np.hanning(n), size)) ** 2, size
 
 
@@ -36,7 +36,7 @@ def strongest_spacing(profile: FloatArray, *, least_periods: float = 1.5) -> flo
     """
     n = len(profile)
     power, size = _power(profile, 4)
-    low = max(int(math.ceil(least_periods / n * size)), 1)
+    low = max(math.ceil(least_periods / n * size), 1)
     high = int(size / 3.0)
     if high <= low + 1:
         return None

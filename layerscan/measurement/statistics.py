@@ -112,7 +112,9 @@ def longest_run(phase: tuple[str, ...], seen: BoolArray, *, least_common: int) -
             start += 1
             continue
         stop = start
-        while stop < edges - 1 and phase[stop] in ("dark", "bright") and (stop == start or phase[stop] != phase[stop - 1]):
+        while (
+            stop < edges - 1 and phase[stop] in ("dark", "bright") and (stop == start or phase[stop] != phase[stop - 1])
+        ):
             stop += 1
         for first in range(start, stop - 1):
             for last in range(stop - (stop - first) % 2, first, -2):
@@ -175,7 +177,11 @@ def steady_span(depth: FloatArray, covariance: FloatArray, phase: tuple[str, ...
         x, y = np.linalg.solve(factor, design), np.linalg.solve(factor, thickness)
         gram = x.T @ x
         beta = np.linalg.solve(gram, x.T @ y)
-        score = 2 * float(np.log(np.diag(factor)).sum()) + float(np.linalg.slogdet(gram)[1]) + float(((y - x @ beta) ** 2).sum())
+        score = (
+            2 * float(np.log(np.diag(factor)).sum())
+            + float(np.linalg.slogdet(gram)[1])
+            + float(((y - x @ beta) ** 2).sum())
+        )
         if best is None or score < best[0]:
             best = (score, float(tau2))
     if best is None:

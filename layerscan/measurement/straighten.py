@@ -93,7 +93,17 @@ def straighten(
     moved = np.stack([np.interp(at, np.arange(columns), line) for line in shift]) * step
     count = int(high - low) + 1
     final = sample_field(
-        image, frame.vector(), low, 1.0, count, station_start, float(fine), fine, moved, node_start * step, node_step * step
+        image,
+        frame.vector(),
+        low,
+        1.0,
+        count,
+        station_start,
+        float(fine),
+        fine,
+        moved,
+        node_start * step,
+        node_step * step,
     )
     return StraightField(
         frame=frame,
@@ -120,7 +130,7 @@ def _extent(frame: Frame, region: Region, period: float) -> tuple[float, float, 
 
 def _align(field: NDArray[np.float32], period: float) -> tuple[FloatArray, float, float]:
     """Shift at nodes along the depth for every column, and where the nodes lie; all in samples of ``field``."""
-    count, columns = field.shape
+    _count, _columns = field.shape
     seen = np.isfinite(field)
     if not seen.any():
         raise MeasurementError("The region holds no usable pixel. Choose another region.")

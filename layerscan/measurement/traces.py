@@ -15,7 +15,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numba import njit
 
-from layerscan.measurement.boundaries import _edge, _rim
+from layerscan.measurement.edges import blurred_edge, blurred_rim
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -51,7 +51,9 @@ class Traces:
 
 
 @njit(cache=True)  # type: ignore[untyped-decorator]
-def match_columns(field, centre, gain, position, level, shared, decay_active, moved, prior, limit, raw, information, misfit):  # type: ignore[no-untyped-def]  # noqa: E501
+def match_columns(  # type: ignore[no-untyped-def]
+    field, centre, gain, position, level, shared, decay_active, moved, prior, limit, raw, information, misfit
+):
     """One Gauss-Newton step of all boundaries at every station.
 
     ``field`` is intensity; ``centre`` and ``gain`` (depth, stations) bring it to 0 and 1. ``moved`` is where each
@@ -79,7 +81,7 @@ def match_columns(field, centre, gain, position, level, shared, decay_active, mo
                 middle = 0.5 * (at[b] + at[b - 1])
                 at[b - 1], at[b] = middle - 0.1, middle + 0.1
         first = 0
-        start = max(int(math.ceil(at[0] - reach)), 0)
+        start = max(math.ceil(at[0] - reach), 0)
         stop = min(int(at[edges - 1] + reach) + 1, count)
         number = np.zeros(edges)
         for d in range(start, stop):
@@ -100,14 +102,14 @@ def match_columns(field, centre, gain, position, level, shared, decay_active, mo
             b = first
             while b < edges and at[b] - d <= reach:
                 step = level[b + 1] - level[b]
-                e, du, _, _, _ = _edge(d - at[b], s, box, skew if step > 0 else -skew)
+                e, du, _, _, _ = blurred_edge(d - at[b], s, box, skew if step > 0 else -skew)
                 total += step * e
                 rise[b] = -step * du
                 bump[b] = 0.0
                 if decay_active:
                     side = 1.0 if step > 0 else -1.0
                     v = side * (d - at[b])
-                    bright, dark = _rim(v, s, shared[5]), _rim(-v, s, shared[5])
+                    bright, dark = blurred_rim(v, s, shared[5]), blurred_rim(-v, s, shared[5])
                     rim += shared[3] * bright[0] + shared[4] * dark[0]
                     bump[b] = -side * (shared[3] * bright[1] - shared[4] * dark[1])
                 last = b
@@ -163,7 +165,7 @@ def match_columns(field, centre, gain, position, level, shared, decay_active, mo
 
 
 def pooled_covariance(raw: FloatArray, valid: BoolArray, longest: int) -> tuple[FloatArray, FloatArray]:
-    """Covariance of the raw traces along the stations at lags 0 to ``longest``, and between neighbours at those lags."""
+    """Covariance of the raw traces along the stations at lags 0 to ``longest``, and between neighbours at these."""
     size = 1
     while size < raw.shape[1] + longest + 1:
         size *= 2
@@ -284,7 +286,7 @@ def smooth_traces(
     weights = np.full(power.shape, 2.0)
     weights[0] = weights[-1] = 1.0
     variance = (weights * gain * model.noise_variance).sum(axis=1) / size
-    u = np.sqrt((vectors**2 @ variance))
+    u = np.sqrt(vectors**2 @ variance)
     spread = np.where(valid, u[:, None], math.sqrt(model.variance + model.noise_variance))
     own = (vectors**2 @ ((weights * gain).sum(axis=1) / size))[:, None]
     apart = np.where(valid, smooth - own * (raw - level[:, None] - smooth) / np.maximum(1 - own, 0.05), smooth)
@@ -301,4 +303,5 @@ def mark_outliers(misfit: FloatArray, information: FloatArray) -> NDArray[np.boo
         seen &= information > 0.6 * full[:, None]
         typical = np.array([np.median(row[ok]) if ok.any() else 0.0 for row, ok in zip(misfit, seen, strict=True)])
         spread = np.median(np.abs(misfit - typical[:, None])[seen]) * 1.4826 if seen.any() else 0.0
-        return seen & (misfit < np.maximum(typical[:, None] + 6 * spread, 3 * typical[:, None]))
+        trusted: NDArray[np.bool_] = seen & (misfit < np.maximum(typical[:, None] + 6 * spread, 3 * typical[:, None]))
+        return trusted

@@ -1,4 +1,4 @@
-"""From a straightened field to followed layers: mean profile, boundaries, traces, and the profile again along the traces."""
+"""From a straightened field to followed layers: mean profile, boundaries, traces, and the profile along the traces."""
 
 from __future__ import annotations
 
@@ -9,7 +9,8 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numba import njit
 
-from layerscan.measurement.boundaries import RIM_DECAY, Hints, read_hints
+from layerscan.measurement.boundaries import Hints, read_hints
+from layerscan.measurement.edges import RIM_DECAY
 from layerscan.measurement.profile import Stack, find_stack
 from layerscan.measurement.segmentation import BRIGHT, DARK
 from layerscan.measurement.traces import (
@@ -80,7 +81,7 @@ def mean_profile(field, moved, position):  # type: ignore[no-untyped-def]
                     part = (d - position[b - 1]) / max(position[b] - position[b - 1], 1e-6)
                     shift = moved[b - 1, j] + part * (moved[b, j] - moved[b - 1, j])
             at = d + shift
-            low = int(math.floor(at))
+            low = math.floor(at)
             x = at - low
             if low < 0 or low > count - 1 or (low == count - 1 and x > 0):
                 continue
@@ -104,7 +105,7 @@ def mean_profile(field, moved, position):  # type: ignore[no-untyped-def]
     noise = np.full(count, np.nan)
     number = np.zeros(count)
     for d in range(count):
-        pairs, square = 0, 0.0
+        pairs, square = 0.0, 0.0
         for j in range(stations - 2):
             step = straight[d, j + 2] - straight[d, j]
             if step == step:
@@ -112,12 +113,12 @@ def mean_profile(field, moved, position):  # type: ignore[no-untyped-def]
                 square += step * step
         if pairs > 0:
             noise[d] = 0.5 * square / pairs
-        low, high = -1e30, 1e30
+        least, most = -1e30, 1e30
         for _ in range(3):
             n, s1 = 0, 0.0
             for j in range(stations):
                 value = straight[d, j]
-                if value == value and low <= value <= high:
+                if value == value and least <= value <= most:
                     n += 1
                     s1 += value
             if n < 1:
@@ -126,14 +127,14 @@ def mean_profile(field, moved, position):  # type: ignore[no-untyped-def]
             s2 = 0.0
             for j in range(stations):
                 value = straight[d, j]
-                if value == value and low <= value <= high:
+                if value == value and least <= value <= most:
                     s2 += (value - m) ** 2
             mean[d], number[d] = m, n
             variance[d] = s2 / max(n - 1, 1)
             sd = math.sqrt(variance[d])
             if n < 12 or sd == 0:
                 break
-            low, high = m - 4.0 * sd, m + 4.0 * sd
+            least, most = m - 4.0 * sd, m + 4.0 * sd
     return mean, variance, number, noise
 
 
@@ -166,7 +167,7 @@ def local_gain(field, moved, position, profile, dark, bright, node_step, half, s
                     left = position[b - 1] + moved[b - 1, j]
                     part = (d - left) / max(position[b] + moved[b, j] - left, 1e-6)
                     at = position[b - 1] + part * (position[b] - position[b - 1])
-                i = int(math.floor(at))
+                i = math.floor(at)
                 if i < 0 or i >= count - 1:
                     continue
                 x, y = profile[i] + (at - i) * (profile[i + 1] - profile[i]), field[d, j]
@@ -232,8 +233,12 @@ def usable_depth(straight: StraightField) -> tuple[int, int]:
 
 
 def follow_layers(
-    straight: StraightField, *, period: float, layered: tuple[float, float] | None = None,
-    full_scale: float | None = None, rounds: int = 3,
+    straight: StraightField,
+    *,
+    period: float,
+    layered: tuple[float, float] | None = None,
+    full_scale: float | None = None,
+    rounds: int = 3,
 ) -> FollowedStack | None:
     """Find the boundaries of a straightened field and follow each across it.
 
@@ -261,7 +266,7 @@ def follow_layers(
     mean, single, number, _ = mean_profile(field, flat, np.zeros(0))
     inside = None
     if layered is not None:
-        inside = (max(int(layered[0]) - low, 0), min(int(math.ceil(layered[1])) - low, high - low))
+        inside = (max(int(layered[0]) - low, 0), min(math.ceil(layered[1]) - low, high - low))
         if inside[1] - inside[0] < 2 * period:
             inside = None
     stack = find_stack(mean, variance=_variance(single, number), period=period, layered=inside, nuisance=False)
@@ -312,7 +317,7 @@ def layer_values(even, position, moved, window):  # type: ignore[no-untyped-def]
             half = 0.25 * (position[i + 1] - position[i])
             total[i, j + 1] = total[i, j]
             number[i, j + 1] = number[i, j]
-            for d in range(max(int(math.ceil(centre - half)), 0), min(int(centre + half) + 1, count)):
+            for d in range(max(math.ceil(centre - half), 0), min(int(centre + half) + 1, count)):
                 if even[d, j] == even[d, j]:
                     total[i, j + 1] += even[d, j]
                     number[i, j + 1] += 1
@@ -427,7 +432,7 @@ def _trace(
 
 
 def _with_beyond(stack: Stack) -> tuple[int, FloatArray, FloatArray]:
-    """Positions and levels with the boundaries supposed beyond the frame; the first number is that of the real first."""
+    """Positions and levels with the boundaries supposed beyond the frame; the number is that of the first real one."""
     position, level = stack.fit.best_position, stack.fit.level
     before, behind = stack.beyond
     if before is not None:
@@ -439,9 +444,18 @@ def _with_beyond(stack: Stack) -> tuple[int, FloatArray, FloatArray]:
     return int(before is not None), position, level
 
 
-def _match(  # type: ignore[no-untyped-def]
-    field, centre, gain, position, level, shared, rim, moved, first, limit
-):
+def _match(
+    field: NDArray[np.float32],
+    centre: NDArray[np.float32],
+    gain: NDArray[np.float32],
+    position: FloatArray,
+    level: FloatArray,
+    shared: FloatArray,
+    rim: bool,
+    moved: FloatArray,
+    first: int,
+    limit: float,
+) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Match all columns; boundaries supposed beyond the frame move with their neighbours and are held."""
     edges = moved.shape[0]
     full = moved
@@ -459,8 +473,15 @@ def _match(  # type: ignore[no-untyped-def]
 
 
 def _followed(
-    straight: StraightField, stack: Stack, traces: Traces, low: int, mean: FloatArray, variance: FloatArray, period: float,
-    ended: NDArray[np.int64], gone: BoolArray,
+    straight: StraightField,
+    stack: Stack,
+    traces: Traces,
+    low: int,
+    mean: FloatArray,
+    variance: FloatArray,
+    period: float,
+    ended: NDArray[np.int64],
+    gone: BoolArray,
 ) -> FollowedStack:
     stations = np.arange(traces.raw.shape[1])
     valid = traces.valid & ~gone
@@ -468,7 +489,9 @@ def _followed(
     deviation = traces.smooth
     aligned = low + stack.position[:, None] + deviation
     depth = straight.frame_depth(aligned, np.broadcast_to(stations, aligned.shape))
-    base = straight.frame_depth(low + stack.position[:, None] + np.zeros_like(deviation), np.broadcast_to(stations, aligned.shape))  # noqa: E501
+    base = straight.frame_depth(
+        low + stack.position[:, None] + np.zeros_like(deviation), np.broadcast_to(stations, aligned.shape)
+    )
     slope = _slope(base, straight.station_step, max(int(period / straight.station_step), 1))
     slope = slope / np.maximum(1 - straight.frame.curvature * base, 0.05)
     cosine = 1 / np.sqrt(1 + slope**2)
