@@ -19,7 +19,7 @@ from layerscan.report.summary import (
     TestRow,
     VarianceComponents,
 )
-from layerscan.study.mixed import variance_components
+from layerscan.study.mixed import compare_by_mixed_model, variance_components
 from layerscan.study.planning import plan_interval, plan_power
 from layerscan.study.results import ImageResult, LayerValue, StudyResults
 from layerscan.study.statistics import compare_groups, estimate_mean, find_drift
@@ -330,10 +330,13 @@ def layer_values(layers: Sequence[LayerValue], quantity: str) -> list[float]:
 
 
 def variance_rows(
-    images: Sequence[ImageResult], study: StudyTable, *, quantity: str | None = None
-) -> tuple[VarianceComponents, ...]:
-    """Variance components of the study's quantity over all groups; empty where no image has two values."""
-    quantity = quantity or study.quantity
+    images: Sequence[ImageResult], study: StudyTable
+) -> tuple[tuple[VarianceComponents, ...], tuple[TestRow, ...]]:
+    """Variance components of the study's quantity and the mixed model's comparison of groups.
+
+    Both are empty where the layers allow no estimate: no image with two values, or no spread.
+    """
+    quantity = study.quantity
     values: list[float] = []
     labels: list[tuple[str, str, str]] = []
     for image in images:
@@ -341,9 +344,9 @@ def variance_rows(
         values += single
         labels += [(image.unit.key, image.specimen, image.group)] * len(single)
     if not values:
-        return ()
+        return (), ()
     try:
-        found, _ = variance_components(
+        found, fit = variance_components(
             values,
             [key for key, _, _ in labels],
             [specimen for _, specimen, _ in labels],
@@ -352,9 +355,10 @@ def variance_rows(
             level=study.level,
         )
     except MeasurementError:
-        return ()
+        return (), ()
+    tests = compare_by_mixed_model(fit, quantity=f"{quantity}_nm", level=study.level) if study.compare_groups else ()
     note = "the spread between layers holds the measurement noise of single layers"
-    return (replace(found, notes=(*found.notes, note)),)
+    return (replace(found, notes=(*found.notes, note)),), tests
 
 
 def study_budget(

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import math
 import warnings
 from collections.abc import Callable, Mapping, Sequence
@@ -9,7 +10,7 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 from layerscan.errors import MeasurementError, MissingExtraError
-from layerscan.report.summary import VarianceComponent, VarianceComponents
+from layerscan.report.summary import TestRow, VarianceComponent, VarianceComponents
 
 if TYPE_CHECKING:
     import numpy as np
@@ -22,13 +23,14 @@ MAX_LAYERS_FOR_LIBRARY = 20_000
 
 @dataclass(frozen=True, kw_only=True)
 class MixedFit:
-    """Variances by name (residual last), REML criterion, group means with their u and degrees of freedom."""
+    """Variances by name (residual last), REML criterion, group means with their u, and how many specimens each has."""
 
     variances: Mapping[str, float]
     criterion: float
     means: Mapping[str, tuple[float, float]]
     degrees_of_freedom: int | None
     library: str
+    specimens: Mapping[str, int]
 
 
 def fit_crossed(values: Sequence[float], factors: Mapping[str, Sequence[Any]]) -> MixedFit:
@@ -79,6 +81,7 @@ def fit_crossed(values: Sequence[float], factors: Mapping[str, Sequence[Any]]) -
         means={"all": (mean, u)},
         degrees_of_freedom=None,
         library="statsmodels",
+        specimens={},
     )
 
 
@@ -202,6 +205,7 @@ def fit_nested(
         means=dict(zip(names, _group_means(variances, sums), strict=True)),
         degrees_of_freedom=degrees if degrees > 0 else None,
         library=library,
+        specimens=dict(zip(names, np.bincount(sums.group).tolist(), strict=True)),
     )
     return fit, sums, (bool(np.bool_(tells_specimens)), bool(np.bool_(tells_images)))
 
@@ -383,6 +387,51 @@ def variance_components(
         ),
         fit,
     )
+
+
+def compare_by_mixed_model(
+    fit: MixedFit, *, quantity: str = "", unit: str = "nm", level: float = 0.95
+) -> tuple[TestRow, ...]:
+    """Differences between groups in the mixed model, with Student's t on specimens minus groups degrees of freedom.
+
+    Notes
+    -----
+    The normal distribution that mixed-model programs use by default found differences between equal groups in 5 to 9 %
+    of simulated studies of five specimens a group at a stated 5 %; t in 3 to 6 %. Where all specimens have the same
+    numbers of images and layers and no estimate lies at the boundary this is the two-sample t test of their means with
+    pooled spread.
+    """
+    from scipy.special import stdtr, stdtrit
+
+    nu = fit.degrees_of_freedom
+    if nu is None or len(fit.means) < 2:
+        return ()
+    rows = []
+    for a, b in itertools.combinations(fit.means, 2):
+        difference = fit.means[a][0] - fit.means[b][0]
+        u = math.hypot(fit.means[a][1], fit.means[b][1])
+        half = u * float(stdtrit(nu, 0.5 + level / 2))
+        rows.append(
+            TestRow(
+                quantity=quantity,
+                unit=unit,
+                name="mixed model",
+                compares=(a, b),
+                statistic_name="t",
+                statistic=difference / u,
+                degrees_of_freedom=(float(nu),),
+                p_value=float(2 * stdtr(nu, -abs(difference) / u)),
+                difference=difference,
+                low=difference - half,
+                high=difference + half,
+                level=level,
+                n=(fit.specimens[a], fit.specimens[b]),
+                sentence=f"Mixed model of all layers: {a} - {b} = {difference:+.3g} {unit} ({level:.0%} interval "
+                f"{difference - half:+.3g} to {difference + half:+.3g} {unit}).",
+                notes=("supposes the same spread in all groups; p is for this pair alone",),
+            )
+        )
+    return tuple(rows)
 
 
 def _profile_interval(

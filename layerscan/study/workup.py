@@ -85,10 +85,10 @@ def summarise(results: StudyResults) -> StudySummary:
         analysis.find_specimens(counted),
     )
     quantity, level = tables.study.quantity, tables.study.level
-    variance = analysis.variance_rows(counted, tables.study)
+    variance, mixed = analysis.variance_rows(counted, tables.study)
     budget = analysis.study_budget(counted, study.specimens, variance, tables.study)
     limited_by, next_measurement = analysis.say_next_measurement(budget)
-    tests = analysis.compare_specimens(study.specimens, tables.study)
+    tests = (*analysis.compare_specimens(study.specimens, tables.study), *mixed)
     pairs = peak_pairs(results, study.specimens)
     line = fit_pairs(pairs, level=level)
     estimates = tuple((group, _group_estimates(study, group)) for group in study.groups)
@@ -391,6 +391,7 @@ def _say_statistics(tests: Sequence[TestRow], measured: bool) -> tuple[str, ...]
         "one-way ANOVA": "one-way analysis of variance on specimen means",
         "Tukey's test": "Tukey's test of all pairs",
         "Dunnett's test": "Dunnett's test against one group (J. Am. Stat. Assoc. 50 (1955) 1096)",
+        "mixed model": "a mixed model of all layers with t on specimens minus groups degrees of freedom",
         "equivalence (two one-sided tests)": "two one-sided tests (J. Pharmacokinet. Biopharm. 15 (1987) 657)",
     }
     found = list(dict.fromkeys(sources[test.name] for test in tests if test.name in sources))
