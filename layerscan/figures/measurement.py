@@ -95,7 +95,9 @@ def draw_overlay(
     rows, columns = (min(n * block, size) for n, size in zip(picture.shape, intensity.shape, strict=True))
     extent = (-0.5 * column_nm, (columns - 0.5) * column_nm, (rows - 0.5) * row_nm, -0.5 * row_nm)
     axes.imshow(picture, cmap="gray", vmin=0, vmax=1, extent=extent, interpolation="none")
-    axes.locator_params(nbins=5)
+    narrow = columns * column_nm < 0.6 * rows * row_nm
+    axes.locator_params(axis="x", nbins=2 if narrow else 5)
+    axes.locator_params(axis="y", nbins=5)
     axes.set(xlabel="column (nm)" if pixel else "column (pixels)", ylabel="row (nm)" if pixel else "row (pixels)")
     _hatch_left_out(axes, measurement, intensity.shape, row_nm, column_nm)
     _draw_traces(axes, measurement, row_nm, column_nm)
@@ -290,17 +292,18 @@ def _draw_direction(
         light_x = _within(float(trace.column_px[middle]) * column_nm - step * right, extent[0], extent[1])
         light_y = _within(float(trace.row_px[middle]) * row_nm - step * down, extent[3], extent[2])
         _arrow(axes, (light_x, light_y), (light_x + step * right, light_y + step * down), style.VERMILION)
-        _label(axes, light_x + 0.6 * size * down, light_y - 0.6 * size * right, "light", style.DARK_VERMILION)
+        axes.text(
+            light_x + 0.6 * size * down, light_y - 0.6 * size * right, "light", ha="center", va="center", fontsize=8,
+            color=style.DARK_VERMILION, bbox=_BOX,
+        )  # fmt: skip
     at_right = light_x < extent[0] + 3 * size and light_y < extent[3] + 3 * size
     x, y = extent[1] - size if at_right else extent[0] + size, extent[3] + size
     tail, head = (x - 0.5 * size * right, y - 0.5 * size * down), (x + 0.5 * size * right, y + 0.5 * size * down)
     _arrow(axes, tail, head, style.BLACK)
-    _label(axes, x, y + 0.85 * size, "depth", style.BLACK)
+    side: Literal["left", "right"] = "right" if at_right else "left"
+    edge = x + 0.8 * size if at_right else x - 0.8 * size
+    axes.text(edge, y + 0.85 * size, "depth", ha=side, va="center", fontsize=8, bbox=_BOX)
     return light_x if ends else extent[0]
-
-
-def _label(axes: Axes, x: float, y: float, words: str, colour: str) -> None:
-    axes.text(x, y, words, ha="center", va="center", fontsize=8, color=colour, bbox=_BOX)
 
 
 def _arrow(axes: Axes, tail: tuple[float, float], head: tuple[float, float], colour: str) -> None:
@@ -316,18 +319,18 @@ def _within(value: float, low: float, high: float) -> float:
 def _draw_scale_bar(
     axes: Axes, measurement: Measurement, extent: tuple[float, float, float, float], row_nm: float, *, at_left: bool
 ) -> None:
-    from matplotlib.patches import Rectangle
-
     rows, columns = measurement.image.shape
     width, height = extent[1] - extent[0], extent[2] - extent[3]
     bar = style.nice_length(width)
     bottom = min(extent[2], _usable_bottom(measurement, rows, columns) * row_nm)
     left = extent[0] + 0.04 * width if at_left else extent[1] - 0.04 * width - bar
-    low, pad = bottom - 0.045 * height, 0.015 * width
-    box = Rectangle((left - pad, low - 0.075 * height), bar + 2 * pad, 0.1 * height, facecolor="white", alpha=0.85)
-    axes.add_patch(box)
-    axes.plot([left, left + bar], [low, low], color=style.BLACK, linewidth=3.0, solid_capstyle="butt")
-    axes.text(left + bar / 2, low - 0.012 * height, style.length_text(bar), ha="center", va="bottom", fontsize=8)
+    low = bottom - 0.04 * height
+    for colour, thick in (("white", 7.0), (style.BLACK, 3.0)):
+        axes.plot([left, left + bar], [low, low], color=colour, linewidth=thick, solid_capstyle="butt")
+    axes.annotate(
+        style.length_text(bar), (left if at_left else left + bar, low), (0, 6), textcoords="offset points",
+        ha="left" if at_left else "right", va="bottom", fontsize=8, bbox=_BOX,
+    )  # fmt: skip
 
 
 # --- the other panels -----------------------------------------------------------------------------------------------
