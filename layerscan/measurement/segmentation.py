@@ -209,15 +209,32 @@ def _smooth_levels(profile, edge, phase, length, low, high, level):  # type: ign
             level[1, j] = middle + 0.5 * low
 
 
-def _first_levels(profile: FloatArray, period: float) -> FloatArray:
+@dataclass(frozen=True, kw_only=True)
+class _Start:
+    """Where training starts: quantiles that stand for the levels, and the dark layers' part of the period."""
+
+    low: float
+    high: float
+    dark: float
+
+
+_STARTS = (
+    _Start(low=0.15, high=0.85, dark=0.5),
+    _Start(low=0.02, high=0.6, dark=0.12),  # thin dark layers between thick bright ones
+    _Start(low=0.4, high=0.98, dark=0.88),
+)
+_GOOD_RESIDUAL = 0.12  # residual over contrast below which the first start needs no rival
+
+
+def _first_levels(profile: FloatArray, period: float, start: _Start) -> FloatArray:
     """Levels to start from: low and high quantiles in a sliding window of four periods."""
     count = len(profile)
     width = int(min(max(4 * period, 8), count))
     step = max(int(period), 1)
-    starts = np.arange(0, max(count - width, 0) + 1, step)
-    centres = starts + 0.5 * width
-    windows = np.stack([profile[s : s + width] for s in starts])
-    low, high = np.quantile(windows, (0.15, 0.85), axis=1)
+    begins = np.arange(0, max(count - width, 0) + 1, step)
+    centres = begins + 0.5 * width
+    windows = np.stack([profile[s : s + width] for s in begins])
+    low, high = np.quantile(windows, (start.low, start.high), axis=1)
     at = np.arange(count)
     return np.stack([np.interp(at, centres, low), np.interp(at, centres, high)])
 
@@ -253,19 +270,35 @@ def segment_profile(
     ----------
     S.-Z. Yu, Hidden semi-Markov models, Artificial Intelligence 174 (2010) 215, doi 10.1016/j.artint.2009.11.011.
     """
+    best: tuple[float, Segments] | None = None
+    for start in _STARTS:
+        cost, residual, found = _train(profile, period, layered, noise, rounds, start)
+        if best is None or cost < best[0]:
+            best = cost, found
+        if start is _STARTS[0] and residual < _GOOD_RESIDUAL:
+            break
+    assert best is not None
+    return best[1]
+
+
+def _train(
+    profile: FloatArray, period: float, layered: tuple[int, int], noise: float, rounds: int, start: _Start
+) -> tuple[float, float, Segments]:
+    """Viterbi training from one start: (description length, residual over contrast, segments)."""
     count = len(profile)
     inner = slice(*layered)
     level = np.empty((2, count))
-    level[:, inner] = _first_levels(profile[inner], period)
+    level[:, inner] = _first_levels(profile[inner], period, start)
     level[:, : layered[0]] = level[:, layered[0] : layered[0] + 1]
     level[:, layered[1] :] = level[:, layered[1] - 1 : layered[1]]
     contrast = float(np.median(level[1] - level[0]))
     spread = np.full(count, max(0.2 * contrast, noise, 1e-12))
-    log_mean = np.full(2, math.log(max(period / 2, 1.0)))
+    log_mean = np.log(np.maximum([start.dark * period, (1 - start.dark) * period], 1.0))
     log_sd = np.full(2, 0.5)
     longest = int(min(max(3.0 * period, 6), count))
     ends = [_end_level(profile[: layered[0]], period), _end_level(profile[layered[1] :][::-1], period)]
     edge, phase = np.array([0, count]), np.array([OTHER])
+    residual = np.zeros(0)
     previous: FloatArray | None = None
     for _ in range(rounds):
         density, survival = _duration_tables(log_mean, log_sd, longest, 0.02)
@@ -292,7 +325,12 @@ def segment_profile(
         residual = (profile - fitted)[labels != OTHER]
         rms = 1.4826 * float(np.median(np.abs(residual)))
         spread[:] = max(min(max(rms, 0.1 * contrast), 0.5 * contrast), noise)
-    return Segments(edge=edge.astype(np.float64), phase=phase, level=level, noise=float(spread[0]))
+    found = Segments(edge=edge.astype(np.float64), phase=phase, level=level, noise=float(spread[0]))
+    if len(residual) < 2:
+        return math.inf, math.inf, found
+    variance = float(np.mean(residual**2)) + noise**2 + 1e-30
+    length = 0.5 * len(residual) * math.log(variance) + 0.5 * len(phase) * math.log(count)
+    return length, math.sqrt(variance) / max(float(np.median(level[1] - level[0])), 1e-12), found
 
 
 def _end_level(part: FloatArray, period: float) -> float:
