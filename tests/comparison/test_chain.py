@@ -63,7 +63,7 @@ def conclusions(kinds, seeds):
                 value=light.value + rng.normal(0, 0.004, light.value.size),
                 kind="reflectance",
             )
-            prediction = layerscan.predict(found, draws=300, **LIGHT)
+            prediction = layerscan.predict(found, draws=300, seed=seed, **LIGHT)
             answers.append(compare_light(prediction, seen, CompareSettings()).agreement.conclusion)
     return answers
 
