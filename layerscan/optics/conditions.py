@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
+from itertools import pairwise
 from typing import TYPE_CHECKING, Literal
 
 import numpy as np
@@ -17,7 +18,7 @@ if TYPE_CHECKING:
 Polarisation = Literal["s", "p", "unpolarised", "left", "right"]
 CONE_TOLERANCE = 5e-4  # of reflectance, between the rule used and one of twice as many directions
 CONE_NODES = (4, 8, 16, 32, 64, 128)
-FINE_NODES = 160  # points per dimension from which the rule of an oblique cone is made
+FINE_NODES = 80  # points per dimension from which the rule of an oblique cone is made
 VALUES_AT_ONCE = 1_000_000  # of reflectance over stacks, directions, polarisations and wavelengths
 SLIT_STEPS = 6  # points of calculation per bandwidth
 
@@ -83,16 +84,28 @@ def make_cone(*, aoi_deg: float, aperture: float, incident_index: float, nodes: 
     if aoi_deg == 0:
         directions = np.degrees(np.arccos(np.minimum(v, 1.0)))
         return Cone(aoi_deg=directions, weight=weight / weight.sum(), about_normal=True)
-    x, w = np.polynomial.legendre.leggauss(FINE_NODES)
-    v = lowest + (1 - lowest) * (x + 1) / 2
-    azimuth = np.pi * (np.arange(FINE_NODES) + 0.5) / FINE_NODES
-    axis = np.radians(aoi_deg)
-    sine = np.sqrt(np.maximum(1 - v * v, 0.0))
-    cosine = np.cos(axis) * v[:, None] - np.sin(axis) * sine[:, None] * np.cos(azimuth)
-    fine = np.broadcast_to((w * v)[:, None], cosine.shape)
-    used = cosine > 0
-    value, weight = _gauss_rule(cosine[used], fine[used], nodes)
+    cosine, fine = _fine_cone(np.radians(aoi_deg), lowest)
+    value, weight = _gauss_rule(cosine, fine, nodes)
     return Cone(aoi_deg=np.degrees(np.arccos(np.clip(value, 0.0, 1.0))), weight=weight)
+
+
+def _fine_cone(axis: float, lowest: float) -> tuple[FloatArray, FloatArray]:
+    """Cosines of the angle of incidence and weights of many rays of a cone about an oblique axis.
+
+    Rings of equal angle to the axis; of a ring that is cut by the surface only the part in front of it counts. Rings
+    are cut beyond 90 degrees less the tilt of the axis, where the range is divided.
+    """
+    x, w = np.polynomial.legendre.leggauss(FINE_NODES)
+    edges = [lowest, np.sin(axis), 1.0] if lowest < np.sin(axis) < 1.0 else [lowest, 1.0]
+    values, weights = [], []
+    for low, high in pairwise(edges):
+        v = low + (high - low) * (x[:, None] + 1) / 2
+        sine = np.sqrt(np.maximum(1 - v * v, 0.0))
+        first = np.arccos(np.clip(np.cos(axis) * v / np.maximum(np.sin(axis) * sine, 1e-300), -1.0, 1.0))
+        azimuth = first + (np.pi - first) * (x + 1) / 2
+        values.append((np.cos(axis) * v - np.sin(axis) * sine * np.cos(azimuth)).ravel())
+        weights.append(((high - low) * w[:, None] * v * (np.pi - first) * w).ravel())
+    return np.concatenate(values), np.concatenate(weights)
 
 
 def _gauss_rule(value: FloatArray, weight: FloatArray, nodes: int) -> tuple[FloatArray, FloatArray]:

@@ -145,7 +145,7 @@ def predict_light(table: LayerTable, settings: PredictSettings, *, progress: Pro
         series=series,
         lateral=lateral,
         materials=tuple(material_record(medium) for medium in {m.name: m for m in stack.media}.values()),
-        notes=stack.notes + lateral_note,
+        notes=stack.notes + _cone_note(light) + lateral_note,
     )
 
 
@@ -217,6 +217,12 @@ def _calculate(stack: Stack, settings: PredictSettings, tell: Progress, *, what:
         thickness_nm=thickness,
         sequence=sequence,
     )
+
+
+def _cone_note(light: _Light) -> tuple[str, ...]:
+    if light.quadrature_error <= conditions.CONE_TOLERANCE:
+        return ()
+    return (f"The average over the cone is good to {light.quadrature_error:.2g} in reflectance only.",)
 
 
 def _lateral(

@@ -329,6 +329,32 @@ def test_limits_hold_a_new_draw_as_often_as_they_say(seed):
     assert np.mean(inside) == pytest.approx(0.95, abs=0.03)
 
 
+@pytest.mark.parametrize("traced", [False, True])
+def test_interval_of_the_peak_holds_the_truth(traced):
+    # coverage: structures measured with the stated errors; value +- 2 u holds the true peak as often as it says
+    rng = np.random.default_rng(11)
+    truth = table(20, 130, 40)
+    exact = predict(truth, **{**DRAWN, "draws": 0}).peaks[0].wavelength_nm
+    thickness = np.array([layer.thickness_nm for layer in truth.layers])
+    inside = []
+    for number in range(60):
+        scale = 1 + 0.005 * rng.standard_normal()
+        boundary = 2.0 / np.sqrt(2) * rng.standard_normal(41)
+        own = np.diff(boundary) if traced else 2.0 * rng.standard_normal(40)
+        seen = (thickness + own) * scale
+        layers = tuple(
+            replace(layer, thickness_nm=float(d), u_nm=float(np.hypot(2.0, 0.005 * d)))
+            for layer, d in zip(truth.layers, seen, strict=True)
+        )
+        measured = LayerTable(
+            layers=layers, source="x", u_scale_relative=0.005, station_step_nm=50.0,
+            station_thickness_nm=np.repeat(seen[None], 2, axis=0) if traced else None,
+        )  # fmt: skip
+        peak = predict(measured, **{**DRAWN, "draws": 100, "seed": number}).peaks[0]
+        inside.append(abs(peak.wavelength_nm - exact) <= 2 * peak.u_wavelength_nm)
+    assert 0.85 <= np.mean(inside) <= 1.0
+
+
 def test_colour_radius_holds_the_draws():
     # delta_e00_95 grows with the uncertainty and vanishes without any
     radius = [
