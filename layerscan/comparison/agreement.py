@@ -35,7 +35,7 @@ SCORE_WIDTH = 0.12
 
 @dataclass(frozen=True, kw_only=True)
 class PeakMatch:
-    """The dominant peak that both sides share, and the second-best reading where there is one."""
+    """The dominant peak that both sides share, and whether the observed one could be of another order."""
 
     predicted: Peak
     observed: Peak
@@ -134,8 +134,9 @@ def judge_peaks(match: PeakMatch | None, *, calibrated: bool) -> Verdict:
     Notes
     -----
     z = difference / u with u from the draws (thickness, calibration, index) and the observation; p from the normal law.
-    "Explains" needs p >= 0.05, a range of passing peaks that says something (narrower than the distance to the next
-    order and than 120 nm) and bands whose widths differ by less than a factor of two. "Contradicts" needs p < 0.05.
+    "Explains" needs p >= 0.05, a certain order, a range of passing peaks that says something (narrower than the
+    distance to the next order and than 120 nm) and bands whose widths differ by less than a factor of two.
+    "Contradicts" needs p < 0.05.
     What it cannot see: a right peak for a wrong reason.
     """
     if match is None:
@@ -202,6 +203,8 @@ def _verdict(
 def _doubts(match: PeakMatch, span: tuple[float, float]) -> tuple[str, ...]:
     doubts = []
     peak, seen = match.predicted, match.observed
+    if match.order_uncertain:
+        doubts.append("the observed peak could as well be of another order")
     width = span[1] - span[0]
     spacing = peak.wavelength_nm / (peak.order + 1) if peak.order else math.inf
     if width > min(spacing, WIDEST_RANGE_NM):

@@ -98,6 +98,13 @@ def test_peak_between_two_orders_is_of_uncertain_order():
     assert agree.match_peaks(predicted, [peak(470.0, order=None)]).order_uncertain
 
 
+def test_peak_of_uncertain_order_explains_nothing():
+    predicted = [peak(500.0, order=3, u=25.0), peak(390.0, order=4, u=20.0)]
+    verdict = agree.judge_peaks(agree.match_peaks(predicted, [peak(465.0, order=None)]), calibrated=True)
+    assert verdict.agreement.conclusion == "cannot_tell"
+    assert "another order" in verdict.doubts[0]
+
+
 def test_far_peaks_are_still_compared():
     match = agree.match_peaks([peak(400.0)], [peak(760.0, order=None)])
     assert match.difference_nm == -360.0
