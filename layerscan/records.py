@@ -54,6 +54,7 @@ FLAGS: Mapping[str, str] = {
     "termination": "A layer or boundary ends inside the field.",
     "edited_by_hand": "A boundary was moved, added or deleted by hand.",
     "confirm_with_second_section": "The pattern is parallel to what knife chatter would show: confirm it in a section cut at another angle.",
+    "scan_lines": "A weak sinusoid runs along the scan lines, as mains pick-up makes it; it was not taken for layers.",
     "ends_cut_by_frame": "The stack goes on beyond the frame: layers seen are not the layers of the specimen.",
     "spacing_ambiguous": "The dominant spacing may be a harmonic or one of several.",
     "irregular": "The structure is irregular; the stated spread is part of the answer.",

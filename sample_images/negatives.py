@@ -113,7 +113,7 @@ def _mains_rows(rng: np.random.Generator, shape: tuple[int, int]) -> np.ndarray:
     """
     base = _power_law(rng, shape)
     period_rows = rng.uniform(3, 40)
-    per_pixel = rng.choice([0.0, rng.uniform(0, 0.02)]) / max(shape[1], 1)
+    per_pixel = rng.choice([0.0, rng.uniform(-0.8, 0.8)]) / max(shape[1], 1)
     y, x = np.arange(shape[0])[:, None], np.arange(shape[1])[None, :]
     wander = 0.2 * correlated_noise(rng, shape[0], 60.0, 0.7)[:, None]
     phase = 2 * math.pi * (y / period_rows + per_pixel * x) + wander

@@ -654,14 +654,16 @@ def _layered(best: _Judged, levels: tuple[Level, ...]) -> LayerDetection:
     field_map = straight.field_map
     angle = np.degrees(0.5 * np.arctan2(field_map.sin2, field_map.cos2)) % 180
     direction = _global_orientation(candidate, levels, step, valid)
-    purity = _harmonics(candidate, straight, levels)
-    if _is_hum(direction, purity, levels):
+    harmonics, wander = _purity(candidate, straight, levels)
+    if _is_hum(direction.angle_deg, harmonics, level.factor / candidate.frequency, levels):
         return LayerDetection(
             layered=False, periodic=False, statistic=statistic, p_value=None, region=None,
             flags=("no_layers_found", "scan_lines"), evidence=evidence, reason="one sinusoid locked to the scan lines",
         )  # fmt: skip
-    flags = [*(["orientation_varies"] if direction.varies else []), *(["confirm_with_second_section"] if purity < _PURE else [])]
-    if direction.flat is not None:
+    flags = ["orientation_varies"] if direction.varies else []
+    if harmonics < _PURE and wander < _STEADY:
+        flags.append("confirm_with_second_section")
+    if direction.flat:
         angle = np.full_like(angle, direction.angle_deg)
     seed = straight.grid.origin
     return LayerDetection(
@@ -688,8 +690,12 @@ def _layered(best: _Judged, levels: tuple[Level, ...]) -> LayerDetection:
     )  # fmt: skip
 
 
-def _harmonics(candidate: _Candidate, straight: _Straight, levels: tuple[Level, ...]) -> float:
-    """Energy of the second and third harmonic over the fundamental's, read on a fine level; 0 for a pure sinusoid."""
+def _purity(candidate: _Candidate, straight: _Straight, levels: tuple[Level, ...]) -> tuple[float, float]:
+    """How near the profile, read on a fine level, comes to one steady sinusoid.
+
+    Returns the energy of the second and third harmonic over the fundamental's, and the rms phase [rad] by which the
+    fundamental wanders about a steady (at most evenly chirped) one.
+    """
     from layerscan.measurement.orientation_kernels import block_means
 
     coarse = candidate.level
@@ -707,28 +713,56 @@ def _harmonics(candidate: _Candidate, straight: _Straight, levels: tuple[Level, 
     count = seen.sum(axis=1)
     rows = np.flatnonzero(count >= max(2, 0.3 * count.max()))
     if len(rows) < 2.2 * straight.period:
-        return math.inf
+        return math.inf, math.inf
     profile = (filled.sum(axis=1) / np.maximum(count, 1))[rows[0] : rows[-1] + 1]
-    return _profile_peak(profile, 1 / straight.period)[2]
+    _, frequency, harmonics = _profile_peak(profile, 1 / straight.period)
+    return harmonics, _phase_wander(profile, frequency)
 
 
-_PURE = 0.03  # harmonics of a sinusoid: knife chatter, mains hum; sharp-edged layers have 0.1 and more
+def _phase_wander(profile: FloatArray, frequency: float) -> float:
+    """Rms phase [rad] of the fundamental about a parabola, from demodulation over two periods."""
+    from scipy.ndimage import gaussian_filter1d
+
+    place = np.arange(len(profile))
+    mixed = (profile - profile.mean()) * np.exp(-2j * np.pi * frequency * place)
+    width = 0.8 / frequency
+    smooth = gaussian_filter1d(mixed.real, width) + 1j * gaussian_filter1d(mixed.imag, width)
+    edge = min(int(width), len(profile) // 8)
+    inner = slice(edge, len(profile) - edge)
+    phase, weight = np.unwrap(np.angle(smooth[inner])), np.abs(smooth[inner])
+    if len(phase) < 8:
+        return math.inf
+    fit = np.polyval(np.polyfit(place[inner], phase, 2, w=weight), place[inner])
+    return float(np.sqrt(np.average((phase - fit) ** 2, weights=weight**2)))
 
 
-def _is_hum(direction: _Direction, purity: float, levels: tuple[Level, ...]) -> bool:
-    """Whether this is a weak sinusoid locked to the scan lines: straight to a fraction of noise, along the rows, pure.
+_PURE = 0.03  # harmonics of a sinusoid: knife chatter, mains hum; layers with sharp edges have 0.06 and more
+_STEADY = 0.2  # rad
+
+
+def _is_hum(angle_deg: float, harmonics: float, period_px: float, levels: tuple[Level, ...]) -> bool:
+    """Whether this is a weak sinusoid locked to the scan lines: straight, along the rows, and pure.
 
     Mains pick-up adds one sinusoid in time, which the raster lays out as rows or slightly slanted lines over a picture of
     something else. Where the sinusoid is most of the picture it is taken for what the specimen shows.
     """
-    flat = direction.flat
-    if flat is None or purity > 0.5 * _PURE or abs(direction.angle_deg - 90) > 4:
+    from scipy.ndimage import uniform_filter
+
+    if harmonics > 0.1 * _PURE or abs(angle_deg - 90) > 4:
         return False
     level = next((each for each in levels if each.intensity.size <= 2**21), levels[-1])
-    weight = flat.count / max(float(flat.count.sum()), 1.0)
-    centre = float(np.sum(weight * flat.profile))
-    explained = float(np.sum(weight * (flat.profile - centre) ** 2))
-    return explained < 0.35 * float(level.intensity.var())
+    period = period_px / level.factor
+    image = level.intensity - uniform_filter(level.intensity, max(round(2 * period), 3) | 1, mode="nearest")
+    fit = _refine_outwards(image, np.ones(image.shape, dtype=bool), angle_deg=angle_deg, period=period)
+    if not fit.converged or fit.wave_px > 0.02 * period + 2 * fit.u_wave_px:
+        return False
+    seen = fit.count > 0.3 * fit.count.max()
+    depth = np.arange(len(fit.profile))[seen] * fit.step_px
+    window = np.hanning(len(depth))
+    trial = np.linspace(0.9, 1.1, 41) / period
+    profile = (fit.profile[seen] - fit.profile[seen].mean()) * window
+    amplitude = 2 * np.abs(np.exp(-2j * np.pi * trial[:, None] * depth) @ profile).max() / window.sum()
+    return float(amplitude**2 / 2) < 0.5 * float(level.intensity.var())
 
 
 def _valid_map(candidate: _Candidate, straight: _Straight, shape: tuple[int, int]) -> tuple[int, BoolArray]:
@@ -785,12 +819,12 @@ def _mean_direction(candidate: _Candidate) -> tuple[float, float, float]:
 
 @dataclass(frozen=True, kw_only=True, eq=False)
 class _Direction:
-    """Mean direction of the normal; ``flat`` holds the fit of one straight direction where that describes the layers."""
+    """Mean direction of the normal; ``flat`` says whether one straight direction describes the layers."""
 
     angle_deg: float
     u_deg: float
     varies: bool
-    flat: Rotation | None
+    flat: bool
 
 
 def _global_orientation(candidate: _Candidate, levels: tuple[Level, ...], step: int, valid: BoolArray) -> _Direction:
@@ -802,15 +836,33 @@ def _global_orientation(candidate: _Candidate, levels: tuple[Level, ...], step: 
     if level.valid is not None:
         use = use & (level.valid > 0.5)
     period = 1 / candidate.frequency * candidate.level.factor / level.factor
-    tiles_say = _Direction(angle_deg=mean, u_deg=spread / math.sqrt(independent), varies=spread > 2, flat=None)
+    tiles_say = _Direction(angle_deg=mean, u_deg=spread / math.sqrt(independent), varies=spread > 2, flat=False)
     if spread > 8 or use.sum() < 4 * period**2:
         return tiles_say
-    fine = refine_orientation(level.intensity, use, angle_deg=mean)
+    fine = _refine_outwards(level.intensity, use, angle_deg=mean, period=period)
     offset = math.radians(abs((fine.angle_deg - mean + 90) % 180 - 90))
     if not fine.converged or offset * math.sqrt(float(use.sum())) > 0.5 * period:
         return tiles_say
     wave = math.sqrt(max(fine.wave_px**2 - fine.u_wave_px**2, 0.0))
     bend = math.degrees(3 * wave / math.sqrt(float(use.sum())))  # what waviness leaves undecided about a mean direction
-    if fine.wave_px < max(2 * fine.u_wave_px, 0.1):
-        return _Direction(angle_deg=fine.angle_deg, u_deg=math.hypot(fine.u_deg, bend), varies=False, flat=fine)
-    return _Direction(angle_deg=fine.angle_deg, u_deg=math.hypot(fine.u_deg, bend), varies=spread > 2, flat=None)
+    flat = fine.wave_px < max(2 * fine.u_wave_px, 0.1)
+    return _Direction(
+        angle_deg=fine.angle_deg, u_deg=math.hypot(fine.u_deg, bend), varies=spread > 2 and not flat, flat=flat
+    )  # fmt: skip
+
+
+def _refine_outwards(image: NDArray[np.float32], use: BoolArray, *, angle_deg: float, period: float) -> Rotation:
+    """Refine the direction in a window of 24 periods, then in ever larger ones: many periods make a narrow valley."""
+    rows, columns = np.nonzero(use.any(axis=1))[0], np.nonzero(use.any(axis=0))[0]
+    middle = (int(rows[0] + rows[-1]) // 2, int(columns[0] + columns[-1]) // 2)
+    half = 12.0 * period
+    blur = min(max(period / 14, 0.25), 0.7)
+    while 2 * half < max(rows[-1] - rows[0], columns[-1] - columns[0]):
+        r0, c0 = max(int(middle[0] - half), 0), max(int(middle[1] - half), 0)
+        window = (slice(r0, int(middle[0] + half) + 1), slice(c0, int(middle[1] + half) + 1))
+        if use[window].sum() > 50 * period:
+            part = refine_orientation(image[window], use[window], angle_deg=angle_deg, blur_px=blur)
+            if part.converged and abs((part.angle_deg - angle_deg + 90) % 180 - 90) < math.degrees(0.5 / 12):
+                angle_deg = part.angle_deg
+        half *= 2.5
+    return refine_orientation(image, use, angle_deg=angle_deg, blur_px=blur)

@@ -16,7 +16,7 @@ if TYPE_CHECKING:
     from layerscan.records import BoolArray, FloatArray, IntArray
 
 TILE_PX = 64  # side of a tile on its level; the Hann window leaves about half of it
-HIGHEST = 0.34
+HIGHEST = 0.3
 
 
 @dataclass(frozen=True, kw_only=True, eq=False)
@@ -296,7 +296,7 @@ class Rotation:
 
 
 def refine_orientation(
-    image: NDArray[np.float32], use: BoolArray, *, angle_deg: float, step_px: float = 0.5, rounds: int = 6
+    image: NDArray[np.float32], use: BoolArray, *, angle_deg: float, step_px: float = 0.5, blur_px: float = 0.7, rounds: int = 8
 ) -> Rotation:
     """Fit one direction to flat layers by least squares on all pixels, with a free profile across the layers.
 
@@ -309,13 +309,15 @@ def refine_orientation(
         Start, from the +column axis towards the +row axis; within about a third of period / lateral extent [rad].
     step_px : float
         Bin of the profile.
+    blur_px : float
+        Smoothing of the profile's slope against noise, well below the period.
     rounds : int
         Gauss-Newton steps at most.
 
     Returns
     -------
     Rotation
-        Converged when the last step was below a tenth of the uncertainty.
+        Converged when the last step was below the uncertainty; it ends early at a tenth of that.
 
     Notes
     -----
@@ -334,7 +336,7 @@ def refine_orientation(
     theta = math.radians(angle_deg)
     u, noise, converged = math.inf, math.inf, False
     for _ in range(rounds):
-        profile, slope, number = _profile_across(image, use, theta, origin, step_px, count)
+        profile, slope, number = _profile_across(image, use, theta, origin, step_px, blur_px, count)
         a, b, e, n = rotation_normal_equations(
             image, use, math.cos(theta), math.sin(theta), origin, step_px, profile, slope
         )
@@ -344,10 +346,10 @@ def refine_orientation(
         noise = math.sqrt(e / n)
         u = noise / math.sqrt(a)
         theta += max(-0.05, min(0.05, change))
+        converged = abs(change) < u
         if abs(change) < 0.1 * u:
-            converged = True
             break
-    profile, slope, number = _profile_across(image, use, theta, origin, step_px, count)
+    profile, slope, number = _profile_across(image, use, theta, origin, step_px, blur_px, count)
     lateral = np.array([-reach, max(2 * reach / 24, 2.0)])
     weight, moment = np.zeros(25), np.zeros(25)
     lateral_shifts(
@@ -364,7 +366,7 @@ def refine_orientation(
 
 
 def _profile_across(
-    image: NDArray[np.float32], use: BoolArray, theta: float, origin: FloatArray, step_px: float, count: int
+    image: NDArray[np.float32], use: BoolArray, theta: float, origin: FloatArray, step_px: float, blur_px: float, count: int
 ) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Mean intensity against depth for a direction, a little smoothed, its slope, and the pixels in each bin."""
     from scipy.ndimage import gaussian_filter1d
@@ -375,5 +377,5 @@ def _profile_across(
     bin_profile(image, use, math.cos(theta), math.sin(theta), origin, step_px, total, number)
     known = number > 0
     profile = np.interp(np.arange(count), np.flatnonzero(known), total[known] / number[known])
-    slope = gaussian_filter1d(profile, 0.7 / step_px, order=1) / step_px
-    return gaussian_filter1d(profile, 0.35 / step_px), slope, number
+    slope = gaussian_filter1d(profile, blur_px / step_px, order=1) / step_px
+    return gaussian_filter1d(profile, 0.5 * blur_px / step_px), slope, number
