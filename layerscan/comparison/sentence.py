@@ -131,6 +131,8 @@ def _next(conclusion: str, prediction: Prediction, verdict: Verdict, found: Foun
         return "Next: predict again with the uncertainty of the layers and draws"
     if conclusion == "cannot_tell":
         return "Next: measure a smaller spot with a small aperture, and more sections, so that both bands say more"
+    if found.reasons and found.reasons[0].indistinguishable_from:
+        return "Next: measure at several stated angles and in a liquid of known index, which tells these apart"
     for reason in found.reasons:
         for key, advice in NEXT:
             if key in reason.parameters[0]:

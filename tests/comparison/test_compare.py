@@ -121,6 +121,7 @@ def test_thickness_and_index_look_alike_for_one_peak_at_normal_incidence():
     reason = answer.reasons[names(answer).index("scale of all thicknesses")]
     assert "index of all layers" in reason.indistinguishable_from
     assert "cannot tell" in answer.sentence
+    assert "several stated angles" in answer.sentence
     free = compare_light(prediction, seen, CompareSettings(scale="free"))
     alike = free.reasons[names(free).index("scale of all thicknesses")].indistinguishable_from
     assert any(name.startswith("index of n=1.5") for name in alike)
