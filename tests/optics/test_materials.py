@@ -32,13 +32,13 @@ def n_at(name, wavelength=589.3, **options):
         # Leertouwer, Wilts, Stavenga (2011), abstract: 400, 500, 600 nm, printed to three decimals
         ("chitin", 400, 1.572), ("chitin", 500, 1.552), ("chitin", 600, 1.541),
         ("keratin", 400, 1.569), ("keratin", 500, 1.556), ("keratin", 600, 1.548),
-        # Ghosh (1999); mineral handbooks give 1.658 and 1.486 for calcite at the D line
+        # Ghosh (1999); mineral handbooks give 1.658 and 1.486 for calcite at the D line (from memory)
         ("calcite-o", 589.3, 1.658), ("calcite-e", 589.3, 1.486),
-        # CRC handbook, water at 20 C: 1.33299 at 589.3 nm against air; relative to vacuum 1.3334
+        # handbooks, water at 20 C: 1.33299 at 589.3 nm against air (from memory); relative to vacuum 1.3334
         ("water", 589.3, 1.3334),
-        # Malitson (1965), table: 1.45843 at 589.3 nm
+        # Malitson (1965): 1.4584 at the D line (from memory)
         ("silica", 589.29, 1.4584),
-        # SCHOTT data sheet N-BK7: nd = 1.51680 at 587.56 nm
+        # SCHOTT data sheet N-BK7: nd = 1.51680 at 587.56 nm (from memory)
         ("n-bk7", 587.56, 1.5168),
         # Quan & Fry (1995): pure water 1.3330 at S = 0; 35 permil adds about 0.0064
         ("seawater", 589.3, 1.3394),
