@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from layerscan.errors import CalibrationError, InputError, MeasurementError
-from layerscan.measurement.result import FoundLayers, build_measurement, empty_measurement
+from layerscan.measurement.result import Aligned, FoundLayers, build_measurement, empty_measurement
 from layerscan.records import Detection
 
 if TYPE_CHECKING:
@@ -178,7 +178,8 @@ def _measure_field(
     seen = detect_layers(image, progress=None)
     detection = _detection(seen, picture)
     if not seen.layered or seen.period_px is None:
-        return empty_measurement(micrograph, settings, detection, flags=picture.flags)
+        flags = (*picture.flags, *seen.flags)
+        return empty_measurement(micrograph, settings, detection, flags=flags, aligned=_aligned(seen, picture))
     _say(progress, "straightening the field", 0.3)
     period = seen.period_px
     region = _grown_region(seen, image.shape, 1.5 * period)
@@ -225,6 +226,18 @@ def _detection(seen: LayerDetection, picture: Picture) -> Detection:
         p_value=seen.p_value,
         region=None if seen.region is None else picture.region_to_page(seen.region),
         flags=seen.flags,
+    )
+
+
+def _aligned(seen: LayerDetection, picture: Picture) -> Aligned | None:
+    if not seen.aligned or seen.orientation_deg is None or seen.period_px is None:
+        return None
+    return Aligned(
+        orientation_rad=math.radians(seen.orientation_deg),
+        u_orientation_rad=math.radians(seen.u_orientation_deg or 0.0),
+        spacing=seen.period_px,
+        u_spacing=seen.u_period_px or 0.3 * seen.period_px,
+        unit_nm=picture.unit_nm,
     )
 
 
@@ -359,26 +372,44 @@ def _roughness(followed: FollowedStack, straight: StraightField) -> tuple[FloatA
 
 
 def _mean_orientation(straight: StraightField, followed: FollowedStack) -> tuple[float, float | None]:
-    """Direction of the mean normal [rad] and its u from the boundaries' scatter."""
+    """Mean of the local normals' directions over all traced boundaries [rad], and its u from the boundaries' scatter.
+
+    The mean of a boundary's local slopes is the slope of its chord, read off a cubic through the boundary: a straight
+    line fitted to a wavy boundary would weigh its middle more than its ends.
+    """
     frame = straight.frame
     edges, stations = followed.depth.shape
     place = straight.station_start + straight.station_step * np.arange(stations)
-    slopes = []
-    double = 0j
+    curves = []
     for b in range(edges):
         good = np.isfinite(followed.depth[b])
-        if good.sum() < 4:
-            continue
-        s, t = place[good], followed.depth[b, good]
-        stretch = 1 - frame.curvature * float(t.mean())
-        x = (s - s.mean()) * stretch
-        slope = float((x * (t - t.mean())).sum() / max(float((x * x).sum()), 1e-12))
-        slopes.append(slope)
-        double += complex(np.exp(2j * (frame.angle_rad - frame.curvature * s + math.atan(slope))).sum())
-    if not slopes:
+        if good.sum() >= 4:
+            s, t = place[good], followed.depth[b, good]
+            x = (s - s.mean()) * (1 - frame.curvature * float(t.mean()))
+            half = max(float(np.abs(x).max()), 1e-12)
+            u = x / half
+            line, *_ = np.linalg.lstsq(np.vander(u, 2, increasing=True), t, rcond=None)
+            cubic, *_ = np.linalg.lstsq(np.vander(u, 4, increasing=True), t, rcond=None)
+            chord = cubic @ (np.vander(u[[-1]], 4, increasing=True) - np.vander(u[[0]], 4, increasing=True))[0]
+            curves.append((line[1] / half, chord / (x[-1] - x[0]), cubic[2], cubic[3], s))
+    if not curves:
         return frame.angle_rad % math.pi, None
-    u = float(np.std(slopes, ddof=1)) / math.sqrt(len(slopes)) if len(slopes) > 2 else None
-    return (0.5 * float(np.angle(double))) % math.pi, u
+    straight_slope, chord_slope, second, third = (np.array([c[i] for c in curves]) for i in range(4))
+    slopes = chord_slope if _is_curved(second) or _is_curved(third) else straight_slope
+    double = sum(
+        complex(np.exp(2j * (frame.angle_rad - frame.curvature * c[4] - math.atan(slope))).sum())
+        for c, slope in zip(curves, slopes, strict=True)
+    )
+    u_slope = float(np.std(slopes, ddof=1)) / math.sqrt(len(slopes)) if len(slopes) > 2 else None
+    return (0.5 * float(np.angle(double))) % math.pi, u_slope
+
+
+def _is_curved(coefficient: FloatArray) -> bool:
+    """Whether a coefficient beyond the straight line differs from zero over the boundaries, at five standard errors."""
+    if len(coefficient) < 3:
+        return False
+    scatter = 1.4826 * float(np.median(np.abs(coefficient - np.median(coefficient)))) / math.sqrt(len(coefficient))
+    return abs(float(np.median(coefficient))) > 5 * scatter
 
 
 def _spacing(followed: FollowedStack, seen: LayerDetection) -> tuple[float | None, float | None]:
