@@ -27,6 +27,24 @@ Work = Callable[[Unit], UnitResult]
 _TOPIC = "layerscan-study"
 _WINDOW_PER_WORKER = 2
 
+LOCAL_OPTIONS = {
+    "distributed.scheduler.allowed-failures": 0,  # we say ourselves what is tried again, and how
+    "distributed.scheduler.worker-saturation": 1.0,  # a worker holds one task: its death accuses no other
+    "distributed.worker.memory.target": False,
+    "distributed.worker.memory.spill": False,
+    "distributed.worker.memory.pause": False,
+    # what dask watches by the fiftieth of a second costs more than our few long tasks, and keeps memory growing
+    "distributed.admin.tick.interval": "1s",
+    "distributed.admin.tick.limit": "60s",
+    "distributed.admin.system-monitor.interval": "10s",
+    "distributed.admin.low-level-log-length": 100,
+    "distributed.admin.log-length": 100,
+    "distributed.worker.memory.monitor-interval": "500ms",
+    "distributed.worker.profile.enabled": False,
+    "distributed.scheduler.work-stealing": False,
+}
+"""Settings of the scheduler and workers that a study starts on this machine."""
+
 CLUSTER_LOST = "The cluster was lost. What was recorded is safe: run the same command again."
 
 
@@ -99,14 +117,7 @@ def _connect(cluster: Any, workers: int, run: RunTable) -> Iterator[Any]:
     if cluster is not None and not isinstance(cluster, str):
         yield cluster
         return
-    options = {
-        "distributed.scheduler.allowed-failures": 0,  # we say ourselves what is tried again, and how
-        "distributed.scheduler.worker-saturation": 1.0,  # a worker holds one task: its death accuses no other
-        "distributed.worker.memory.target": False,
-        "distributed.worker.memory.spill": False,
-        "distributed.worker.memory.pause": False,
-    }
-    with dask.config.set(options), contextlib.ExitStack() as stack:
+    with dask.config.set(LOCAL_OPTIONS), contextlib.ExitStack() as stack:
         if cluster is None:
             cluster = stack.enter_context(
                 LocalCluster(  # type: ignore[no-untyped-call]
