@@ -132,14 +132,16 @@ def sheared_mean(field, slope, group):  # type: ignore[no-untyped-def]
 
 
 @njit(cache=True)  # type: ignore[untyped-decorator]
-def _energy(field, slope, stride):  # type: ignore[no-untyped-def]
-    """Energy of the sheared mean profile: what is common to all columns."""
+def _coherence(field, slope, stride):  # type: ignore[no-untyped-def]
+    """Part of the columns' variance that their sheared mean has: what is common to all of them."""
     count, columns = field.shape
-    total = 0.0
-    n = 0
+    shared = 0.0
     s1 = 0.0
+    every = 0.0
+    n = 0
     for d in range(0, count, stride):
         value = 0.0
+        square = 0.0
         number = 0
         for j in range(columns):
             at = d + slope * (j - 0.5 * (columns - 1))
@@ -149,33 +151,39 @@ def _energy(field, slope, stride):  # type: ignore[no-untyped-def]
             v = field[low, j] + (at - low) * (field[low + 1, j] - field[low, j])
             if v == v:
                 value += v
+                square += v * v
                 number += 1
         if number == columns:
             value /= number
-            total += value * value
+            shared += value * value
+            every += square / number
             s1 += value
             n += 1
-    return total / n - (s1 / n) ** 2 if n * stride > 0.4 * count else -1.0
+    if n * stride <= 0.4 * count:
+        return -1.0
+    mean = s1 / n
+    total = every / n - mean * mean
+    return (shared / n - mean * mean) / total if total > 0 else -1.0
 
 
 @njit(cache=True)  # type: ignore[untyped-decorator]
 def find_slope(field, most):  # type: ignore[no-untyped-def]
-    """Slope of the layers across the band (depth per column) that leaves the mean profile most energy."""
+    """Slope of the layers across the band (depth per column) in which the columns agree best."""
     count, columns = field.shape
     step = min(2.0 / columns, 0.35)
     steps = int(most / step)
     stride = max(count // 400, 1)
-    best, slope = _energy(field, 0.0, stride), 0.0
+    best, slope = _coherence(field, 0.0, stride), 0.0
     for i in range(1, steps + 1):
         for sign in (-1.0, 1.0):
-            value = _energy(field, sign * i * step, stride)
+            value = _coherence(field, sign * i * step, stride)
             if value > best + 1e-9 * abs(best):
                 best, slope = value, sign * i * step
     width = 0.5 * step
     stride = max(count // 1000, 1)
-    best = _energy(field, slope, stride)
-    for _ in range(7):
-        left, right = _energy(field, slope - width, stride), _energy(field, slope + width, stride)
+    best = _coherence(field, slope, stride)
+    for _ in range(16):
+        left, right = _coherence(field, slope - width, stride), _coherence(field, slope + width, stride)
         bend = left - 2 * best + right
         if left > best and left >= right:
             best, slope = left, slope - width
@@ -183,11 +191,11 @@ def find_slope(field, most):  # type: ignore[no-untyped-def]
             best, slope = right, slope + width
         elif bend < 0 and width < 0.4 * step:
             moved = 0.5 * width * (left - right) / bend
-            value = _energy(field, slope + moved, stride)
+            value = _coherence(field, slope + moved, stride)
             if value > best:
                 best, slope = value, slope + moved
             width *= 0.25
-            if width < 2e-3:
+            if width < 5e-4:
                 break
         else:
             width *= 0.5

@@ -83,6 +83,17 @@ class FoundLayers:
         return np.isfinite(self.station_depth)
 
 
+@dataclass(frozen=True, kw_only=True)
+class Aligned:
+    """Direction and spacing [px of the square grid] of a pattern that is aligned but not layered."""
+
+    orientation_rad: float
+    u_orientation_rad: float
+    spacing: float
+    u_spacing: float
+    unit_nm: float
+
+
 def image_source(micrograph: Micrograph) -> ImageSource:
     """What the measurement keeps of its image."""
     return ImageSource(
@@ -97,9 +108,30 @@ def image_source(micrograph: Micrograph) -> ImageSource:
 
 
 def empty_measurement(
-    micrograph: Micrograph, settings: MeasureSettings, detection: Detection, *, flags: tuple[str, ...] = ()
+    micrograph: Micrograph,
+    settings: MeasureSettings,
+    detection: Detection,
+    *,
+    flags: tuple[str, ...] = (),
+    aligned: Aligned | None = None,
 ) -> Measurement:
-    """The answer where no layered structure was found: no number, the evidence kept."""
+    """The answer where no layered structure was found: the evidence, and no numbers.
+
+    ``aligned`` gives the direction and spacing of a pattern that has both without being layered.
+    """
+    spacing = None
+    if aligned is not None:
+        geometry = section_geometry(settings, aligned.orientation_rad)
+        scale = aligned.unit_nm * geometry.factor
+        relative = micrograph.pixel_size.u_relative if micrograph.pixel_size else None
+        value = aligned.spacing * scale
+        spacing = Spacing(
+            value=value,
+            u=math.sqrt(
+                (aligned.u_spacing * scale) ** 2 + (value * (relative or 0.0)) ** 2 + (value * geometry.u_relative) ** 2
+            ),
+            method="power spectrum of aligned blocks",
+        )
     return Measurement(
         version=__version__,
         settings=settings.model_dump(),
@@ -109,6 +141,9 @@ def empty_measurement(
         layered=False,
         periodic=False,
         detection=detection,
+        orientation_deg=None if aligned is None else math.degrees(aligned.orientation_rad) % 180,
+        u_orientation_deg=None if aligned is None else math.degrees(aligned.u_orientation_rad),
+        spacing=spacing,
     )
 
 

@@ -72,7 +72,9 @@ def test_error_of_a_boundary_stays_near_its_bound(width: float, most: float) -> 
         stated.append(np.sqrt(np.diag(fit.covariance)))
     error = np.array(errors)
     bound = boundary_bound(blur=blur, noise=noise)
-    within = error - np.where(np.arange(20) % 2 == 0, error[:, ::2].mean(1, keepdims=True), error[:, 1::2].mean(1, keepdims=True))
+    within = error - np.where(
+        np.arange(20) % 2 == 0, error[:, ::2].mean(1, keepdims=True), error[:, 1::2].mean(1, keepdims=True)
+    )
     assert np.sqrt(np.mean(within**2) / 0.9) < 1.15 * bound
     assert np.sqrt(np.mean(error**2)) < most * bound
     assert 0.85 < np.sqrt(np.mean((error / np.array(stated)) ** 2)) < 1.2

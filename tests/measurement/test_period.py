@@ -16,15 +16,15 @@ def _bound(*, period: float, noise: float, amplitudes: tuple[float, ...], count:
     return period**2 * math.sqrt(6 * noise**2 / (math.pi**2 * total * count * (count**2 - 1)))
 
 
-def _draw(rng: np.random.Generator, *, period: float, noise: float, amplitudes: tuple[float, ...], count: int) -> np.ndarray:
+def _draw(
+    rng: np.random.Generator, *, period: float, noise: float, amplitudes: tuple[float, ...], count: int
+) -> np.ndarray:
     x = np.arange(count) + rng.uniform(0, period)
     wave = sum(a * np.cos(2 * np.pi * (m + 1) * x / period) for m, a in enumerate(amplitudes))
     return wave + noise * rng.standard_normal(count)
 
 
-@given(
-    period=st.floats(6.0, 60.0), phase=st.floats(0, 6.28), offset=st.floats(-1e3, 1e3), slope=st.floats(-0.05, 0.05)
-)
+@given(period=st.floats(6.0, 60.0), phase=st.floats(0, 6.28), offset=st.floats(-1e3, 1e3), slope=st.floats(-0.05, 0.05))
 @settings(deadline=None, derandomize=True, max_examples=25)
 def test_noise_free_wave_is_recovered_whatever_its_offset_and_slope(
     period: float, phase: float, offset: float, slope: float
@@ -85,7 +85,8 @@ def test_bound_is_reached_over_many_draws() -> None:
     # the same over 2000 draws, which know an rms to 1.6 %
     rng = np.random.default_rng(8)
     error = [
-        estimate_period(_draw(rng, period=22.3, noise=0.5, amplitudes=(1.0, 0.3), count=300), step_nm=1.0).period_nm - 22.3
+        estimate_period(_draw(rng, period=22.3, noise=0.5, amplitudes=(1.0, 0.3), count=300), step_nm=1.0).period_nm
+        - 22.3
         for _ in range(2000)
     ]
     bound = _bound(period=22.3, noise=0.5, amplitudes=(1.0, 0.3), count=300)

@@ -12,7 +12,10 @@ from layerscan.measurement.straighten import OrientationMap, straighten
 
 
 @given(
-    angle=st.floats(0, math.pi), curvature=st.floats(-0.004, 0.004), depth=st.floats(-80, 80), station=st.floats(-300, 300)
+    angle=st.floats(0, math.pi),
+    curvature=st.floats(-0.004, 0.004),
+    depth=st.floats(-80, 80),
+    station=st.floats(-300, 300),
 )
 @settings(deadline=None, derandomize=True, max_examples=100)
 def test_a_frame_goes_to_the_picture_and_back(angle: float, curvature: float, depth: float, station: float) -> None:
@@ -28,7 +31,9 @@ def test_depth_grows_along_the_normal_from_column_towards_row() -> None:
     # convention of INTERFACE.md: (cos, sin) = (+column, +row)
     frame = Frame(row=10.0, column=20.0, angle_rad=math.radians(30), curvature=0.0)
     row, column = frame_to_picture(frame, np.array([2.0]), np.array([0.0]))
-    assert (row[0], column[0]) == pytest.approx((10 + 2 * math.sin(math.radians(30)), 20 + 2 * math.cos(math.radians(30))))
+    assert (row[0], column[0]) == pytest.approx(
+        (10 + 2 * math.sin(math.radians(30)), 20 + 2 * math.cos(math.radians(30)))
+    )
 
 
 def test_the_centre_of_concentric_layers_is_found_inside_the_picture() -> None:
@@ -49,7 +54,11 @@ def test_straight_layers_get_a_straight_frame() -> None:
     rows, columns = np.meshgrid(np.arange(16.0, 500, 32), np.arange(16.0, 500, 32), indexing="ij")
     noise = 0.03 * np.random.default_rng(2).standard_normal(rows.size)
     frame = fit_frame(
-        angle_rad=math.radians(70) + noise, weight=np.ones(rows.size), row=rows.ravel(), column=columns.ravel(), size=512.0
+        angle_rad=math.radians(70) + noise,
+        weight=np.ones(rows.size),
+        row=rows.ravel(),
+        column=columns.ravel(),
+        size=512.0,
     )
     assert frame.curvature == 0.0
     assert math.degrees(frame.angle_rad) == pytest.approx(70, abs=0.5)
