@@ -108,8 +108,8 @@ def draw_sample(sample: Sample) -> tuple[np.ndarray, Truth]:
 
 
 def true_layers(truth: Truth) -> list[tuple[str, float]]:
-    """Phase and thickness [nm] of the layers whose both boundaries the frame shows over most of their length."""
-    kept = truth.required(0.8)
+    """Phase and thickness [nm] of the layers whose both boundaries the frame shows over a third of their length."""
+    kept = truth.required(0.3)
     return [
         (phase, float(thickness * truth.pixel_size_nm))
         for i, (phase, thickness) in enumerate(zip(truth.layer_phase, truth.thickness_px, strict=True))
