@@ -14,6 +14,7 @@ import json
 import os
 import time
 from collections.abc import Callable
+from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
 
 for variable in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS"):
@@ -48,7 +49,7 @@ def clock_time(function: Callable[[], object]) -> float:
     return time.perf_counter() - start
 
 
-@njit(fastmath={"contract"}, error_model="numpy")
+@njit(fastmath={"contract"}, error_model="numpy", nogil=True)
 def multiply_add(x, a, b, rounds):
     for _ in range(rounds):
         for i in range(x.size):
@@ -79,6 +80,22 @@ def peak_flops() -> float:
     multiply_add(x, 0.9, 0.1, 1)
     rounds = 20_000
     return 144 * 16 * 2 * rounds / processor_time(lambda: multiply_add(x, 0.9, 0.1, rounds), 20)
+
+
+def two_threads_over_one(run: Callable[[int], object]) -> float | None:
+    """Gain of a second thread by the clock, or None where bare arithmetic on two threads shows no second core."""
+    arrays = [np.linspace(0.1, 1.0, 144), np.linspace(0.1, 1.0, 144)]
+
+    def burn(x: np.ndarray) -> object:
+        return multiply_add(x, 0.9, 0.1, 40_000)
+
+    with ThreadPoolExecutor(2) as pool:
+        one = min(clock_time(lambda: [burn(x) for x in arrays]) for _ in range(10))
+        two = min(clock_time(lambda: list(pool.map(burn, arrays))) for _ in range(20))
+    if one / two < 1.8:
+        return None
+    pairs = [(clock_time(lambda: run(1)), clock_time(lambda: run(2))) for _ in range(30)]
+    return min(first for first, _ in pairs) / min(second for _, second in pairs)
 
 
 def draws_over_kernel() -> float:
@@ -140,7 +157,7 @@ def main() -> None:
         "b": (lambda: ours(STACKS, normal), 1, lambda: theirs(20, normal), 20 / STACKS, spectrum * STACKS),
         "c": (lambda: ours(1, ANGLES), 1, lambda: theirs(1, ANGLES), 1, spectrum * ANGLES.size),
     }
-    results: dict[str, dict[str, float]] = {}
+    results: dict[str, dict[str, float | None]] = {}
     for name, (own, own_count, other, other_part, classic_time) in jobs.items():
         own_time, other_time = np.inf, np.inf
         for _ in range(7):
@@ -161,13 +178,13 @@ def main() -> None:
     results["draws"] = {"times_bare_kernel": round(draws_over_kernel(), 2)}
     print(f"500 draws of 100 layers with peaks, limits and colour: {results['draws']['times_bare_kernel']} times the "
           "transfer calculation alone")  # fmt: skip
-    pairs = [
-        (clock_time(lambda: ours(STACKS, normal, 1)), clock_time(lambda: ours(STACKS, normal, 2))) for _ in range(15)
-    ]
-    gain = min(one for one, _ in pairs) / min(two for _, two in pairs)
-    results["b"]["two_threads_over_one"] = round(gain, 2)
+    gain = two_threads_over_one(lambda threads: ours(STACKS, normal, threads))
+    results["b"]["two_threads_over_one"] = None if gain is None else round(gain, 2)
     results["b"]["target_two_threads_over_one"] = 1.7
-    print(f"job b: two threads {gain:.2f} times one, by the clock (target 1.7; needs two idle cores)")
+    if gain is None:
+        print("job b: two threads not measured, other work holds one of the two cores")
+    else:
+        print(f"job b: two threads {gain:.2f} times one, by the clock (target 1.7)")
     path = Path(__file__).parent / "results" / "optics.json"
     path.parent.mkdir(exist_ok=True)
     path.write_text(json.dumps(results, indent=2) + "\n", encoding="utf-8")

@@ -497,7 +497,7 @@ def _jobs(
         )  # fmt: skip
 
     stacks = work.order.shape[0]
-    shares = 1 if workers == 1 else min(stacks, 4 * workers)
+    shares = 1 if workers == 1 else min(stacks, 2 * workers)
     edges = np.linspace(0, stacks, shares + 1).astype(int)
     angles, tiles = tables.media.shape[:2]
     return [

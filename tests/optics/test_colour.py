@@ -46,7 +46,7 @@ def test_white_of_d65():
 @pytest.mark.parametrize(
     ("illuminant", "observer", "expected"),
     [
-        # ASTM E308 table 5 white points, as tabulated to two decimals
+        # ASTM E308 table 5 (from memory, to the third decimal)
         ("D65", 2, (95.047, 100, 108.883)),
         ("D65", 10, (94.811, 100, 107.304)),
         ("D50", 2, (96.422, 100, 82.521)),
@@ -54,7 +54,7 @@ def test_white_of_d65():
     ],
 )
 def test_white_points_of_the_standard(illuminant, observer, expected):
-    # ASTM E308 table 5
+    # ASTM E308 table 5, see above
     assert white_point(illuminant=illuminant, observer_deg=observer) == pytest.approx(expected, abs=0.01)
 
 
