@@ -303,6 +303,7 @@ class ComparisonDocument(_Document):
     prediction: SourceModel
     observed: SourceModel
     scale: float | None = None
+    predicted_colour: ColourModel | None = None
     observed_colour: ColourModel | None = None
     observed_peaks: list[PeakModel] = []
     notes: list[str] = Field([], description="doubts about the observed spectrum")

@@ -413,6 +413,7 @@ def comparison_document(comparison: records.Comparison) -> dict[str, Any]:
         "prediction": {"path": c.prediction_source, "sha256": c.prediction_sha256},
         "observed": {"path": c.observed_source or None, "sha256": c.observed_sha256},
         "scale": c.scale,
+        "predicted_colour": c.predicted_colour and asdict(c.predicted_colour),
         "observed_colour": c.observed_colour and asdict(c.observed_colour),
         "observed_peaks": [asdict(peak) for peak in c.observed_peaks],
         "notes": c.notes,
