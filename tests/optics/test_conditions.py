@@ -23,7 +23,7 @@ def stack(*index, thickness=()):
 
 
 def walsh(n):
-    """Diffuse Fresnel reflectance of a smooth surface of index n (Walsh 1926, as printed by Duntley 1942; formula from memory)."""
+    """Diffuse Fresnel reflectance of a smooth surface of index n (Walsh 1926; Duntley 1942; formula from memory)."""
     a = 0.5 + (n - 1) * (3 * n + 1) / (6 * (n + 1) ** 2)
     b = n**2 * (n**2 - 1) ** 2 / (n**2 + 1) ** 3 * np.log((n - 1) / (n + 1))
     c = -2 * n**3 * (n**2 + 2 * n - 1) / ((n**2 + 1) * (n**4 - 1))
