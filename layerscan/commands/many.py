@@ -9,6 +9,7 @@ import click
 
 from layerscan.commands.options import clear_progress, print_document, progress
 from layerscan.document_files import plain
+from layerscan.report.cautions import RELEASE_CAUTION
 
 if TYPE_CHECKING:
     from collections.abc import Iterator
@@ -27,7 +28,7 @@ JSON_OPTION = click.option("--json", "as_json", is_flag=True, help="print the JS
 @JSON_OPTION
 def study(plan: str, check: bool, cluster: str | None, workers: int | None, out: str | None, as_json: bool) -> int:
     """Run a whole sample set: resumable, parallel, then statistics and a report."""
-    from layerscan.study.session import check_study, run_study
+    from layerscan.study.session import StudyOutcome, check_study, run_study
 
     show = progress()
     if check:
@@ -37,18 +38,22 @@ def study(plan: str, check: bool, cluster: str | None, workers: int | None, out:
         return answer.exit_code
     outcome = run_study(plan, out=out, cluster=cluster, workers=workers, progress=show)
     clear_progress()
+    assert isinstance(outcome, StudyOutcome)
     return _show(outcome, as_json)
 
 
 @click.command()
 @click.argument("folder", type=click.Path())
+@click.option(
+    "--figures", type=click.Choice(["svg", "pdf", "tif"]), multiple=True, help="figures as files too (TIFF at 600 dpi)"
+)
 @JSON_OPTION
-def report(folder: str, as_json: bool) -> int:
+def report(folder: str, figures: tuple[str, ...], as_json: bool) -> int:
     """Write the report again from a finished or unfinished study."""
     from layerscan.study.session import report_study
 
     progress()
-    return _show(report_study(folder), as_json)
+    return _show(report_study(folder, figures=figures), as_json)
 
 
 def _show(outcome: StudyOutcome, as_json: bool) -> int:
@@ -81,5 +86,5 @@ def _outcome_lines(outcome: StudyOutcome) -> Iterator[str]:
     for group, limit, decision in outcome.decisions:
         yield f"  {decision:<9} {group}: {limit}"
     if outcome.decisions:
-        yield "  Not an accredited measurement; local codes and licensed practice decide."
+        yield f"  {RELEASE_CAUTION}"
     yield f"  report   {outcome.report}"
