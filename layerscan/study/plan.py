@@ -26,12 +26,14 @@ from layerscan.study.tables import (
     PlanTables,
     SpectrumEntry,
     explain_plan_errors,
+    find_entry_lines,
+    find_line,
     nearest_name,
     say_place,
 )
 
 MAX_PLAN_BYTES = 16 * 2**20
-"""A longer STUDY.toml is refused: the TOML reader takes minutes for it. Rows belong into a CSV table."""
+"""A longer STUDY.toml is refused: so many rows belong into a CSV table."""
 
 MAX_ROWS = 2_000_000
 """More images than this are refused: split the study."""
@@ -425,8 +427,11 @@ class _Resolver:
         if isinstance(source, str):
             yield from self._csv_rows(source, {}, say_place((what,), file_name=self.path.name, text=self.text), kind)
             return
+        lines = find_entry_lines(self.text, what)
+        shared = find_line(self.text, (what,))
         for number, entry in enumerate(source):
-            place = say_place((what, number), file_name=self.path.name, text=self.text)
+            line = lines[number] if number < len(lines) else shared
+            place = f"{self.path.name}{f', line {line}' if line else ''}, {what}[{number + 1}]"
             values = {k: v for k, v in entry.model_dump().items() if v not in (None, {}) and k != "table"}
             if entry.table is not None:
                 yield from self._csv_rows(entry.table, values, place, kind)

@@ -263,12 +263,11 @@ def _describe(plan: StudyPlan, folder: Path, tasks: TaskList) -> StudyCheck:
         specimens, count = groups.setdefault(image.group, (set(), []))
         specimens.add(image.specimen)
         count.append(1)
-    known = {p.place for p in plan.problems if p.severity == "missing"}
     rows = {row.key: row.row["path"] for row in tasks.rows}
     duplicates = [
         Problem(place=str(rows[f.unit]), text=f.reason or "", severity="missing")
         for f in tasks.failures
-        if f.failure == "duplicate" and rows[f.unit] not in known
+        if f.failure == "duplicate"
     ]
     return StudyCheck(
         plan=str(plan.path),

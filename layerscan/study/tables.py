@@ -381,6 +381,12 @@ def find_line(text: str, path: tuple[Any, ...]) -> int | None:
     return best
 
 
+def find_entry_lines(text: str, name: str) -> list[int]:
+    """Lines (from 1) of the headers ``[[name]]``, in order; empty where the entries are written inline."""
+    header = re.compile(rf"^\s*\[\[\s*[\"']?{re.escape(name)}[\"']?\s*\]\]")
+    return [number for number, line in enumerate(text.splitlines(), start=1) if header.match(line)]
+
+
 def _split_path(path: tuple[Any, ...]) -> tuple[list[str], int | None]:
     names = [part for part in path if isinstance(part, str)]
     numbers = [part for part in path if isinstance(part, int)]

@@ -150,6 +150,7 @@ def test_balanced_groups_are_compared_as_by_the_pooled_t_test():
 
 
 @pytest.mark.slow
+@pytest.mark.timeout(1800)
 def test_the_mixed_model_with_t_finds_few_differences_between_equal_groups():
     # null simulation as in the facts of the issue (SD 5, 3, 15; five specimens a group): 3 to 6 % with t
     rng = np.random.default_rng(13)
@@ -189,6 +190,7 @@ def test_intervals_hold_the_truth():
 
 
 @pytest.mark.slow
+@pytest.mark.timeout(1800)
 def test_intervals_hold_the_truth_as_often_as_stated():
     # profile intervals are approximate for few specimens: 0.95 within 0.04 over 400 studies
     between, layer = coverage(400, seed=2)
