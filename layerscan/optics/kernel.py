@@ -59,13 +59,12 @@ def compile_cached(*signature: Any) -> Any:
     The cache lies beside this file, or in the user's cache folder where that cannot be written; ``NUMBA_CACHE_DIR``
     moves it.
     """
-
     options: dict[str, Any] = {"nogil": True, **OPTIONS}
 
     def decorate(function: Any) -> Any:
         try:
             return njit(*signature, **{"cache": True, **options})(function)
-        except RuntimeError:  # neither folder can be written
+        except (RuntimeError, OSError):  # neither folder can be written, or the disk is full
             return njit(*signature, **options)(function)
 
     return decorate

@@ -286,8 +286,8 @@ def _draw(
         )
     scale = 1 + stack.u_scale * rng.standard_normal(settings.draws)
     shift = rng.standard_normal((settings.draws, len(stack.media))) * np.array([m.u_index or 0.0 for m in stack.media])
-    if stack.absorber:
-        shift[:, 1] = shift[:, stack.sequence[-2]]
+    if stack.absorber_of is not None:
+        shift[:, 1] = shift[:, stack.absorber_of]
     chunk = max(min(settings.draws, CHUNK_LAYERS // total), 1)
     reflected, transmitted, factors = [], [], []
     mean = float(stack.thickness_nm.sum())

@@ -26,7 +26,7 @@ class Stack:
     """The layers of a table from the lit side with the medium of each, and what the draws need."""
 
     media: tuple[Medium, ...]  # incident, substrate, then the layers' own
-    absorber: bool  # the substrate is matched to the last layer
+    absorber_of: int | None  # number of the medium that the substrate is matched to
     sequence: IntArray  # (layers + 2,)
     thickness_nm: FloatArray
     u_nm: FloatArray  # without the common scale
@@ -63,8 +63,58 @@ def build_stack(table: LayerTable, settings: PredictSettings) -> Stack:
     incident = find_medium(settings.incident or "air", folder=settings.materials_folder)
     if settings.incident is None:
         flags.append("incident_assumed")
-    last = _last_number(numbers, settings.layers)
-    substrate = _substrate(settings, incident, media[last], flags, notes)
+    near_cut, far_cut = _cut_ends(table, settings)
+    ahead = near_cut and not far_cut
+    last = _last_number(numbers, settings.layers, ahead=ahead)
+    substrate, matched = _substrate(settings, incident, media[last], flags, notes)
+    _remark_media(incident, substrate, media, settings, flags, notes)
+    thickness = np.array([layer.thickness_nm for layer in layers])
+    known = np.array([layer.u_nm if layer.u_nm is not None else 0.0 for layer in layers])
+    u = ensemble.own_uncertainty(table, thickness, known)
+    if table.u_scale_relative is None:
+        flags.append("calibration_uncertainty_unknown")
+    if any(layer.u_nm is None for layer in layers):
+        notes.append("Some layers state no uncertainty of their thickness; the draws leave it out.")
+    stations = table.station_thickness_nm
+    model, seen = None, len(layers)
+    if settings.layers is not None and settings.layers < seen:
+        notes.append(f"{seen} complete layers were seen; the {settings.layers} nearest the light were used.")
+        keep = settings.layers
+        thickness, u, numbers, columns = thickness[:keep], u[:keep], numbers[:keep], columns[:keep]
+    elif settings.layers is not None and settings.layers > seen:
+        model = ensemble.describe_thickness(thickness, np.array(numbers), u, from_boundaries=stations is not None)
+        flags.append("layers_extended")
+        notes.append(
+            f"{settings.layers - seen} further layers were drawn as the {seen} complete ones are: correlation of "
+            f"neighbours {model.correlation:.2f}, drift {100 * model.drift_per_layer:.2g} % per layer. The nominal "
+            "structure holds one such draw; each draw of the limits has its own."
+        )
+    return Stack(
+        media=(incident, substrate, *media),
+        absorber_of=2 + last if matched else None,
+        sequence=np.array([0, *(2 + n for n in numbers), 1], dtype=np.int64),
+        thickness_nm=thickness,
+        u_nm=u,
+        u_scale=table.u_scale_relative or 0.0,
+        seen=seen,
+        stations_nm=None if stations is None else stations[:, columns],
+        station_step_nm=table.station_step_nm,
+        model=model,
+        extension_first=ahead,
+        flags=tuple(flags),
+        notes=tuple(notes),
+    )
+
+
+def _remark_media(
+    incident: Medium,
+    substrate: Medium,
+    media: tuple[Medium, ...],
+    settings: PredictSettings,
+    flags: list[str],
+    notes: list[str],
+) -> None:
+    """Say where an index is used beyond its source, or without a stated uncertainty."""
     wavelength = calculation_grid(settings)
     if 0 < index_of(incident, wavelength).imag.max() <= WEAK_EXTINCTION:
         notes.append(f"The weak absorption of the incident {incident.name} was left out.")
@@ -82,50 +132,11 @@ def build_stack(table: LayerTable, settings: PredictSettings) -> Stack:
         notes.append(f"No uncertainty of the index is stated for {' and '.join(unknown)}; the draws leave it out.")
     if settings.polarisation in ("left", "right"):
         notes.append("Circular light: isotropic layers reflect left and right alike, the mean of s and p.")
-    thickness = np.array([layer.thickness_nm for layer in layers])
-    known = np.array([layer.u_nm if layer.u_nm is not None else 0.0 for layer in layers])
-    u = ensemble.own_uncertainty(table, thickness, known)
-    if table.u_scale_relative is None:
-        flags.append("calibration_uncertainty_unknown")
-    if any(layer.u_nm is None for layer in layers):
-        notes.append("Some layers state no uncertainty of their thickness; the draws leave it out.")
-    model, seen = None, len(layers)
-    if settings.layers is not None and settings.layers < seen:
-        notes.append(f"{seen} complete layers were seen; the {settings.layers} nearest the light were used.")
-        keep = settings.layers
-        thickness, u, numbers, columns = thickness[:keep], u[:keep], numbers[:keep], columns[:keep]
-    elif settings.layers is not None and settings.layers > seen:
-        model = ensemble.describe_thickness(
-            thickness, np.array(numbers), u, from_boundaries=table.station_thickness_nm is not None
-        )
-        flags.append("layers_extended")
-        notes.append(
-            f"{settings.layers - seen} further layers were drawn as the {seen} complete ones are: correlation of "
-            f"neighbours {model.correlation:.2f}, drift {100 * model.drift_per_layer:.2g} % per layer. The nominal "
-            "structure holds one such draw; each draw of the limits has its own."
-        )
-    near_cut, far_cut = _cut_ends(table, settings)
-    stations = table.station_thickness_nm
-    return Stack(
-        media=(incident, substrate, *media),
-        absorber=substrate.name.startswith(f"{ABSORBER} "),
-        sequence=np.array([0, *(2 + n for n in numbers), 1], dtype=np.int64),
-        thickness_nm=thickness,
-        u_nm=u,
-        u_scale=table.u_scale_relative or 0.0,
-        seen=seen,
-        stations_nm=None if stations is None else stations[:, columns],
-        station_step_nm=table.station_step_nm,
-        model=model,
-        extension_first=near_cut and not far_cut,
-        flags=tuple(flags),
-        notes=tuple(notes),
-    )
 
 
-def _last_number(numbers: list[int], layers: int | None) -> int:
-    """Number of the medium of the last layer, of those seen or of those asked for."""
-    if layers is None or layers == len(numbers):
+def _last_number(numbers: list[int], layers: int | None, *, ahead: bool) -> int:
+    """Number of the medium of the last layer, of those seen or of those asked for; further ones may lie ahead."""
+    if layers is None or layers == len(numbers) or (ahead and layers > len(numbers)):
         return numbers[-1]
     if layers < len(numbers):
         return numbers[layers - 1]
@@ -182,18 +193,21 @@ def _media_of_layers(layers: Sequence[Layer], settings: PredictSettings) -> tupl
     return tuple(media), numbers
 
 
-def _substrate(settings: PredictSettings, incident: Medium, last: Medium, flags: list[str], notes: list[str]) -> Medium:
+def _substrate(
+    settings: PredictSettings, incident: Medium, last: Medium, flags: list[str], notes: list[str]
+) -> tuple[Medium, bool]:
+    """The medium behind the stack, and whether it is an absorber matched to the last layer."""
     if settings.substrate is None:
         flags.append("substrate_assumed")
         notes.append(f"No substrate was stated: {incident.name} was taken behind the stack too, as for a free film.")
-        return incident
+        return incident, False
     if settings.substrate.strip().casefold() != ABSORBER:
-        return find_medium(settings.substrate, folder=settings.materials_folder)
+        return find_medium(settings.substrate, folder=settings.materials_folder), False
     notes.append(
         f"Absorber: a medium with the real part of the index of the last layer's {last.name}, from which nothing comes "
         "back. What is transmitted is what it swallows."
     )
-    return Medium(
+    absorber = Medium(
         name=f"{ABSORBER} matched to {last.name}",
         index=(lambda wavelength_nm: index_of(last, wavelength_nm).real.astype(complex),),
         range_nm=last.range_nm,
@@ -204,6 +218,7 @@ def _substrate(settings: PredictSettings, incident: Medium, last: Medium, flags:
         note="index-matched: nothing comes back",
         kind=last.kind,
     )
+    return absorber, True
 
 
 def _cut_ends(table: LayerTable, settings: PredictSettings) -> tuple[bool, bool]:

@@ -232,6 +232,22 @@ def test_absorber_sends_nothing_back():
     assert light.structure.sequence[-1] == "absorber matched to n=1.34+0.01i"
 
 
+@pytest.mark.parametrize(("cut", "matched"), [("start", "n=1.34"), ("end", "n=1.56")])
+def test_absorber_matches_the_last_of_all_layers(cut, matched):
+    # further layers beyond the far end change which medium is the last; ahead of the stack they do not
+    layers = replace(table(5, 95, 110), start_cut_by_frame=cut == "start", end_cut_by_frame=cut == "end")
+    light = predict(layers, dark="n=1.56", bright="n=1.34", substrate="absorber", layers=15)
+    assert light.structure.sequence[-1] == f"absorber matched to {matched}"
+    assert light.structure.sequence[-2] == matched
+
+
+def test_absorber_follows_the_drawn_index():
+    # it stays matched in every draw: a half-space of the same uncertain index reflects nothing at the back
+    layers = LayerTable(layers=(Layer(index=0, phase="dark", thickness_nm=500.0, u_nm=50.0),), source="x")
+    light = predict(layers, dark="n=1.5 +- 0.05", substrate="absorber", incident="n=1", draws=50)
+    np.testing.assert_allclose(np.ptp(light.reflectance.upper), 0.0, atol=1e-12)  # no fringes
+
+
 def test_bandwidth_smooths_and_keeps_the_ends():
     # a wider slit lowers the band, and the first value is that of a calculation reaching further out
     layers = table(30, 130, 40)
