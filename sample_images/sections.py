@@ -788,7 +788,7 @@ def draw_recipe(kind: str, seed: int, shape: tuple[int, int] = (512, 512)) -> Re
     if kind not in KINDS:
         raise ValueError(f"Kind '{kind}' is not known. Choose one of {', '.join(KINDS)}.")
     rng = np.random.default_rng([seed, KINDS.index(kind), 77])
-    size = min(shape)
+    size = min(max(min(shape), 256), 1024)  # periods suit a frame of this size
     draw = _DRAWS[kind](rng, size)
     draw.setdefault("orientation_deg", float(rng.uniform(0, 180)))
     draw.setdefault("phase_offset", float(rng.random()))

@@ -46,7 +46,7 @@ class Evidence:
     alone : float
         Median contrast of the tiles: the line over what the same frequency holds in other directions.
     second : float
-        Median over the tiles of the strongest line in another direction over the strongest line (smaller is clearer).
+        Strongest line in another direction over the strongest line; seven tiles in ten have less (smaller is clearer).
     rivals : float
         Share of the tiles, on the level where it is largest, that hold a strong line in a clearly different direction.
     harmonics : float
@@ -435,7 +435,7 @@ def _judge(
         near_share=near / variance if variance > 0 else 0.0,
         swings=swings,
         alone=float(np.median(tiles.contrast[member])),
-        second=float(np.median(tiles.second[member])),
+        second=float(np.quantile(tiles.second[member], 0.7)),
         rivals=_rivals(candidate, straight.field_map, levels, all_tiles),
         harmonics=harmonics,
         spacing_cv=spread,
@@ -563,7 +563,7 @@ def _statistic(evidence: Evidence) -> float:
         evidence.swings / 3.9,
         evidence.alone / 20,
         evidence.length,
-        0.35 / max(evidence.second, 1e-6),
+        0.23 / max(evidence.second, 1e-6),
         0.3 / max(evidence.rivals, 1e-6),
         _regularity(evidence),
     )
@@ -585,8 +585,8 @@ def _alignment(evidence: Evidence) -> float:
 def _regularity(evidence: Evidence) -> float:
     """Even spacing and heights, weighed with how far the line stands out; few alternations must be more even."""
     uneven = math.hypot(evidence.spacing_cv / 0.3, evidence.height_cv / 0.42, evidence.chirp)
-    most = 0.9 if evidence.swings < 8 else 1.6
-    return min(math.sqrt(evidence.peak / 20), most) / max(uneven, 1e-6)
+    most = 0.84 if evidence.swings < 8 else 1.6
+    return min(math.sqrt(evidence.peak / 23), most) / max(uneven, 1e-6)
 
 
 def _not_layered(best: _Judged, judged: list[_Judged]) -> LayerDetection:
@@ -746,15 +746,15 @@ def _is_hum(angle_deg: float, harmonics: float, period_px: float, levels: tuple[
     Mains pick-up adds one sinusoid in time, which the raster lays out as rows or slightly slanted lines over a picture of
     something else. Where the sinusoid is most of the picture it is taken for what the specimen shows.
     """
-    from scipy.ndimage import uniform_filter
+    from scipy.ndimage import gaussian_filter, uniform_filter
 
-    if harmonics > 0.1 * _PURE or abs(angle_deg - 90) > 4:
+    if harmonics > 0.2 * _PURE or abs(angle_deg - 90) > 4:
         return False
     level = next((each for each in levels if each.intensity.size <= 2**21), levels[-1])
     period = period_px / level.factor
-    image = level.intensity - uniform_filter(level.intensity, max(round(2 * period), 3) | 1, mode="nearest")
+    image = level.intensity - uniform_filter(level.intensity, max(round(period), 3) | 1, mode="nearest")
     fit = _refine_outwards(image, np.ones(image.shape, dtype=bool), angle_deg=angle_deg, period=period)
-    if not fit.converged or fit.wave_px > 0.02 * period + 2 * fit.u_wave_px:
+    if not fit.converged or fit.wave_px > 0.04 * period + 2 * fit.u_wave_px:
         return False
     seen = fit.count > 0.3 * fit.count.max()
     depth = np.arange(len(fit.profile))[seen] * fit.step_px
@@ -762,7 +762,8 @@ def _is_hum(angle_deg: float, harmonics: float, period_px: float, levels: tuple[
     trial = np.linspace(0.9, 1.1, 41) / period
     profile = (fit.profile[seen] - fit.profile[seen].mean()) * window
     amplitude = 2 * np.abs(np.exp(-2j * np.pi * trial[:, None] * depth) @ profile).max() / window.sum()
-    return float(amplitude**2 / 2) < 0.5 * float(level.intensity.var())
+    texture = float(gaussian_filter(level.intensity, 0.5 * period).var())  # of something else, coarser than the lines
+    return float(amplitude**2 / 2) < max(0.4 * float(level.intensity.var()), texture)
 
 
 def _valid_map(candidate: _Candidate, straight: _Straight, shape: tuple[int, int]) -> tuple[int, BoolArray]:
