@@ -57,6 +57,7 @@ if TYPE_CHECKING:
 
 CHUNK_LAYERS = 40_000  # layers of the draws calculated between two reports of progress
 DRAWS_TOLERANCE = 5e-3  # of the quadrature over the cone, small against what the draws spread
+ORDER_CERTAIN = 0.15  # how far from its place, in orders, a peak may lie without doubt about its order
 WORK_LIMIT = 1e12  # draws x layers x wavelengths x directions: about a quarter of an hour
 
 
@@ -204,7 +205,7 @@ def _calculate(stack: Stack, settings: PredictSettings, tell: Progress, *, what:
         if uncertain:
             flags.append("order_uncertain")
         colour = _with_radius(colour, wavelength, reflected, settings)
-    if numbers is None and peaks:
+    if _order_doubtful(wavelength, numbers, peaks):
         flags.append("order_uncertain")
     return _Light(
         reflectance=_spectrum(wavelength, r[0], "reflectance", lower, upper, settings),
@@ -309,6 +310,15 @@ def _draw(
         transmitted.append(t)
         factors.append(factor * scale[some])
     return np.concatenate(reflected), np.concatenate(transmitted), np.concatenate(factors)
+
+
+def _order_doubtful(wavelength: FloatArray, numbers: FloatArray | None, peaks: tuple[Peak, ...]) -> bool:
+    """Whether a peak has no order, or lies well away from where its order belongs."""
+    if numbers is None:
+        return bool(peaks)
+    found = np.interp([peak.wavelength_nm for peak in peaks], wavelength, numbers)
+    orders = np.array([peak.order for peak in peaks], dtype=float)
+    return bool((abs(found - orders) > ORDER_CERTAIN).any())
 
 
 def _peaks_of_draws(

@@ -272,6 +272,18 @@ def test_repeated_layers_make_the_order_whatever_the_end(seen):
     assert [peak.order for peak in light.peaks] == [1]
 
 
+def test_order_is_doubted_where_the_period_is_not_one():
+    # a regular stack has its first order at its Bragg wavelength; a strongly chirped one has its band elsewhere
+    regular = predict(table(30, 130, 40), dark="n=1.56", bright="n=1.34", incident="n=1.33")
+    assert "order_uncertain" not in regular.flags
+    chirp = np.linspace(0.8, 1.5, 40)
+    chirped = predict(
+        table(40, 75 * chirp, 88 * chirp), dark="n=1.56+0.06i", bright="n=1.34", incident="n=1.33",
+        wavelengths="350:900:1",
+    )  # fmt: skip
+    assert "order_uncertain" in chirped.flags
+
+
 # --- draws ----------------------------------------------------------------------------------------------------------
 
 DRAWN = {"dark": "n=1.56", "bright": "n=1.34", "incident": "n=1.33", "draws": 400}
