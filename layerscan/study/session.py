@@ -146,7 +146,7 @@ def run_study(
     with Ledger(folder, write=True) as ledger:
         tasks = list_tasks(plan, ledger, folder, progress=progress)
         _refuse_nothing(plan, tasks)
-        ledger.write_plan(_facts(plan, cluster), tasks.rows)
+        ledger.write_plan(_facts(plan, folder, cluster), tasks.rows)
         ledger.record(tasks.failures)
         run_units(
             tasks.units,
@@ -231,7 +231,7 @@ def _refuse_nothing(plan: StudyPlan, tasks: TaskList) -> None:
         raise InputError(f"No image of the study can be read. The first: {reasons[0]}")
 
 
-def _facts(plan: StudyPlan, cluster: Any) -> dict[str, Any]:
+def _facts(plan: StudyPlan, folder: Path, cluster: Any) -> dict[str, Any]:
     """What the ledger keeps of the plan besides its rows: enough for the report without the plan's files."""
     settings = {
         "measure": plan.measure.model_dump(mode="json"),
@@ -249,6 +249,7 @@ def _facts(plan: StudyPlan, cluster: Any) -> dict[str, Any]:
         "version": __version__,
         "started": _now(),
         "finished": None,
+        "in_plan_folder": folder == plan.folder,
         "cluster": cluster if isinstance(cluster, str) else None,
     }
 

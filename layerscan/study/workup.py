@@ -444,9 +444,10 @@ def _run_facts(study: _Study) -> RunFacts:
     for task in tasks:
         versions |= task.versions
     seconds = [task.seconds for task in tasks if task.seconds is not None]
-    command = f"layerscan study {facts['plan_name']}"
+    elsewhere = "" if facts.get("in_plan_folder", True) else " --out FOLDER"
+    command = f"layerscan study {facts['plan_name']}{elsewhere}"
     return RunFacts(
-        command=facts.get("command") or command,
+        command=command,
         plan_path=facts["plan_name"],
         plan_sha256=facts["plan_sha256"],
         ledger="study.sqlite",
