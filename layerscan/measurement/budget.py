@@ -15,15 +15,13 @@ if TYPE_CHECKING:
 
 CALIBRATION = "pixel size"
 FIT = "boundary fit"
-EDGE_MODEL = "edge model"
-UNTRACED = "stations where an end is not traced"
+DIRECTION = "direction of the local normal"
 
 ADVICE = {
     CALIBRATION: "Calibrate the magnification with a certified grating or lattice: half the uncertainty of the "
     "pixel size halves that of the period.",
     FIT: "Record four times the dose, or four times the length along the layers.",
-    EDGE_MODEL: "Record at twice the magnification, so that edges are sampled better.",
-    UNTRACED: "Record a field in which both ends of the stack are seen along their whole length.",
+    DIRECTION: "Measure a straighter part of the stack: choose a region in which the layers bend less.",
     "obliquity": "Cut or image a second section at a known angle to the first; that halves the doubt.",
     "stage tilt": "Measure the stage tilt on a flat reference surface.",
     "compression": "Measure the compression on round profiles in the same section, or cut with an oscillating knife.",

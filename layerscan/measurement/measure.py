@@ -23,6 +23,7 @@ if TYPE_CHECKING:
 
 PHASE_NAMES: tuple[Phase, ...] = ("dark", "bright", "other")
 SATURATED_SHARE = 0.01
+DIRECTION_DOUBT = 0.35  # of what bending takes off lengths; common practice, no source: fits made sections
 
 
 def measure_micrograph(
@@ -315,7 +316,8 @@ def describe_field(
     spacing, u_spacing = _spacing(followed, seen)
     return FoundLayers(
         depth=mean,
-        covariance=stack.fit.covariance * float(np.mean(cosine)) ** 2,
+        covariance=_covariance(followed) * float(np.mean(cosine)) ** 2,
+        u_direction=DIRECTION_DOUBT * (1 - float(np.mean(cosine))),
         phase=phases,
         ends=(float(stack.position[0]), float(count - 1 - stack.position[-1])),
         blur=float(math.hypot(stack.fit.shared[0], stack.fit.shared[1] / math.sqrt(12))),
@@ -344,6 +346,14 @@ def _inside(image: NDArray[np.float32], row: FloatArray, column: FloatArray) -> 
     rows, columns = image.shape
     with np.errstate(invalid="ignore"):
         out: BoolArray = (row >= -0.5) & (row <= rows - 0.5) & (column >= -0.5) & (column <= columns - 0.5)
+    return out
+
+
+def _covariance(followed: FollowedStack) -> FloatArray:
+    """Covariance of the mean depths: that of the joint fit, and by how much the matched columns disagree with it."""
+    raw, valid = followed.traces.raw, followed.traces.valid
+    off = np.where(valid, raw, 0.0).sum(axis=1) / np.maximum(valid.sum(axis=1), 1)
+    out: FloatArray = followed.stack.fit.covariance + np.diag(off**2)
     return out
 
 

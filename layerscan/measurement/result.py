@@ -73,7 +73,7 @@ class FoundLayers:
     replication: float | None = None
     terminations: IntArray = field(default_factory=lambda: np.zeros(0, np.int64))
     missing: int = 0
-    edge_model_u: float = 0.0  # [px] what other edge models would move a period's ends by
+    u_direction: float = 0.0  # relative standard uncertainty of lengths along the local normal of bent layers
     edited: BoolArray | None = None
     flags: tuple[str, ...] = ()
 
@@ -206,6 +206,7 @@ def build_measurement(
     u_pixel = micrograph.pixel_size.u_relative
     known = [u for u in (u_pixel, geometry.u_relative if geometry.parts else None) if u is not None]
     u_scale = math.sqrt(sum(u * u for u in known)) if known else None
+    u_mean = math.hypot(u_scale or 0.0, found.u_direction)
     boundaries = _boundaries(found, scale, u_scale)
     layers = _layers(found, scale, u_scale)
     thickness = np.diff(found.depth) * scale
@@ -217,10 +218,10 @@ def build_measurement(
     rows.extend(period_rows)
     for name in ("dark", "middle", "bright"):
         index = np.flatnonzero(np.array(inner, dtype=object) == name) if inner else np.zeros(0, int)
-        average = average_thickness(thickness[index], spread[np.ix_(index, index)], u_scale=u_scale)
+        average = average_thickness(thickness[index], spread[np.ix_(index, index)], u_scale=u_mean)
         averages[name] = average
         if average is not None:
-            rows.extend(_phase_budget(f"{name}_nm", average, spread[np.ix_(index, index)], u_pixel, geometry))
+            rows.extend(_phase_budget(f"{name}_nm", average, found, spread[np.ix_(index, index)], u_pixel, geometry))
     limited_by, advice = budgets.largest_component(period_rows)
     statistics: StackStatistics | None = None
     if len(inner) >= 2:
@@ -409,22 +410,27 @@ def _period(
     sd = corrected_spread(periods, transform @ c @ transform.T * scale**2)
     parts = budgets.common_parts(mean, u_pixel_size=u_pixel, geometry=geometry)
     parts.append(budgets.Part(component=budgets.FIT, kind="A", distribution="normal", u_nm=u_fit))
-    if found.edge_model_u > 0:
-        parts.append(
-            budgets.Part(
-                component=budgets.EDGE_MODEL, kind="B", distribution="normal", u_nm=found.edge_model_u / n * scale
-            )
-        )
+    parts.append(_direction(mean, found))
     rows = budgets.budget_rows("period_nm", mean, parts)
     return Average(mean=mean, u=budgets.combined(parts), sd=sd, n=n), rows
 
 
+def _direction(value_nm: float, found: FoundLayers) -> budgets.Part:
+    return budgets.Part(component=budgets.DIRECTION, kind="B", distribution="normal", u_nm=value_nm * found.u_direction)
+
+
 def _phase_budget(
-    quantity: str, average: Average, covariance: FloatArray, u_pixel: float | None, geometry: GeometryFactor
+    quantity: str,
+    average: Average,
+    found: FoundLayers,
+    covariance: FloatArray,
+    u_pixel: float | None,
+    geometry: GeometryFactor,
 ) -> tuple[BudgetRow, ...]:
     u_fit = math.sqrt(max(float(covariance.sum()), 0.0)) / average.n
     parts = budgets.common_parts(average.mean, u_pixel_size=u_pixel, geometry=geometry)
     parts.append(budgets.Part(component=budgets.FIT, kind="A", distribution="normal", u_nm=u_fit))
+    parts.append(_direction(average.mean, found))
     return budgets.budget_rows(quantity, average.mean, parts)
 
 

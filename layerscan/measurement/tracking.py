@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -30,7 +30,9 @@ if TYPE_CHECKING:
     from layerscan.records import BoolArray, FloatArray
 
 TURNS = 2  # of tracing and refitting
-LEAST_COVERAGE = 0.35  # a depth counts where at least this part of the widest depth's stations shows it
+LEAST_COVERAGE = 0.35  # a boundary counts where at least this part of the longest one's length is in the picture
+NEIGHBOURS = 4  # boundaries to either side whose common bending is the layers' direction
+LEAST_USED = 0.12  # and depths are looked at that show this part, so that the last boundary has both its sides
 
 
 @dataclass(frozen=True, kw_only=True, eq=False)
@@ -228,7 +230,7 @@ def usable_depth(straight: StraightField) -> tuple[int, int]:
     number = np.isfinite(straight.intensity).sum(axis=1)
     depth = straight.depth_start + np.arange(len(number))
     length = number * np.maximum(1 - straight.frame.curvature * depth, 0.0)
-    enough = np.flatnonzero((length >= LEAST_COVERAGE * length.max()) & (number > 0))
+    enough = np.flatnonzero((length >= LEAST_USED * length.max()) & (number > 0))
     return int(enough[0]), int(enough[-1]) + 1
 
 
@@ -300,7 +302,8 @@ def follow_layers(
     even = normalise(field, centre, gain)
     window = max(int(1.5 * period / straight.station_step), 4)
     ended, gone = find_terminations(even, stack, traces, window)
-    return _followed(straight, stack, traces, low, mean, _variance(single, number), period, ended, gone)
+    result = _followed(straight, stack, traces, low, mean, _variance(single, number), period, ended, gone)
+    return _keep_covered(result, straight, number)
 
 
 @njit(cache=True)  # type: ignore[untyped-decorator]
@@ -492,14 +495,68 @@ def _followed(
     base = straight.frame_depth(
         low + stack.position[:, None] + np.zeros_like(deviation), np.broadcast_to(stations, aligned.shape)
     )
-    slope = _slope(base, straight.station_step, max(int(period / straight.station_step), 1))
-    slope = slope / np.maximum(1 - straight.frame.curvature * base, 0.05)
-    cosine = 1 / np.sqrt(1 + slope**2)
+    # what neighbouring boundaries share belongs to the direction of the layers, the rest is roughness
+    reach = max(int(0.6 * period / straight.station_step), 1)
+    stretch = np.maximum(1 - straight.frame.curvature * base, 0.05)
+    own = _slope(deviation, straight.station_step, reach)
+    shared = _neighbour_mean(own, NEIGHBOURS)
+    slope = (_slope(base, straight.station_step, reach) + shared) / stretch
+    square = slope**2 - _rough_slope(own, shared, traces.model.replication) / stretch**2
+    cosine = 1 / np.sqrt(1 + np.maximum(square, -0.5))
     steps = np.diff(base, axis=0) * 0.5 * (cosine[1:] + cosine[:-1])
     normal = np.concatenate([np.zeros_like(base[:1]), np.cumsum(steps, axis=0)]) + (depth - base) * cosine
     return FollowedStack(
         stack=stack, traces=traces, depth=np.where(valid, depth, np.nan), normal=np.where(valid, normal, np.nan),
         cosine=cosine, valid=valid, first=low, profile=mean, variance=variance, terminations=ended,
+    )  # fmt: skip
+
+
+def _rough_slope(own: FloatArray, shared: FloatArray, replication: float) -> float:
+    """Mean square slope that roughness leaves in the mean over neighbouring boundaries."""
+    rows = min(2 * NEIGHBOURS + 1, len(own))
+    index = np.arange(rows)
+    left = float(np.mean(replication ** np.abs(index[:, None] - index[None, :])))
+    if left > 0.9:
+        return 0.0
+    return float(np.mean((own - shared) ** 2)) / (1 - left) * left
+
+
+def _neighbour_mean(value: FloatArray, reach: int) -> FloatArray:
+    """Mean over ``reach`` rows to either side (fewer at the ends)."""
+    total = np.concatenate([np.zeros_like(value[:1]), np.cumsum(value, axis=0)])
+    at = np.arange(len(value))
+    low, high = np.maximum(at - reach, 0), np.minimum(at + reach + 1, len(value))
+    out: FloatArray = (total[high] - total[low]) / (high - low)[:, None]
+    return out
+
+
+def _keep_covered(found: FollowedStack, straight: StraightField, number: FloatArray) -> FollowedStack | None:
+    """Leave out boundaries in the corners of the frame, of which little is in the picture."""
+    stack, position = found.stack, found.stack.position
+    at = np.clip(np.rint(position).astype(int), 0, len(number) - 1)
+    depth = straight.depth_start + found.first + position
+    length = number[at] * np.maximum(1 - straight.frame.curvature * depth, 0.0)
+    enough = np.flatnonzero(length >= LEAST_COVERAGE * length.max())
+    keep = slice(int(enough[0]), int(enough[-1]) + 1)
+    if keep.stop - keep.start < 2:
+        return None
+    if keep.start == 0 and keep.stop == len(position):
+        return found
+    fit = stack.fit
+    levels = slice(keep.start, keep.stop + 1)
+    fit = replace(
+        fit, position=position[keep], best_position=fit.best_position[keep], level=fit.level[levels],
+        covariance=fit.covariance[keep, keep],
+    )  # fmt: skip
+    traces = found.traces
+    traces = replace(
+        traces, raw=traces.raw[keep], smooth=traces.smooth[keep], apart=traces.apart[keep], u=traces.u[keep],
+        valid=traces.valid[keep],
+    )  # fmt: skip
+    return replace(
+        found, stack=replace(stack, fit=fit, phase=stack.phase[levels]), traces=traces, depth=found.depth[keep],
+        normal=found.normal[keep], cosine=found.cosine[keep], valid=found.valid[keep],
+        terminations=found.terminations[keep],
     )  # fmt: skip
 
 
