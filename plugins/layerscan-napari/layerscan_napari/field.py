@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 from collections.abc import Generator
-from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
 from qtpy.QtCore import QObject, Signal
 
 from layerscan_napari import compute, edits, notes, overlays, traces
+from layerscan_napari.budget import DragBudget
 from layerscan_napari.desk import FieldResult
+from layerscan_napari.helper import Helper
 from layerscan_napari.worker import Task
 
 if TYPE_CHECKING:
@@ -28,6 +29,7 @@ class FieldControl(QObject):
         self.panel = panel
         self.results: dict[Any, compute.Result] = {}
         self.task: Task | None = None
+        self.helper = Helper()
         self._image: Any = None
         tab = panel.layers
         tab.measure_asked.connect(self.start)
@@ -55,8 +57,8 @@ class FieldControl(QObject):
         self.cancel()
         settings = panel.measure_settings(edits=corrections)
         job = panel.make_job(settings, micrograph, **self._known(image, settings))
-        budget = panel.live.budget
-        task = Task(lambda progress: _measure_field(job, budget, progress))
+        helper = self.helper
+        task = Task(lambda progress: _measure_field(job, helper, progress), on_cancel=helper.stop)
         task.progressed.connect(panel.layers.show_progress)
         task.succeeded.connect(self._on_success)
         task.failed.connect(self._on_failure)
@@ -86,6 +88,11 @@ class FieldControl(QObject):
             task.cancel()
             self.panel.layers.set_busy(False)
             self.panel.status.setText("Stopped.")
+
+    def stop(self) -> None:
+        """Stop the measurement and end the helper's process: the panel is hidden."""
+        self.cancel()
+        self.helper.stop()
 
     def _on_success(self, outcome: tuple[compute.Result, traces.Segments]) -> None:
         if self.sender() is not self.task:
@@ -240,8 +247,9 @@ class FieldControl(QObject):
         self.panel.apply_edits(edits.add_boundary(self._shown()[1], depth_nm=depth_nm))
 
 
-def _measure_field(job: compute.Job, budget: Any, progress: Any) -> tuple[compute.Result, traces.Segments]:
-    """Measure and prepare what is drawn, all of it in the background."""
-    result = compute.complete(job, budget, progress)
-    assert result.measurement is not None
-    return replace(result, final=True), traces.traced_segments(result.measurement)
+def _measure_field(job: compute.Job, helper: Helper, progress: Any) -> tuple[compute.Result, traces.Segments]:
+    """Measure and prepare what is drawn: in the helper's process; here where only the light is calculated anew."""
+    if job.measured is None:
+        return helper.run(job, progress)
+    result = compute.complete(job, DragBudget(), progress)
+    return result, traces.traced_segments(job.measured)

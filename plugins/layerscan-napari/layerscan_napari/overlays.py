@@ -107,25 +107,38 @@ def show_marks(layer: Any, measurement: Measurement | None, *, width_px: float) 
 
 
 def show_traces(viewer: Any, image: Any, micrograph: Micrograph, segments: Segments) -> Any:
-    """Draw traced boundaries coloured by thickness; an earlier layer of the same image is replaced."""
-    earlier = find_overlay(viewer, image, TRACES)
-    if earlier is not None:
-        viewer.layers.remove(earlier)
-    low, high = thickness_limits(segments.thickness_nm)
-    return viewer.add_vectors(
-        segments.vectors,
-        features={
+    """Draw traced boundaries coloured by thickness.
+
+    The layer is made empty and filled in place: removing a layer, and thumbnails of many vectors, would make the
+    window stand still.
+    """
+    layer = find_overlay(viewer, image, TRACES)
+    if layer is None:
+        common = _common(image, micrograph, TRACES)
+        layer = viewer.add_vectors(np.zeros((0, 2, 2)), vector_style="line", **common)
+    width = _trace_width(segments, micrograph)
+    with layer.events.blocker_all():
+        if layer.edge_width != width:
+            layer.edge_width = width
+        layer.data = segments.vectors
+        layer.features = {
             "boundary": segments.boundary,
             "layer": segments.layer,
-            "thickness_nm": np.clip(np.nan_to_num(segments.thickness_nm, nan=low), low, high),
-        },
-        edge_color="thickness_nm",
-        edge_colormap=colours.THICKNESS_COLOURMAP,
-        edge_contrast_limits=(low, high),
-        vector_style="line",
-        edge_width=_trace_width(segments, micrograph),
-        **_common(image, micrograph, TRACES),
-    )
+            "thickness_nm": segments.thickness_nm,
+        }
+        if len(segments.vectors):
+            layer.edge_color = thickness_colours(segments.thickness_nm)
+    layer.refresh(thumbnail=False, highlight=False, extent=False)
+    return layer
+
+
+def thickness_colours(thickness_nm: FloatArray) -> FloatArray:
+    """(values, 4) red, green, blue, opacity of thicknesses on the scale that the legend shows."""
+    from napari.utils.colormaps import ensure_colormap
+
+    low, high = thickness_limits(thickness_nm)
+    place = np.clip((np.nan_to_num(thickness_nm, nan=low) - low) / (high - low), 0, 1)
+    return np.asarray(ensure_colormap(colours.THICKNESS_COLOURMAP).map(place), dtype=float)
 
 
 def _trace_width(segments: Segments, micrograph: Micrograph) -> float:

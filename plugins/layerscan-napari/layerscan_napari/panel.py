@@ -527,7 +527,7 @@ class LayerPanel(QWidget):
             self.viewer.mouse_drag_callbacks.remove(self.field.on_click)
         self._pick_timer.stop()
         self.live.pause()
-        self.field.cancel()
+        self.field.stop()
         self.work.cancel()
 
     def _offer_materials(self) -> None:

@@ -15,6 +15,10 @@ if TYPE_CHECKING:
     from layerscan.records import Average, Boundary, FloatArray, IntArray, Layer, Measurement
 
 
+MOST_SEGMENTS = 5000
+"""What napari draws without the window standing still."""
+
+
 @dataclass(frozen=True, kw_only=True, eq=False)
 class Segments:
     """Line segments of the traced boundaries; arrays have one entry per segment.
@@ -37,10 +41,11 @@ def layer_offset(measurement: Measurement) -> int:
     return int(not layers[0].complete)
 
 
-def traced_segments(measurement: Measurement, *, most_per_boundary: int = 400) -> Segments:
-    """Segments of every traced boundary, thinned to at most ``most_per_boundary`` each."""
+def traced_segments(measurement: Measurement, *, most: int = MOST_SEGMENTS) -> Segments:
+    """Segments of every traced boundary, thinned to about ``most`` in all and at least 16 each."""
     vectors, boundary, layer, thickness = [], [], [], []
     traced = [b for b in measurement.boundaries if b.trace is not None and len(b.trace.station) > 1]
+    most_per_boundary = max(16, most // max(len(traced), 1))
     offset = layer_offset(measurement)
     for place, item in enumerate(traced):
         trace = item.trace

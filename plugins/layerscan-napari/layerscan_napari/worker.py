@@ -41,9 +41,10 @@ class Task(QThread):
     failed = Signal(object)
     stopped = Signal()
 
-    def __init__(self, work: Work, parent: QObject | None = None) -> None:
-        super().__init__(parent)
+    def __init__(self, work: Work, *, on_cancel: Callable[[], None] | None = None) -> None:
+        super().__init__()
         self._work: Work | None = work
+        self._on_cancel = on_cancel
         self._cancelled = threading.Event()
         self._last = 0.0
 
@@ -53,8 +54,10 @@ class Task(QThread):
         super().start(priority)
 
     def cancel(self) -> None:
-        """Ask the work to stop at its next report of progress."""
+        """Ask the work to stop at its next report of progress, or as ``on_cancel`` stops it."""
         self._cancelled.set()
+        if self._on_cancel is not None and self.isRunning():
+            self._on_cancel()
 
     @property
     def cancelled(self) -> bool:

@@ -97,7 +97,7 @@ def test_that_the_manifest_commands_import_without_the_heavy_parts():
     assert found.stdout.strip() == "[]"
 
 
-@pytest.mark.parametrize("name", ["budget", "calls", "colours", "compute", "desk", "edits", "images", "notes",
+@pytest.mark.parametrize("name", ["budget", "calls", "colours", "compute", "desk", "edits", "helper", "images", "notes",
                                   "overlays", "pyramid", "reader", "traces"])  # fmt: skip
 def test_that_the_logic_is_free_of_qt(name):
     # issue, point 6: the panel's logic is kept free of Qt
@@ -207,7 +207,7 @@ def test_that_a_point_is_placed_in_its_layer(leading):
 
 def test_that_segments_carry_the_local_thickness_of_the_layer_behind_them():
     m = made_measurement()
-    found = traces.traced_segments(m, most_per_boundary=20)
+    found = traces.traced_segments(m, most=80)
     assert found.vectors.shape == (80, 2, 2)
     for boundary, thickness in ((0, 40.0), (1, 60.0), (2, 40.0), (3, 40.0)):
         assert np.allclose(found.thickness_nm[found.boundary == boundary], thickness)
@@ -351,6 +351,26 @@ def test_that_several_files_become_several_layers(section_file, unscaled_file):
     both = [str(section_file), str(unscaled_file)]
     assert len(reader.get_reader(both)(both)) == 2
     assert reader.get_reader([str(section_file), "missing.tif"]) is None
+
+
+def test_that_every_sample_image_is_in_the_menu_and_opens_with_its_pixel_size():
+    from importlib.resources import files
+
+    import yaml
+    from layerscan.demo import find_samples, list_samples
+    from layerscan.uncertainty import parse_pixel_size
+
+    from layerscan_napari import samples
+
+    manifest = yaml.safe_load(files("layerscan_napari").joinpath("napari.yaml").read_text(encoding="utf-8"))
+    offered = {item["key"] for item in manifest["contributions"]["sample_data"]}
+    known = {one.image.removesuffix(".tif"): one for one in list_samples(find_samples())}
+    assert offered == set(known)
+    ((_, options, kind),) = samples.film_web_left()
+    row, column = parse_pixel_size(known["film_web_left"].pixel_size)
+    assert kind == "image"
+    assert options["scale"] == pytest.approx((row.value, column.value))
+    assert options["metadata"]["layerscan"].pixel_size.u_relative == pytest.approx(row.u / row.value)
 
 
 def write_pyramid(path, pixels, *, below):
