@@ -184,6 +184,30 @@ def draw_errors(u_nm: FloatArray, *, draws: int, rng: np.random.Generator, from_
     return result
 
 
+def draw_even_normal(count: int, *, draws: int, rng: np.random.Generator) -> FloatArray:
+    """Draw standard normal values, (draws, count), evenly over their distribution.
+
+    Notes
+    -----
+    One value in each of ``draws`` equally likely strata, their order shuffled, mean 0 and standard deviation 1 made
+    exact: the few values that all layers share (calibration, index) then carry their stated uncertainty whatever the
+    seed, where 500 plain draws miss it by 3 % and more.
+
+    References
+    ----------
+    M. D. McKay, R. J. Beckman, W. J. Conover, A comparison of three methods for selecting values of input variables,
+    Technometrics 21 (1979) 239, doi 10.1080/00401706.1979.10489755 (DOI from memory).
+    """
+    from scipy.special import ndtri
+
+    stratum = np.argsort(rng.random((draws, count)), axis=0)
+    value: FloatArray = ndtri((stratum + rng.random((draws, count))) / draws)
+    if draws < 3:
+        return value
+    even: FloatArray = (value - value.mean(axis=0)) / value.std(axis=0)
+    return even
+
+
 # --- lateral variation ----------------------------------------------------------------------------------------------
 
 

@@ -285,8 +285,9 @@ def _draw(
             f"The curves of {settings.draws} draws at {index.shape[1]} wavelengths do not fit into "
             f"{MEMORY_LIMIT / 2**30:.0f} GB. Give fewer draws or a wider wavelength step."
         )
-    scale = 1 + stack.u_scale * rng.standard_normal(settings.draws)
-    shift = rng.standard_normal((settings.draws, len(stack.media))) * np.array([m.u_index or 0.0 for m in stack.media])
+    common = ensemble.draw_even_normal(1 + len(stack.media), draws=settings.draws, rng=rng)
+    scale = 1 + stack.u_scale * common[:, 0]
+    shift = common[:, 1:] * np.array([m.u_index or 0.0 for m in stack.media])
     if stack.absorber_of is not None:
         shift[:, 1] = shift[:, stack.absorber_of]
     chunk = max(min(settings.draws, CHUNK_LAYERS // total), 1)

@@ -561,3 +561,13 @@ def test_interruption_passes_through():
 
     with pytest.raises(Interrupted, match="stopped by the caller"):
         predict_light(table(8, 95, 110, u=1.0), PredictSettings(dark="n=1.5", bright="n=1.3"), progress=stop)
+
+
+@pytest.mark.parametrize("seed", [1, 2, 3])
+def test_a_common_uncertainty_comes_out_whole_whatever_the_seed(seed):
+    # law: a peak scales with all thicknesses, so u(peak)/peak = u(scale); constant indices, no other uncertainty
+    layers = tuple(Layer(index=i, phase="dark" if i % 2 else "bright", thickness_nm=90.0, u_nm=0.9) for i in range(24))
+    table = LayerTable(layers=layers, source="made here", u_scale_relative=0.01)
+    settings = PredictSettings(dark="n=1.35", bright="n=1.56", substrate="absorber", seed=seed, draws=400)
+    peak = max(predict_light(table, settings).peaks, key=lambda p: p.reflectance)
+    assert peak.u_wavelength_nm == pytest.approx(0.01 * peak.wavelength_nm, rel=0.03)
