@@ -113,9 +113,7 @@ def match(found: Measurement, truth: Truth, *, share: float = 0.5) -> Match:
         depth[best] = boundary.depth_nm / size
     missed = [i for i in np.flatnonzero(required).tolist() if i not in taken]
     bound = {i: boundary_bound(truth, i) for _, i in pairs}
-    return Match(
-        pairs=pairs, missed=missed, invented=invented, error=error, u=u, bound=bound, found_depth=depth
-    )
+    return Match(pairs=pairs, missed=missed, invented=invented, error=error, u=u, bound=bound, found_depth=depth)
 
 
 def score_image(image: np.ndarray, truth: Truth) -> dict[str, Any]:
@@ -139,9 +137,7 @@ def score_image(image: np.ndarray, truth: Truth) -> dict[str, Any]:
         row["rmse_px"] = float(np.sqrt(np.mean(errors**2)))
         row["bias_px"] = float(abs(errors.mean()))
         row["over_bound"] = float(np.sqrt(np.mean(errors**2)) / np.sqrt(np.mean(bounds**2)))
-        row["boundary_pull"] = [
-            float(pairs.error[i] / u) for i in strong if (u := pairs.u[i]) is not None and u > 0
-        ]
+        row["boundary_pull"] = [float(pairs.error[i] / u) for i in strong if (u := pairs.u[i]) is not None and u > 0]
     row["layer_pull"] = layer_pulls(found, truth, dict(pairs.pairs), size)
     if found.orientation_deg is not None and truth.orientation_deg is not None:
         row["orientation_error_deg"] = abs((found.orientation_deg - truth.orientation_deg + 90) % 180 - 90)
@@ -166,7 +162,7 @@ def period_error(found: Measurement, truth: Truth, pairs: Match) -> float:
 
 
 def layers_between(found: Measurement) -> list[tuple[Layer, Boundary, Boundary]]:
-    """Each layer with the boundaries on both sides of it; layers cut off by the frame have one only and are left out."""
+    """Each layer with the boundaries on both sides of it; layers cut off by the frame have one only, and go."""
     edges = found.boundaries
     best: list[tuple[Layer, Boundary, Boundary]] = []
     least = math.inf
@@ -394,7 +390,7 @@ def _minimum_cost_mse(image: np.ndarray, truth: Truth, index: int) -> float:
     from scipy.ndimage import gaussian_filter
     from skimage.graph import route_through_array
 
-    row, column = truth.trace(index)
+    row, _ = truth.trace(index)
     low, high = max(int(row.min()) - 8, 0), min(int(row.max()) + 9, image.shape[0])
     strip = gaussian_filter(image.astype(float), truth.blur_px)[low:high]
     cost = -np.gradient(strip, axis=0) * math.copysign(1.0, float(truth.step[index]))
@@ -425,7 +421,9 @@ def run_detection(kinds: list[str], seeds: range, negatives: int) -> dict[str, A
     out["negatives"] = each * len(NEGATIVES)
     out["alarms"] = alarms
     chatter = [detect_layers(make_chatter(seed)[0].astype(np.float32)) for seed in seeds]
-    out["chatter_flagged"] = float(np.mean(["confirm_with_second_section" in one.flags or not one.layered for one in chatter]))
+    out["chatter_flagged"] = float(
+        np.mean(["confirm_with_second_section" in one.flags or not one.layered for one in chatter])
+    )
     out["orientation_over_bound"] = _orientation_over_bound(seeds)
     show("detection", out)
     return out
@@ -496,7 +494,9 @@ def show(name: str, row: dict[str, Any]) -> None:
     def text(value: Any) -> str:
         return f"{value:.4g}" if isinstance(value, float) else str(value)
 
-    print(f"{name:24s}", "  ".join(f"{key} {text(value)}" for key, value in row.items() if value is not None), flush=True)
+    print(
+        f"{name:24s}", "  ".join(f"{key} {text(value)}" for key, value in row.items() if value is not None), flush=True
+    )
 
 
 def draw_pulls(pulls: dict[str, list[float]], path: Path) -> None:

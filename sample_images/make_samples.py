@@ -2,10 +2,11 @@
 
     python sample_images/make_samples.py [FOLDER]
 
-Two lots. *Nacre*: platelets of a shell plate, about 450 nm of mineral (bright) and 32 nm of organic material (dark), whose
-third and fourth orders lie in the visible. *Film*: 32 co-extruded layers of two polymers whose thickness drifts across
-the web. Spectra are calculated from the true layers of each image, with the bandwidth and noise of an instrument, except
-for one specimen that was measured in another state than it was imaged in (swollen): there the answer must be "no".
+Two lots. *Nacre*: platelets of a shell plate, about 450 nm of mineral (bright) and 32 nm of organic material (dark),
+whose third and fourth orders lie in the visible. *Film*: 32 co-extruded layers of two polymers whose thickness drifts
+across the web. Spectra are calculated from the true layers of each image, with the bandwidth and noise of an
+instrument, except for one specimen that was measured in another state than it was imaged in (swollen): there the answer
+must be "no".
 """
 
 from __future__ import annotations
@@ -71,16 +72,17 @@ NACRE = {"lot": "nacre", "dark": "n=1.53 +- 0.01", "bright": "aragonite", "ome":
 FILM = {"lot": "film", "dark": "polystyrene-zhang", "bright": "pmma-tomson"}
 SAMPLES = (
     Sample(
-        name="nacre_plate_1", specimen="plate 1", what="shell plate, polished section, backscattered electrons", seed=11,
-        shape=(1264, 416), recipe=_nacre(banner_rows=48), **NACRE,
+        name="nacre_plate_1", specimen="plate 1", what="shell plate, polished section, backscattered electrons",
+        seed=11, shape=(1264, 416), recipe=_nacre(banner_rows=48), **NACRE,
     ),
     Sample(
         name="nacre_plate_2", specimen="plate 2", what="shell plate, section turned in the field, curtains", seed=12,
         shape=(832, 832), recipe=_nacre(orientation_deg=63.0, curtains=0.02, noise=0.09, charging=0.01), **NACRE,
     ),
     Sample(
-        name="nacre_plate_3", specimen="plate 3", what="shell plate, imaged dry; its spectrum was measured wet", seed=13,
-        shape=(1216, 416), recipe=_nacre(orientation_deg=84.0, gamma=1.1, inverted=False), swelling=0.06, **NACRE,
+        name="nacre_plate_3", specimen="plate 3", what="shell plate, imaged dry; its spectrum was measured wet",
+        seed=13, shape=(1216, 416),
+        recipe=_nacre(orientation_deg=84.0, gamma=1.1, inverted=False), swelling=0.06, **NACRE,
     ),
     Sample(
         name="film_web_left", specimen="web left", what="co-extruded film, microtome section, stained", seed=21,

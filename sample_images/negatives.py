@@ -72,7 +72,10 @@ def _cells(rng: np.random.Generator, shape: tuple[int, int]) -> np.ndarray:
     y, x = np.mgrid[-1:ny, -1:nx].astype(float)
     x = x + 0.5 * (y % 2)
     jitter = rng.uniform(0.15, 0.45)
-    seeds = np.column_stack([(y + rng.normal(0, jitter, y.shape)).ravel(), (x + rng.normal(0, jitter, x.shape)).ravel()]) * size
+    seeds = (
+        np.column_stack([(y + rng.normal(0, jitter, y.shape)).ravel(), (x + rng.normal(0, jitter, x.shape)).ravel()])
+        * size
+    )
     from scipy.spatial import cKDTree
 
     r, c = np.mgrid[0 : shape[0], 0 : shape[1]]
@@ -88,7 +91,11 @@ def _spinodal(rng: np.random.Generator, shape: tuple[int, int]) -> np.ndarray:
     centre = 1 / rng.uniform(8, 50)
     band = np.exp(-0.5 * ((k - centre) / (rng.uniform(0.08, 0.3) * centre)) ** 2)
     field = _unit(np.fft.irfft2(np.fft.rfft2(rng.standard_normal(shape)) * band, shape))
-    return 0.3 + 0.4 * ndtr((field - rng.uniform(-0.5, 0.5)) / rng.uniform(0.1, 0.6)) + rng.uniform(0.02, 0.15) * rng.standard_normal(shape)
+    return (
+        0.3
+        + 0.4 * ndtr((field - rng.uniform(-0.5, 0.5)) / rng.uniform(0.1, 0.6))
+        + rng.uniform(0.02, 0.15) * rng.standard_normal(shape)
+    )
 
 
 def _edge_curtains(rng: np.random.Generator, shape: tuple[int, int]) -> np.ndarray:

@@ -1,27 +1,50 @@
 """Test sections of layered structures with their full truth, written from the physics; everything here is invented.
 
-A ``Recipe`` says what the specimen, the section and the microscope are like; ``render_section`` draws it and returns the
-image together with a ``Truth`` that knows where every boundary lies. ``make_section`` draws a recipe of a named kind.
+A ``Recipe`` says what the specimen, the section and the microscope are like; ``render_section`` draws it and returns
+the image together with a ``Truth`` that knows where every boundary lies. ``make_section`` draws a recipe of a kind.
 Pictures without layers are in ``negatives.py``.
 
-Conventions: points are (row, column); ``depth`` is the distance along the layer normal and ``lateral`` the distance along
-the layers, both in pixels; ``orientation_deg`` is the direction of the normal from the +column axis towards the +row axis.
+Conventions: points are (row, column); ``depth`` is the distance along the layer normal and ``lateral`` the distance
+along the layers, both in pixels; ``orientation_deg`` is the direction of the normal from the +column axis towards the
++row axis.
 """
 
 from __future__ import annotations
 
 import dataclasses
-import io
 import math
 from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
-from scipy import ndimage
-from scipy.special import ndtr
+from section_drawing import (
+    add_banner,
+    correlated_noise,
+    draw_structure,
+    edge,
+    find_centre,
+    quantise,
+    record,
+    smooth_field,
+    spoil,
+    through_jpeg,
+    to_layers,
+    to_picture,
+)
+from section_kinds import DRAWS, KINDS
 
-KINDS = ("easy", "moderate", "tem", "sem", "hard", "brutal")
-_STRIP = 256  # rows drawn at a time, so that large pictures need little memory
+__all__ = [
+    "KINDS",
+    "Recipe",
+    "Truth",
+    "correlated_noise",
+    "draw_recipe",
+    "edge",
+    "make_section",
+    "quantise",
+    "render_section",
+    "smooth_field",
+]
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -123,11 +146,11 @@ class Truth:
     def coordinates(self, row: Any, column: Any) -> tuple[np.ndarray, np.ndarray]:
         """Depth and lateral place [px] of points of the picture."""
         row, column = np.asarray(row, float), np.asarray(column, float)
-        return _coordinates(self.recipe, self.centre, row, column + np.interp(row, np.arange(len(self.drift)), self.drift))
+        return to_layers(self.recipe, self.centre, row, column + np.interp(row, np.arange(len(self.drift)), self.drift))
 
     def points(self, depth: Any, lateral: Any) -> tuple[np.ndarray, np.ndarray]:
         """Row and column of places given by depth and lateral place: the inverse of ``coordinates``."""
-        row, column = _points(self.recipe, self.centre, np.asarray(depth, float), np.asarray(lateral, float))
+        row, column = to_picture(self.recipe, self.centre, np.asarray(depth, float), np.asarray(lateral, float))
         return row, column - np.interp(row, np.arange(len(self.drift)), self.drift)
 
     def depth_at(self, index: int, lateral: Any) -> np.ndarray:
@@ -194,54 +217,7 @@ class Truth:
         }
 
 
-# --- geometry -------------------------------------------------------------------------------------------------------
-
-
-def _coordinates(recipe: Recipe, centre: tuple[float, float], row: np.ndarray, column: np.ndarray) -> Any:
-    y, x = row - centre[0], column - centre[1]
-    theta = math.radians(recipe.orientation_deg)
-    if recipe.radius_px is None:
-        return x * math.cos(theta) + y * math.sin(theta), -x * math.sin(theta) + y * math.cos(theta)
-    angle = np.arctan2(-x * math.sin(theta) + y * math.cos(theta), x * math.cos(theta) + y * math.sin(theta))
-    return np.hypot(x, y) - recipe.radius_px, angle * recipe.radius_px
-
-
-def _points(recipe: Recipe, centre: tuple[float, float], depth: np.ndarray, lateral: np.ndarray) -> Any:
-    theta = math.radians(recipe.orientation_deg)
-    if recipe.radius_px is None:
-        row = centre[0] + depth * math.sin(theta) + lateral * math.cos(theta)
-        return row, centre[1] + depth * math.cos(theta) - lateral * math.sin(theta)
-    angle = lateral / recipe.radius_px + theta
-    radius = depth + recipe.radius_px
-    return centre[0] + radius * np.sin(angle), centre[1] + radius * np.cos(angle)
-
-
-def _centre(recipe: Recipe, shape: tuple[int, int]) -> tuple[float, float]:
-    middle = ((shape[0] - recipe.banner_rows - 1) / 2, (shape[1] - 1) / 2)
-    if recipe.radius_px is None:
-        return middle
-    if recipe.centre is not None:
-        return recipe.centre
-    theta = math.radians(recipe.orientation_deg)
-    return middle[0] - recipe.radius_px * math.sin(theta), middle[1] - recipe.radius_px * math.cos(theta)
-
-
 # --- the specimen ---------------------------------------------------------------------------------------------------
-
-
-def correlated_noise(
-    rng: np.random.Generator, length: int, correlation_length: float, hurst: float = 0.7
-) -> np.ndarray:
-    """Noise of unit rms on a periodic grid with the spectrum 1/(1 + (k xi)^2)^(1/2 + H) of a self-affine interface."""
-    k = np.fft.rfftfreq(length) * 2 * math.pi
-    shape = (1 + (k * correlation_length) ** 2) ** (-(0.5 + hurst) / 2)
-    shape[0] = 0.0
-    weights = np.full(len(k), 2.0)
-    weights[0] = 1.0
-    if length % 2 == 0:
-        weights[-1] = 1.0
-    power = np.sum(weights * shape**2) / length
-    return np.fft.irfft(np.fft.rfft(rng.standard_normal(length)) * shape, length) / math.sqrt(power)
 
 
 def _thicknesses(recipe: Recipe, rng: np.random.Generator, periods: int) -> tuple[np.ndarray, list[str]]:
@@ -334,233 +310,6 @@ def _boundaries(
     return depth + wave, wave, exists
 
 
-# --- drawing --------------------------------------------------------------------------------------------------------
-
-
-def edge(distance: np.ndarray, blur: float, box: float = 0.0) -> np.ndarray:
-    """Unit step seen through a Gaussian blur and a box: the projection of a tilted flat boundary."""
-    if box < 1e-6:
-        return ndtr(distance / blur)
-    half = box / 2
-
-    def integral(u: np.ndarray) -> np.ndarray:
-        return u * ndtr(u) + np.exp(-0.5 * u * u) / math.sqrt(2 * math.pi)
-
-    return blur / box * (integral((distance + half) / blur) - integral((distance - half) / blur))
-
-
-def _draw_strip(
-    recipe: Recipe,
-    depth: np.ndarray,
-    lateral: np.ndarray,
-    origin: float,
-    boundary: np.ndarray,
-    wave: np.ndarray,
-    levels: np.ndarray,
-    blur: float,
-    bumps: np.ndarray,
-) -> np.ndarray:
-    """Sum of the steps of all boundaries at the given places; each is worked out only near itself."""
-    places = boundary.shape[1]
-    u = np.clip(lateral.ravel() - origin, 0, places - 1.000001)
-    left = u.astype(np.int64)
-    part = u - left
-    flat_depth = depth.ravel()
-    level_depth = flat_depth - (wave[left] * (1 - part) + wave[left + 1] * part)
-    slope = np.gradient(wave) if wave.any() else wave
-    shrink = 1 / np.sqrt(1 + slope**2)
-    order = np.argsort(level_depth, kind="stable")
-    ordered = level_depth[order]
-    value = np.zeros(len(ordered))
-    jump = np.zeros(len(ordered) + 1)
-    jump[0] = levels[0]
-    reach = 5.5 * blur + 0.5 * recipe.projection_px
-    if np.any(bumps):
-        reach = max(reach, 6 * recipe.edge_bump_px)
-    smooth = boundary - wave
-    low = np.searchsorted(ordered, smooth.min(axis=1) - reach)
-    high = np.searchsorted(ordered, smooth.max(axis=1) + reach)
-    for i in range(len(boundary)):
-        jump[high[i]] += levels[i + 1] - levels[i]
-        if low[i] == high[i]:
-            continue
-        index = order[low[i] : high[i]]
-        j, f = left[index], part[index]
-        place = boundary[i, j] * (1 - f) + boundary[i, j + 1] * f
-        distance = (flat_depth[index] - place) * shrink[j]
-        value[low[i] : high[i]] += (levels[i + 1] - levels[i]) * edge(distance, blur, recipe.projection_px)
-        if bumps[i]:
-            offset = 0.4 * recipe.edge_bump_px * np.sign(levels[i + 1] - levels[i])
-            value[low[i] : high[i]] += bumps[i] * np.exp(-0.5 * ((distance - offset) / recipe.edge_bump_px) ** 2)
-    value += np.cumsum(jump[:-1])
-    out = np.empty(len(value))
-    out[order] = value
-    return out.reshape(depth.shape)
-
-
-def _draw_structure(
-    recipe: Recipe,
-    shape: tuple[int, int],
-    centre: tuple[float, float],
-    drift: np.ndarray,
-    origin: float,
-    boundary: np.ndarray,
-    wave: np.ndarray,
-    levels: np.ndarray,
-) -> np.ndarray:
-    """Noise-free signal of the whole frame, float32."""
-    mass = recipe.mass_thickness
-    drawn = -np.log(levels) if mass else levels
-    inner = 0.5 if mass else recipe.blur_px
-    outer = math.sqrt(max(recipe.blur_px**2 - inner**2, 0.0)) if mass else 0.0
-    halo = math.ceil(5 * outer)
-    contrast = abs(recipe.bright_level - recipe.dark_level)
-    bumps = np.where(np.abs(np.diff(levels)) > 0.2 * contrast, recipe.edge_bump * contrast, 0.0)
-    image = np.empty(shape, dtype=np.float32)
-    column = np.arange(-halo, shape[1] + halo, dtype=float)
-    for top in range(0, shape[0], _STRIP):
-        bottom = min(top + _STRIP, shape[0])
-        row = np.arange(top - halo, bottom + halo, dtype=float)
-        shift = np.interp(row, np.arange(shape[0]), drift)
-        depth, lateral = _coordinates(recipe, centre, row[:, None], column[None, :] + shift[:, None])
-        strip = _draw_strip(recipe, depth, lateral, origin, boundary, wave, drawn, inner, bumps)
-        if mass:
-            strip = np.exp(-strip)
-            if outer > 0:
-                strip = ndimage.gaussian_filter(strip, outer, truncate=5)
-            strip = strip[halo : halo + bottom - top, halo : halo + shape[1]]
-        image[top:bottom] = strip
-    return image
-
-
-def smooth_field(rng: np.random.Generator, shape: tuple[int, int], scale: float) -> np.ndarray:
-    """Smooth random field of unit rms, drawn small and enlarged."""
-    small = (max(int(shape[0] / scale), 3) + 3, max(int(shape[1] / scale), 3) + 3)
-    field = ndimage.gaussian_filter(rng.standard_normal(small), 1.0)
-    zoom = ndimage.zoom(field, ((shape[0]) / (small[0] - 2), shape[1] / (small[1] - 2)), order=3)
-    zoom = zoom[: shape[0], : shape[1]]
-    return zoom / max(zoom.std(), 1e-9)
-
-
-def _spoil(
-    recipe: Recipe, rng: np.random.Generator, image: np.ndarray, orientation_deg: float
-) -> tuple[np.ndarray, np.ndarray]:
-    """Shading, curtains, cracks and debris; returns the image and the mask of what hides the specimen."""
-    shape = image.shape
-    artefact = np.zeros(shape, dtype=bool)
-    if recipe.shading:
-        image *= (1 + recipe.shading * 0.5 * smooth_field(rng, shape, max(shape) / 2.5)).astype(np.float32)
-    if recipe.curtains:
-        along = math.radians(orientation_deg if recipe.curtain_deg is None else recipe.curtain_deg)
-        y, x = np.arange(shape[0])[:, None], np.arange(shape[1])[None, :]
-        across = -x * math.sin(along) + y * math.cos(along)
-        length = int(math.ceil(np.ptp(across))) + 3
-        stripes = 0.7 * correlated_noise(rng, length, 12.0, 0.5) + 0.7 * correlated_noise(rng, length, 2.0, 0.5)
-        image *= (1 + recipe.curtains * np.interp(across - across.min(), np.arange(length), stripes)).astype(np.float32)
-    for _ in range(recipe.cracks):
-        _draw_crack(rng, image, artefact, orientation_deg)
-    for _ in range(recipe.debris):
-        _draw_debris(rng, image, artefact)
-    return image, artefact
-
-
-def _draw_crack(rng: np.random.Generator, image: np.ndarray, artefact: np.ndarray, orientation_deg: float) -> None:
-    """Dark jagged line that runs roughly along the layer normal."""
-    shape = image.shape
-    along = math.radians(orientation_deg + rng.normal(0, 20))
-    row, column = rng.uniform(0.2, 0.8) * shape[0], rng.uniform(0.2, 0.8) * shape[1]
-    half = rng.uniform(0.2, 0.7) * min(shape) / 2
-    t = np.arange(-half, half)
-    wander = 6 * correlated_noise(rng, len(t), 25.0, 0.6)
-    width = rng.uniform(1.5, 4) * np.sqrt(np.clip(1 - (t / half) ** 2, 0.02, 1))
-    mask = np.zeros(shape, dtype=bool)
-    for w in np.linspace(-1, 1, 13):
-        r = row + t * math.sin(along) + (wander + w * width) * math.cos(along)
-        c = column + t * math.cos(along) - (wander + w * width) * math.sin(along)
-        ok = (r >= 0) & (r < shape[0] - 1) & (c >= 0) & (c < shape[1] - 1)
-        mask[np.rint(r[ok]).astype(int), np.rint(c[ok]).astype(int)] = True
-    mask = ndimage.binary_closing(mask, iterations=1) | mask
-    soft = ndimage.gaussian_filter(mask.astype(np.float32), 0.8)
-    image += soft * (0.05 - image)
-    artefact |= soft > 0.05
-
-
-def _draw_debris(rng: np.random.Generator, image: np.ndarray, artefact: np.ndarray) -> None:
-    """A particle with a ragged outline, brighter or darker than the specimen."""
-    shape = image.shape
-    size = rng.uniform(6, 0.05 * min(shape) + 8)
-    row, column = rng.uniform(0, shape[0]), rng.uniform(0, shape[1])
-    reach = int(2 * size)
-    r0, r1 = max(int(row) - reach, 0), min(int(row) + reach, shape[0])
-    c0, c1 = max(int(column) - reach, 0), min(int(column) + reach, shape[1])
-    if r1 <= r0 or c1 <= c0:
-        return
-    y, x = np.mgrid[r0:r1, c0:c1]
-    angle = np.arctan2(y - row, x - column)
-    outline = size * (1 + sum(rng.normal(0, 0.15) * np.cos(m * angle + rng.uniform(0, 6.3)) for m in (1, 2, 3)))
-    soft = ndtr((outline - np.hypot(y - row, x - column)) / 1.0).astype(np.float32)
-    level = rng.choice([0.02, 0.98])
-    image[r0:r1, c0:c1] += soft * (level - image[r0:r1, c0:c1])
-    artefact[r0:r1, c0:c1] |= soft > 0.05
-
-
-def _record(recipe: Recipe, rng: np.random.Generator, image: np.ndarray) -> np.ndarray:
-    """Noise, charging rows, gamma, inversion, quantisation."""
-    shape = image.shape
-    if recipe.dose is not None:
-        image = (rng.poisson(np.clip(image, 0, None) * recipe.dose) / recipe.dose).astype(np.float32)
-    if recipe.noise:
-        noise = rng.standard_normal(shape, dtype=np.float32)
-        if recipe.noise_blur_px:
-            noise = ndimage.gaussian_filter(noise, recipe.noise_blur_px)
-            noise /= noise.std()
-        image = image + recipe.noise * noise
-    if recipe.charging:
-        rows = 0.6 * rng.standard_normal(shape[0]) + 0.8 * correlated_noise(rng, shape[0], 6.0, 0.5)
-        image = image + (recipe.charging * rows[:, None]).astype(np.float32)
-        for row in rng.integers(0, shape[0], max(shape[0] // 100, 1)):  # streaks that decay along the fast axis
-            at = rng.integers(0, shape[1])
-            tail = np.exp(-np.arange(shape[1] - at) / rng.uniform(20, 120))
-            image[row, at:] += (3 * recipe.charging * rng.choice([-1, 1]) * tail).astype(np.float32)
-    if recipe.gamma != 1.0:
-        image = np.clip(image, 0, None) ** recipe.gamma
-    if recipe.inverted:
-        image = 1 - image
-    return image
-
-
-def quantise(image: np.ndarray, bits: int | None) -> np.ndarray:
-    """Signal 0 to 1 as unsigned integers of 8 or 16 bits, or unchanged float32."""
-    if bits is None:
-        return image.astype(np.float32)
-    top = 2**bits - 1
-    return np.clip(np.rint(image * top), 0, top).astype(np.uint8 if bits == 8 else np.uint16)
-
-
-def _jpeg(image: np.ndarray, quality: int) -> np.ndarray:
-    from PIL import Image
-
-    buffer = io.BytesIO()
-    Image.fromarray(image).save(buffer, format="JPEG", quality=quality)
-    return np.asarray(Image.open(buffer))
-
-
-def _banner(image: np.ndarray, rows: int, pixel_size_nm: float) -> None:
-    """Information strip at the bottom: black, with text and a scale bar, drawn over the picture in place."""
-    from PIL import Image, ImageDraw
-
-    top = {np.dtype(np.uint8): 255, np.dtype(np.uint16): 65535}.get(image.dtype, 1)
-    width = image.shape[1]
-    strip = Image.new("L", (width, rows), 0)
-    draw = ImageDraw.Draw(strip)
-    length_nm = 10 ** math.floor(math.log10(0.3 * width * pixel_size_nm))
-    length = length_nm / pixel_size_nm
-    y = rows // 2
-    draw.rectangle([10, y - 2, 10 + length, y + 2], fill=255)
-    draw.text((20 + length, y - 6), f"{length_nm:g} nm   5.00 kV   WD 4.1 mm   test section, invented", fill=255)
-    image[-rows:] = (np.asarray(strip, dtype=float) / 255 * top).astype(image.dtype)
-
-
 # --- truth ----------------------------------------------------------------------------------------------------------
 
 
@@ -573,7 +322,7 @@ def _visible(
     lateral: np.ndarray,
     hidden: np.ndarray,
 ) -> np.ndarray:
-    row, column = _points(recipe, centre, boundary, np.broadcast_to(lateral, boundary.shape))
+    row, column = to_picture(recipe, centre, boundary, np.broadcast_to(lateral, boundary.shape))
     column = column - np.interp(row, np.arange(shape[0]), drift)
     rows = shape[0] - recipe.banner_rows
     seen = (row >= 0) & (row <= rows - 1) & (column >= 0) & (column <= shape[1] - 1)
@@ -585,7 +334,12 @@ def _visible(
 
 
 def _normal_scale(
-    recipe: Recipe, centre: tuple[float, float], shape: tuple[int, int], drift: np.ndarray, lateral: np.ndarray, wave: np.ndarray
+    recipe: Recipe,
+    centre: tuple[float, float],
+    shape: tuple[int, int],
+    drift: np.ndarray,
+    lateral: np.ndarray,
+    wave: np.ndarray,
 ) -> np.ndarray:
     """1/|gradient of the depth| in the picture against lateral place, at mid depth of the frame."""
     slope = np.gradient(wave) if wave.any() else np.zeros(len(lateral))
@@ -593,7 +347,7 @@ def _normal_scale(
     theta = math.radians(recipe.orientation_deg)
     if recipe.radius_px is not None:
         theta = theta + lateral / recipe.radius_px
-    # depth rises by (cos, sin) - slope (-sin, cos) per (column, row); a column shift of `shear` per row adds to the row part
+    # depth rises by (cos, sin) - slope (-sin, cos) per (column, row); a column shift per row adds to the second
     g_column = np.cos(theta) + slope * np.sin(theta)
     g_row = np.sin(theta) - slope * np.cos(theta) + shear * g_column
     return 1 / np.hypot(g_column, g_row)
@@ -609,7 +363,9 @@ def _longest_run(phase: tuple[str, ...], required: np.ndarray, per: int) -> tupl
     return (first, last) if last > first else None
 
 
-def render_section(recipe: Recipe, seed: int, shape: tuple[int, int] = (512, 512), *, kind: str = "own") -> tuple[np.ndarray, Truth]:
+def render_section(
+    recipe: Recipe, seed: int, shape: tuple[int, int] = (512, 512), *, kind: str = "own"
+) -> tuple[np.ndarray, Truth]:
     """Draw one section.
 
     Parameters
@@ -628,7 +384,7 @@ def render_section(recipe: Recipe, seed: int, shape: tuple[int, int] = (512, 512
     truth : Truth
     """
     rng = np.random.default_rng([seed, 20240611])
-    centre = _centre(recipe, shape)
+    centre = find_centre(recipe, shape)
     rows = np.arange(shape[0])
     drift = recipe.drift_px * rows / shape[0]
     if recipe.drift_wander_px:
@@ -638,7 +394,9 @@ def render_section(recipe: Recipe, seed: int, shape: tuple[int, int] = (512, 512
         lateral = np.arange(math.floor(corner_lateral[0]) - 40, math.ceil(corner_lateral[1]) + 41, dtype=float)
     else:
         whole = math.pi * recipe.radius_px
-        lateral = np.arange(math.floor(max(corner_lateral[0] - 40, -whole)), math.ceil(min(corner_lateral[1] + 40, whole)) + 1.0)
+        lateral = np.arange(
+            math.floor(max(corner_lateral[0] - 40, -whole)), math.ceil(min(corner_lateral[1] + 40, whole)) + 1.0
+        )
     thickness, phase, start = _stack(recipe, rng, corner_depth)
     boundary, wave, exists = _boundaries(recipe, rng, thickness, start, lateral)
     names = {"dark": recipe.dark_level, "bright": recipe.bright_level, "middle": recipe.middle_level}
@@ -646,19 +404,39 @@ def render_section(recipe: Recipe, seed: int, shape: tuple[int, int] = (512, 512
     after = "substrate" if recipe.substrate_level is not None else _other(phase[-1])
     outer = (recipe.resin_level, recipe.substrate_level)
     levels = np.array(
-        [names[before] if outer[0] is None else outer[0], *(names[p] for p in phase), names[after] if outer[1] is None else outer[1]]
+        [
+            names[before] if outer[0] is None else outer[0],
+            *(names[p] for p in phase),
+            names[after] if outer[1] is None else outer[1],
+        ]
     )
-    image = _draw_structure(recipe, shape, centre, drift, lateral[0], boundary, wave, levels)
+    image = draw_structure(recipe, shape, centre, drift, lateral[0], boundary, wave, levels)
     mean_signal = float(image.mean())
-    image, artefact = _spoil(recipe, rng, image, recipe.orientation_deg)
-    image = _record(recipe, rng, image)
+    image, artefact = spoil(recipe, rng, image, recipe.orientation_deg)
+    image = record(recipe, rng, image)
     image = quantise(image, recipe.bits)
     if recipe.jpeg_quality is not None:
-        image = _jpeg(image, recipe.jpeg_quality).copy()
+        image = through_jpeg(image, recipe.jpeg_quality).copy()
     if recipe.banner_rows:
-        _banner(image, recipe.banner_rows, recipe.pixel_size_nm)
+        add_banner(image, recipe.banner_rows, recipe.pixel_size_nm)
         artefact[-recipe.banner_rows :] = True
-    truth = _truth(recipe, seed, shape, kind, centre, drift, lateral, boundary, wave, exists, phase, (before, after), levels, artefact, mean_signal)
+    truth = _truth(
+        recipe,
+        seed,
+        shape,
+        kind,
+        centre,
+        drift,
+        lateral,
+        boundary,
+        wave,
+        exists,
+        phase,
+        (before, after),
+        levels,
+        artefact,
+        mean_signal,
+    )
     return image, truth
 
 
@@ -672,7 +450,7 @@ def _frame_range(
     """Range of depth and of lateral place that the frame shows."""
     r = np.concatenate([np.arange(shape[0]), np.arange(shape[0]), np.zeros(shape[1]), np.full(shape[1], shape[0] - 1)])
     c = np.concatenate([np.zeros(shape[0]), np.full(shape[0], shape[1] - 1), np.arange(shape[1]), np.arange(shape[1])])
-    depth, lateral = _coordinates(recipe, centre, r, c + np.interp(r, np.arange(shape[0]), drift))
+    depth, lateral = to_layers(recipe, centre, r, c + np.interp(r, np.arange(shape[0]), drift))
     low, high = float(depth.min()), float(depth.max())
     if recipe.radius_px is not None and 0 <= centre[0] < shape[0] and 0 <= centre[1] < shape[1]:
         low = -recipe.radius_px
@@ -731,25 +509,31 @@ def _truth(
     scale = _normal_scale(recipe, centre, shape, drift, lateral, wave)
     visible_px = in_frame[keep].sum(axis=1)
     if recipe.radius_px is not None:  # lateral places are counted at the reference radius
-        visible_px = (visible_px * np.clip((boundary[keep].mean(axis=1) + recipe.radius_px) / recipe.radius_px, 0, None)).astype(int)
+        visible_px = (
+            visible_px * np.clip((boundary[keep].mean(axis=1) + recipe.radius_px) / recipe.radius_px, 0, None)
+        ).astype(int)
     thickness = []
     for i in range(first, last):
         both = in_frame[i] & in_frame[i + 1]
         both = both if both.any() else exists[i] & exists[i + 1]
         both = both if both.any() else np.ones(len(lateral), dtype=bool)
         thickness.append(float(np.mean((boundary[i + 1] - boundary[i])[both] * scale[both])))
-    rough = [float(np.std((boundary[i] - wave)[in_frame[i]])) if in_frame[i].any() else 0.0 for i in range(first, last + 1)]
+    rough = [
+        float(np.std((boundary[i] - wave)[in_frame[i]])) if in_frame[i].any() else 0.0 for i in range(first, last + 1)
+    ]
     contrast = abs(recipe.bright_level - recipe.dark_level)
     poisson = mean_signal / recipe.dose if recipe.dose else 0.0
     inside = recipe.radius_px is not None and 0 <= centre[0] < shape[0] and 0 <= centre[1] < shape[1]
     truth = Truth(
-        kind=kind, seed=seed, shape=shape, recipe=recipe, lateral_px=lateral, boundary_depth_px=boundary[keep], wave_px=wave,
-        exists=exists[keep], visible_px=visible_px, visible_from=clear, layer_phase=tuple(all_phases[first + 1 : last + 1]),
-        outer_phase=(all_phases[first], all_phases[last + 1]), step=np.diff(levels)[keep], thickness_px=np.array(thickness),
+        kind=kind, seed=seed, shape=shape, recipe=recipe, lateral_px=lateral, boundary_depth_px=boundary[keep],
+        wave_px=wave, exists=exists[keep], visible_px=visible_px, visible_from=clear,
+        layer_phase=tuple(all_phases[first + 1 : last + 1]), outer_phase=(all_phases[first], all_phases[last + 1]),
+        step=np.diff(levels)[keep], thickness_px=np.array(thickness),
         period_px=None, period_n=0, period_ends=None,
         orientation_deg=None if inside else _mean_orientation(recipe, centre, shape, drift, lateral, wave),
-        blur_px=recipe.blur_px, noise=math.sqrt(recipe.noise**2 + poisson), contrast=contrast, roughness_px=np.array(rough),
-        artefact=artefact, drift=drift, pixel_size_nm=recipe.pixel_size_nm, centre=centre, normal_scale=scale,
+        blur_px=recipe.blur_px, noise=math.sqrt(recipe.noise**2 + poisson), contrast=contrast,
+        roughness_px=np.array(rough), artefact=artefact, drift=drift,
+        pixel_size_nm=recipe.pixel_size_nm, centre=centre, normal_scale=scale,
     )  # fmt: skip
     ends = None
     if not recipe.missing and len(shown):
@@ -772,15 +556,12 @@ def _mean_orientation(
     """Direction of the normal averaged over the frame as an axis (double-angle mean), waviness and drift included."""
     shear = float(np.polyfit(np.arange(len(drift)), drift, 1)[0]) if drift.any() else 0.0
     r, c = np.mgrid[0 : shape[0] - recipe.banner_rows : 8, 0 : shape[1] : 8].astype(float)
-    _, place = _coordinates(recipe, centre, r, c + np.interp(r, np.arange(len(drift)), drift))
+    _, place = to_layers(recipe, centre, r, c + np.interp(r, np.arange(len(drift)), drift))
     theta = np.radians(recipe.orientation_deg) if recipe.radius_px is None else np.arctan2(r - centre[0], c - centre[1])
     slope = np.interp(place, lateral, np.gradient(wave))
     g_column, g_row = np.cos(theta) + slope * np.sin(theta), np.sin(theta) - slope * np.cos(theta)
     angle = np.arctan2(g_row + shear * g_column, g_column)
     return float(np.degrees(np.angle(np.mean(np.exp(2j * angle))) / 2) % 180)
-
-
-# --- named kinds ----------------------------------------------------------------------------------------------------
 
 
 def draw_recipe(kind: str, seed: int, shape: tuple[int, int] = (512, 512)) -> Recipe:
@@ -789,170 +570,12 @@ def draw_recipe(kind: str, seed: int, shape: tuple[int, int] = (512, 512)) -> Re
         raise ValueError(f"Kind '{kind}' is not known. Choose one of {', '.join(KINDS)}.")
     rng = np.random.default_rng([seed, KINDS.index(kind), 77])
     size = min(max(min(shape), 256), 1024)  # periods suit a frame of this size
-    draw = _DRAWS[kind](rng, size)
+    draw = DRAWS[kind](rng, size)
     draw.setdefault("orientation_deg", float(rng.uniform(0, 180)))
     draw.setdefault("phase_offset", float(rng.random()))
     draw.setdefault("inverted", bool(rng.random() < 0.3))
     draw.setdefault("pixel_size_nm", float(rng.choice([1.0, 2.5, 4.0, 8.0])))
     return Recipe(**draw)
-
-
-def _levels(rng: np.random.Generator, contrast: float) -> dict[str, float]:
-    middle = rng.uniform(0.42, 0.58)
-    return {"dark_level": middle - contrast / 2, "bright_level": middle + contrast / 2}
-
-
-def _third_levels(rng: np.random.Generator, levels: dict[str, float], chance: float) -> dict[str, float]:
-    out: dict[str, float] = {}
-    low, high = levels["dark_level"], levels["bright_level"]
-    if rng.random() < chance:
-        out["resin_level"] = float(low + rng.choice([-0.3, 0.35, 0.5]) * (high - low))
-    if rng.random() < chance:
-        out["substrate_level"] = float(low + rng.choice([0.5, 0.65, 1.3]) * (high - low))
-    return {name: float(np.clip(value, 0.03, 0.97)) for name, value in out.items()}
-
-
-def _easy(rng: np.random.Generator, size: int) -> dict[str, Any]:
-    contrast = rng.uniform(0.35, 0.55)
-    levels = _levels(rng, contrast)
-    return {
-        "period_px": rng.uniform(16, size / 11),
-        "dark_fraction": rng.uniform(0.38, 0.62),
-        "law": str(rng.choice(["normal", "lognormal", "lattice"])),
-        "cv_dark": rng.uniform(0.0, 0.07),
-        "cv_bright": rng.uniform(0.0, 0.07),
-        "wave_amplitude_px": rng.uniform(0, 2),
-        "wave_length_px": rng.uniform(0.6, 1.5) * size,
-        "roughness_px": rng.uniform(0, 0.4),
-        "correlation_length_px": rng.uniform(10, 40),
-        "replication": rng.uniform(0, 0.6),
-        "blur_px": rng.uniform(0.8, 1.4),
-        "noise": contrast * rng.uniform(0.04, 0.2),
-        "bits": rng.choice([8, 16, None]),
-        **levels,
-    }  # fmt: skip
-
-
-def _moderate(rng: np.random.Generator, size: int) -> dict[str, Any]:
-    contrast = rng.uniform(0.25, 0.5)
-    levels = _levels(rng, contrast)
-    return {
-        "period_px": rng.uniform(14, size / 12),
-        "dark_fraction": rng.uniform(0.32, 0.68),
-        "law": str(rng.choice(["normal", "lognormal"])),
-        "cv_dark": rng.uniform(0.04, 0.14),
-        "cv_bright": rng.uniform(0.04, 0.14),
-        "correlation": float(rng.choice([0, 0, 0.5])),
-        "chirp": float(rng.choice([0, 0, 0.3, -0.3])),
-        "radius_px": float(rng.uniform(3, 10) * size) if rng.random() < 0.4 else None,
-        "wave_amplitude_px": rng.uniform(1, 6),
-        "wave_length_px": rng.uniform(0.6, 1.5) * size,
-        "roughness_px": rng.uniform(0.2, 0.9),
-        "correlation_length_px": rng.uniform(10, 40),
-        "replication": rng.uniform(0, 0.8),
-        "blur_px": rng.uniform(0.9, 1.6),
-        "noise": contrast * rng.uniform(0.15, 0.45),
-        "shading": rng.uniform(0, 0.15),
-        "gamma": float(rng.choice([1, 1, rng.uniform(0.85, 1.2)])),
-        "bits": rng.choice([8, 16]),
-        **levels, **_third_levels(rng, levels, 0.3),
-    }  # fmt: skip
-
-
-def _tem(rng: np.random.Generator, size: int) -> dict[str, Any]:
-    contrast = rng.uniform(0.15, 0.4)
-    levels = _levels(rng, contrast)
-    period = rng.uniform(20, size / 11)
-    dark = rng.uniform(0.35, 0.65)
-    thin = period * min(dark, 1 - dark)
-    return {
-        "period_px": period, "dark_fraction": dark,
-        "law": str(rng.choice(["normal", "lognormal"])),
-        "cv_dark": rng.uniform(0.03, 0.12),
-        "cv_bright": rng.uniform(0.03, 0.12),
-        "wave_amplitude_px": rng.uniform(0, 5),
-        "wave_length_px": rng.uniform(0.6, 1.5) * size,
-        "roughness_px": rng.uniform(0.1, 0.7),
-        "correlation_length_px": rng.uniform(10, 40),
-        "replication": rng.uniform(0, 0.8),
-        "blur_px": rng.uniform(0.9, 1.5),
-        "projection_px": float(min(rng.uniform(0, 5), 0.45 * thin)),
-        "mass_thickness": True,
-        "dose": float(np.exp(rng.uniform(np.log(60), np.log(600)))),
-        "noise": 0.01,
-        "shading": rng.uniform(0, 0.1),
-        "bits": rng.choice([16, None]),
-        **levels, **_third_levels(rng, levels, 0.35),
-    }  # fmt: skip
-
-
-def _sem(rng: np.random.Generator, size: int) -> dict[str, Any]:
-    contrast = rng.uniform(0.25, 0.45)
-    levels = _levels(rng, contrast)
-    return {
-        "period_px": rng.uniform(18, size / 11),
-        "dark_fraction": rng.uniform(0.33, 0.67),
-        "law": str(rng.choice(["normal", "lognormal"])),
-        "cv_dark": rng.uniform(0.04, 0.14),
-        "cv_bright": rng.uniform(0.04, 0.14),
-        "wave_amplitude_px": rng.uniform(0, 5),
-        "wave_length_px": rng.uniform(0.6, 1.5) * size,
-        "roughness_px": rng.uniform(0.2, 0.9),
-        "correlation_length_px": rng.uniform(10, 40),
-        "replication": rng.uniform(0, 0.8),
-        "blur_px": rng.uniform(1.0, 1.8),
-        "edge_bump": rng.uniform(0.05, 0.3),
-        "edge_bump_px": rng.uniform(1.2, 2.4),
-        "noise": contrast * rng.uniform(0.15, 0.45),
-        "curtains": rng.uniform(0, 0.06),
-        "charging": contrast * rng.uniform(0, 0.1),
-        "shading": rng.uniform(0, 0.15),
-        "gamma": rng.uniform(0.7, 1.4),
-        "bits": 8, "inverted": False,
-        "banner_rows": int(size * 0.08) if rng.random() < 0.5 else 0,
-        **levels, **_third_levels(rng, levels, 0.35),
-    }  # fmt: skip
-
-
-def _hard(rng: np.random.Generator, size: int) -> dict[str, Any]:
-    base = _moderate(rng, size)
-    contrast = base["bright_level"] - base["dark_level"]
-    base.update(
-        cv_dark=rng.uniform(0.08, 0.2), cv_bright=rng.uniform(0.08, 0.2),
-        period_px=rng.uniform(14, size / 14),
-        wave_amplitude_px=rng.uniform(3, 12), wave_length_px=rng.uniform(0.5, 1.2) * size,
-        radius_px=float(rng.uniform(0.9, 3) * size) if rng.random() < 0.4 else None,
-        roughness_px=rng.uniform(0.4, 1.2), noise=contrast * rng.uniform(0.3, 0.7),
-        curtains=rng.uniform(0, 0.06), charging=contrast * rng.uniform(0, 0.1),
-        cracks=int(rng.integers(0, 3)), debris=int(rng.integers(0, 4)),
-        missing=int(rng.random() < 0.3), terminations=int(rng.random() < 0.4),
-        edge_bump=float(rng.choice([0, rng.uniform(0, 0.25)])), bits=8,
-    )  # fmt: skip
-    return base
-
-
-def _brutal(rng: np.random.Generator, size: int) -> dict[str, Any]:
-    base = _hard(rng, size)
-    contrast = base["bright_level"] - base["dark_level"]
-    inside = rng.random() < 0.2
-    base.update(
-        period_px=rng.uniform(10, size / 14), dark_fraction=rng.uniform(0.22, 0.78),
-        noise=contrast * rng.uniform(0.5, 1.1),
-        drift_px=float(rng.normal(0, 8)), drift_wander_px=rng.uniform(0, 1.5),
-        jpeg_quality=int(rng.integers(50, 90)) if rng.random() < 0.5 else None,
-        banner_rows=int(size * 0.08) if rng.random() < 0.3 else 0,
-        cracks=int(rng.integers(0, 4)), debris=int(rng.integers(0, 6)),
-    )  # fmt: skip
-    if inside:
-        base.update(
-            radius_px=0.35 * size, centre=(rng.uniform(0.2, 0.8) * size, rng.uniform(0.2, 0.8) * size),
-            wave_amplitude_px=rng.uniform(0, 4), drift_px=0.0, resin_level=None, substrate_level=None,
-            terminations=0, missing=0,
-        )  # fmt: skip
-    return base
-
-
-_DRAWS = {"easy": _easy, "moderate": _moderate, "tem": _tem, "sem": _sem, "hard": _hard, "brutal": _brutal}
 
 
 def make_section(kind: str, seed: int, shape: tuple[int, int] = (512, 512)) -> tuple[np.ndarray, Truth]:

@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 from functools import lru_cache
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
@@ -54,7 +54,7 @@ class OrientationMap:
 
 
 @lru_cache(maxsize=8)
-def _tile_grid(rows: int, columns: int, lowest: float) -> dict[str, NDArray[np.float64]]:
+def _tile_grid(rows: int, columns: int, lowest: float) -> dict[str, NDArray[Any]]:
     """Window, frequencies and the half plane of the band for one tile shape."""
     window = np.outer(np.hanning(rows + 2)[1:-1], np.hanning(columns + 2)[1:-1])
     ky = np.fft.fftfreq(rows)[:, None] + np.zeros((1, columns))
@@ -91,8 +91,8 @@ def analyse_tiles(level: Level, *, hop: int | None = None, tile: int = TILE_PX, 
     Notes
     -----
     The spectrum is weighted by |k| before the strongest line is chosen, since the background of real pictures is red.
-    ``contrast`` compares the 3 x 3 bins of the line with the mean of the ring of the same |k| (within a third) more than
-    35 degrees away: random texture, foams and spinodal patterns fill the ring, lattices put further lines on it.
+    ``contrast`` compares the 3 x 3 bins of the line with the mean of the ring of the same |k| (within a third) more
+    than 35 degrees away: random texture, foams and spinodal patterns fill the ring, lattices put further lines on it.
     The direction is the principal axis of the energy near the line (Bigun and Granlund 1987, restricted to a band).
     It cannot see layers fewer than ``lowest`` to a tile: those are found on a coarser level.
     """
@@ -144,7 +144,7 @@ def _starts(length: int, tile: int, hop: int | None) -> IntArray:
     return np.rint(np.linspace(0, length - tile, count)).astype(np.int64)
 
 
-def _strongest_line(power: NDArray[np.float32], grid: dict[str, NDArray[np.float64]]) -> FloatArray:
+def _strongest_line(power: NDArray[np.float32], grid: dict[str, NDArray[Any]]) -> FloatArray:
     """Angle [rad], frequency, contrast, coherence, second line over first, energy of spectra (tiles, rows, columns)."""
     from layerscan.measurement.orientation_kernels import scan_lines
 
@@ -152,7 +152,7 @@ def _strongest_line(power: NDArray[np.float32], grid: dict[str, NDArray[np.float
     near = near + np.roll(near, 1, 2) + np.roll(near, -1, 2)
     out = np.empty((len(power), 6))
     flat = (len(power), -1)
-    scan_lines(power.reshape(flat), near.reshape(flat), grid["band"].astype(np.int64), grid["ky"], grid["kx"], out)
+    scan_lines(power.reshape(flat), near.reshape(flat), grid["band"], grid["ky"], grid["kx"], out)
     return out
 
 
@@ -212,7 +212,9 @@ def trace_grid(
         Step along the layers in level pixels.
     """
     count = math.ceil(math.hypot(*shape) / stride)
-    spine_r, spine_c, middle = _both_ways(field, shape, np.array([seed[0]]), np.array([seed[1]]), 1.0, count * stride, True)
+    spine_r, spine_c, middle = _both_ways(
+        field, shape, np.array([seed[0]]), np.array([seed[1]]), 1.0, count * stride, True
+    )
     keep = _within(spine_r[0], spine_c[0], shape)
     low, high = _run_around(keep, middle)
     line_r, line_c = spine_r[0, low : high + 1], spine_c[0, low : high + 1]
@@ -296,7 +298,13 @@ class Rotation:
 
 
 def refine_orientation(
-    image: NDArray[np.float32], use: BoolArray, *, angle_deg: float, step_px: float = 0.5, blur_px: float = 0.7, rounds: int = 8
+    image: NDArray[np.float32],
+    use: BoolArray,
+    *,
+    angle_deg: float,
+    step_px: float = 0.5,
+    blur_px: float = 0.7,
+    rounds: int = 8,
 ) -> Rotation:
     """Fit one direction to flat layers by least squares on all pixels, with a free profile across the layers.
 
@@ -322,9 +330,9 @@ def refine_orientation(
     Notes
     -----
     With f the profile of the depth d and s the lateral place, a small turn changes d by s: Gauss-Newton on
-    sum (I - f(d + s dtheta))^2. Every harmonic and every disorder of the stack is in f, so for white noise the result is
-    at the Cramer-Rao bound sigma^2 / sum (f' s)^2 with f known, but for what f costs. It cannot see waviness: for wavy
-    layers the answer is the straight line that fits best.
+    sum (I - f(d + s dtheta))^2. Every harmonic and every disorder of the stack is in f, so for white noise the result
+    is at the Cramer-Rao bound sigma^2 / sum (f' s)^2 with f known, but for what f costs. It cannot see waviness: for
+    wavy layers the answer is the straight line that fits best.
     """
     from layerscan.measurement.orientation_kernels import lateral_shifts, rotation_normal_equations
 
@@ -366,7 +374,13 @@ def refine_orientation(
 
 
 def _profile_across(
-    image: NDArray[np.float32], use: BoolArray, theta: float, origin: FloatArray, step_px: float, blur_px: float, count: int
+    image: NDArray[np.float32],
+    use: BoolArray,
+    theta: float,
+    origin: FloatArray,
+    step_px: float,
+    blur_px: float,
+    count: int,
 ) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Mean intensity against depth for a direction, a little smoothed, its slope, and the pixels in each bin."""
     from scipy.ndimage import gaussian_filter1d

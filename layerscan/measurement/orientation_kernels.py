@@ -20,7 +20,8 @@ if TYPE_CHECKING:
 def scan_lines(power: F4, near: F4, band: I8, ky: F8, kx: F8, out: F8) -> None:
     """Strongest line of each spectrum: angle [rad], frequency, contrast, coherence, second line over first, energy.
 
-    ``power`` and ``near`` (3 x 3 sums) are (tiles, bins); ``band`` picks the bins of the half plane; ``out`` (tiles, 6).
+    ``power`` and ``near`` (3 x 3 sums) are (tiles, bins); ``band`` picks the bins of the half plane;
+    ``out`` is (tiles, 6).
     """
     count = len(band)
     k2 = ky * ky + kx * kx
@@ -98,7 +99,8 @@ def follow(
     """Integrate (second-order Runge-Kutta) from each point; fills ``path`` (points, steps + 1).
 
     ``across`` follows the normal, else the layers; ``first`` says which way to set off. A path that has left the frame
-    (``limits`` = margin, last row, last column) by more than the margin, or has turned by more than 120 degrees, ends: what is left is set far outside.
+    (``limits`` = margin, last row, last column) by more than the margin, or has turned by more than 120 degrees,
+    ends: what is left is set far outside.
     """
     for p in range(len(row)):
         r, c = row[p], column[p]
@@ -178,7 +180,7 @@ def bin_profile(
 def rotation_normal_equations(
     image: F4, use: NDArray[np.bool_], cos: float, sin: float, origin: F8, width: float, profile: F8, slope: F8
 ) -> tuple[float, float, float, float]:
-    """Sums over pixels of f'^2 s^2, f' s r, r^2 and 1, where r is the misfit to the profile f and s the lateral place."""
+    """Sums over pixels of f'^2 s^2, f' s r, r^2 and 1; r is the misfit to the profile f, s the lateral place."""
     a, b, e, n = 0.0, 0.0, 0.0, 0.0
     for r in range(image.shape[0]):
         base = (r - origin[0]) * sin - origin[1] * cos - origin[2]

@@ -19,8 +19,8 @@ if TYPE_CHECKING:
 class Level:
     """One level: the picture averaged over ``factor`` x ``factor`` pixels, holes filled with the local mean.
 
-    ``valid`` is the share of usable pixels in each (0 to 1), None where every pixel is usable. Pixel (r, c) of the level
-    is centred at ``r * factor + (factor - 1) / 2`` of the page.
+    ``valid`` is the share of usable pixels in each (0 to 1), None where every pixel is usable. Pixel (r, c) of the
+    level is centred at ``r * factor + (factor - 1) / 2`` of the page.
     """
 
     intensity: Float32Array

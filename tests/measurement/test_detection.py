@@ -66,7 +66,20 @@ def test_nearly_all_layered_sections_are_found(kind):
     assert np.mean(found) >= 0.98
 
 
-PICTURES = ("astronaut", "brick", "camera", "cell", "chelsea", "coffee", "coins", "grass", "gravel", "moon", "page", "text")
+PICTURES = (
+    "astronaut",
+    "brick",
+    "camera",
+    "cell",
+    "chelsea",
+    "coffee",
+    "coins",
+    "grass",
+    "gravel",
+    "moon",
+    "page",
+    "text",
+)
 
 
 @pytest.mark.parametrize("name", PICTURES)
@@ -139,7 +152,13 @@ def test_contrast_and_scale_of_grey_do_not_matter():
 def test_region_within_a_larger_picture():
     # a stack between resin and substrate: the map covers most of it and little else
     recipe = Recipe(
-        layers=16, period_px=18.0, orientation_deg=90.0, resin_level=0.6, substrate_level=0.4, noise=0.12, pixel_size_nm=1.0
+        layers=16,
+        period_px=18.0,
+        orientation_deg=90.0,
+        resin_level=0.6,
+        substrate_level=0.4,
+        noise=0.12,
+        pixel_size_nm=1.0,
     )
     image, truth = render_section(recipe, 4, (640, 800))
     found = _detect(image)
@@ -267,7 +286,9 @@ def test_real_irregular_lamellae_have_direction_and_spacing_only():
     assert found.u_period_px > 0.05 * found.period_px
 
 
-@pytest.mark.parametrize("name", ["sem-coating/coating_a.tif", "sem-coating/coating_b.tif", "sem-coating/coating_c.tif"])
+@pytest.mark.parametrize(
+    "name", ["sem-coating/coating_a.tif", "sem-coating/coating_b.tif", "sem-coating/coating_c.tif"]
+)
 def test_real_coatings_are_no_stack(name):
     # shared/real/INDEX.md: one layer of oxide, thickness known from the mask
     assert not detect_layers(_real(name)).layered

@@ -88,7 +88,9 @@ def test_streamlines_stay_on_a_layer():
     tiles = analyse_tiles(level)
     grid = trace_grid(smooth_map(tiles, np.log(np.maximum(tiles.contrast, 1))), image.shape, seed=(160.0, 200.0))
     middle = grid.origin[0]
-    inside = (grid.row[middle] >= 20) & (grid.row[middle] < 300) & (grid.column[middle] >= 20) & (grid.column[middle] < 380)
+    inside = (
+        (grid.row[middle] >= 20) & (grid.row[middle] < 300) & (grid.column[middle] >= 20) & (grid.column[middle] < 380)
+    )
     depth, _ = truth.coordinates(grid.row[middle, inside], grid.column[middle, inside])
     assert inside.sum() > 50
     assert np.ptp(depth) < 3.0

@@ -19,9 +19,7 @@ CLEAN = {"noise": 0.0, "cv_dark": 0.0, "cv_bright": 0.0, "pixel_size_nm": 1.0}
 
 
 @settings(deadline=None, derandomize=True, max_examples=20)
-@given(
-    orientation=st.floats(0, 179.9), radius=st.one_of(st.none(), st.floats(200, 3000)), drift=st.floats(-10, 10)
-)
+@given(orientation=st.floats(0, 179.9), radius=st.one_of(st.none(), st.floats(200, 3000)), drift=st.floats(-10, 10))
 def test_points_invert_coordinates(orientation, radius, drift):
     # law: the map from picture to (depth, lateral) and its inverse are one another's undoing
     recipe = Recipe(orientation_deg=orientation, radius_px=radius, drift_px=drift, **CLEAN)
