@@ -120,9 +120,10 @@ class LivePlots(QWidget):
             self._heads[phase].setData(table[:, 0], table[:, 1])
             ends = np.stack([table[:, 1] - table[:, 2], table[:, 1] + table[:, 2]], axis=1)
             self._bars[phase].setData(np.repeat(table[:, 0], 2), ends.ravel())
-        if layers:
+        shown = [layer.thickness_nm for layer in layers if layer.complete]
+        if shown:
             self._keep_range(self.thickness, "x", -0.5, layers[-1].index + 0.5)
-            self._keep_range(self.thickness, "y", 0.0, max(layer.thickness_nm for layer in layers))
+            self._keep_range(self.thickness, "y", 0.0, max(shown))
 
     def show_prediction(self, prediction: Prediction | None) -> None:
         """Predicted spectrum with its 95 % band where there is one."""
