@@ -168,7 +168,7 @@ def _with_observed(
         observed_wavelength_nm=tuple(document["wavelength_nm"]),
         observed=_numbers(document["value"]),
         observed_u=None if u is None else _numbers(u),
-        observed_colour=read_colour(next(iter((document.get("colours") or {}).values()), None)),
+        observed_colour=_colour_like(document, pair.predicted_colour),
         flags=tuple(dict.fromkeys([*pair.flags, *(document.get("flags") or ())])),
     )
     if compared is None or compared.document is None:
@@ -214,7 +214,7 @@ def specimen_rows(
         spectra = observed_spectra(results, specimen)
         predicted, observed = matched_peaks(specimen) or (predicted_peak(specimen), observed_peak(spectra))
         image = representative_image(specimen)
-        prediction = (image.prediction if image else None) or {}
+        colour = read_colour(((image.prediction if image else None) or {}).get("colour"))
         estimates = [e for name in quantities if (e := specimen.estimate(name)) is not None]
         rows.append(
             SpecimenRow(
@@ -227,8 +227,8 @@ def specimen_rows(
                 observed_peak_nm=observed.mean_nm if observed else None,
                 u_observed_peak_nm=observed.u_nm if observed else None,
                 conclusion=conclude(_conclusions(specimen)),
-                predicted_colour=read_colour(prediction.get("colour")),
-                observed_colour=_first_colour(spectra),
+                predicted_colour=colour,
+                observed_colour=_first_colour(spectra, colour),
             )
         )
     return tuple(rows)
@@ -239,12 +239,17 @@ def _conclusions(specimen: Specimen) -> list[str]:
     return [str(task.document["agreement"]["conclusion"]) for task in tasks if task.document is not None]
 
 
-def _first_colour(spectra: Sequence[SpectrumResult]) -> Colour | None:
-    for spectrum in spectra:
-        colours = (spectrum.document or {}).get("colours") or {}
-        if colours:
-            return read_colour(next(iter(colours.values())))
-    return None
+def _colour_like(document: Mapping[str, Any], like: Colour | None) -> Colour | None:
+    """The colour under the illuminant and observer of ``like``; the first one where that is None."""
+    colours = document.get("colours") or {}
+    if like is None:
+        return read_colour(next(iter(colours.values()), None))
+    return read_colour(colours.get(f"{like.illuminant}/{like.observer_deg}"))
+
+
+def _first_colour(spectra: Sequence[SpectrumResult], like: Colour | None) -> Colour | None:
+    found = (_colour_like(spectrum.document or {}, like) for spectrum in spectra)
+    return next((colour for colour in found if colour is not None), None)
 
 
 def peak_pairs(results: StudyResults, specimens: Sequence[Specimen]) -> tuple[PeakPair, ...]:

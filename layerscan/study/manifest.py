@@ -32,11 +32,14 @@ def read_pattern(pattern: str, place: str, known: Mapping[str, Any]) -> tuple[st
         elif part in ("*", "?"):
             glob_text, expression = glob_text + part, expression + ("[^/]*" if part == "*" else "[^/]")
         elif part.startswith("[") and part.endswith("]"):
-            inner = part[1:-1].replace("\\", r"\\")
+            inner = part[1:-1].replace("\\", r"\\").replace("[", r"\[")
             glob_text, expression = glob_text + part, expression + f"[{'^' + inner[1:] if inner[0] == '!' else inner}]"
         else:
             glob_text, expression = glob_text + glob.escape(part), expression + re.escape(part)
-    return glob_text, re.compile(expression)
+    try:
+        return glob_text, re.compile(expression)
+    except re.error as error:
+        raise SettingsError(f"{place}: pattern '{pattern}' cannot be read ({error}). Correct it.") from None
 
 
 def read_column(text: str, file_name: str, kind: type[Settings]) -> tuple[str, ...]:

@@ -209,6 +209,8 @@ class _Folders:
             name.encode()
         except UnicodeEncodeError:
             raise InputError(f"{place}: the file name {name!r} is no valid Unicode. Rename the file.") from None
+        if "\0" in name:
+            raise InputError(f"{place}: the file name {name!r} holds a null character. Correct it.")
         path = os.path.join(self.root, name)
         parent, base = os.path.split(path)
         if parent not in self.listed:

@@ -152,6 +152,24 @@ def test_paths_stay_inside_the_study_unless_allowed(make_study, tmp_path, name):
     assert len(read_plan(folder).images) == 1
 
 
+@pytest.mark.parametrize(
+    ("name", "message"),
+    [("a\\u0000b.tif", "holds a null character"), ("[z-a]*.tif", "cannot be read .*bad character range")],
+)
+def test_names_that_no_file_can_have_are_refused(make_study, name, message):
+    # bad input
+    with pytest.raises((InputError, SettingsError), match=message):
+        read_plan(make_study({}, f'[[images]]\nfile = "{name}"\nspecimen = "1"\n'))
+
+
+def test_a_file_name_that_is_no_unicode_is_refused(make_study):
+    # POSIX names are bytes; what cannot be written into a report is refused before anything runs
+    folder = make_study({}, '[[images]]\nfile = "*.tif"\nspecimen = "1"\n')
+    (folder / os.fsdecode(b"\xff.tif")).write_text("1")
+    with pytest.raises(InputError, match="no valid Unicode"):
+        read_plan(folder)
+
+
 def test_an_absolute_pattern_is_refused_too(make_study):
     # a glob must not list what lies outside
     with pytest.raises(InputError, match="lies outside"):

@@ -77,7 +77,7 @@ def make_image(group: str, specimen: str, section: int, period: float, **more) -
         "lower": None,
         "upper": None,
         "peaks": [peak],
-        "colour": None,
+        "colour": COLOUR,
         "materials": [
             {"name": "chitin", "source": "a paper", "doi": None, "status": "published", "range_nm": [400, 700]}
         ],
@@ -128,7 +128,7 @@ def make_spectrum(group: str, specimen: str, peak_nm: float) -> SpectrumResult:
         "value": [0.1, 0.6, None],
         "u": None,
         "peaks": [peak],
-        "colours": {"D65/10": {**COLOUR, "observer_deg": 10}},
+        "colours": {"D65/10": {**COLOUR, "observer_deg": 10}, "D65/2": COLOUR},
         "flags": [],
     }
     row = {"path": f"{specimen}.csv", "group": group, "specimen": specimen, "spot": "1", "reference": "mirror"}
@@ -311,6 +311,8 @@ def test_predicted_and_observed_peaks_meet_specimen_by_specimen():
     assert "compatible with the 1:1 line" in summary.answer
     assert len(summary.light) == 6
     assert {row.conclusion for row in summary.specimens} == {"explains"}
+    assert {row.observed_colour.observer_deg for row in summary.specimens} == {2}  # as the predicted one
+    assert {pair.observed_colour.observer_deg for pair in summary.light} == {2}
     assert math.isnan(summary.light[0].observed[2])
     assert [m.name for m in summary.methods.materials] == ["chitin"]
 
