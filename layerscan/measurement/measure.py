@@ -23,6 +23,7 @@ if TYPE_CHECKING:
 
 PHASE_NAMES: tuple[Phase, ...] = ("dark", "bright", "other")
 SATURATED_SHARE = 0.01
+WAVES = 3  # bending with fewer waves across the field is waviness, with more it is roughness
 DIRECTION_DOUBT = 0.35  # of what bending takes off lengths; common practice, no source: fits made sections
 
 
@@ -363,18 +364,28 @@ def _field_flags(straight: StraightField) -> tuple[str, ...]:
 
 
 def _roughness(followed: FollowedStack, straight: StraightField) -> tuple[FloatArray, FloatArray]:
-    """Rms and correlation length of each boundary [px], from its covariance extrapolated to zero lag."""
+    """Rms and correlation length of each boundary [px], from its covariance extrapolated to zero lag.
+
+    What bends with fewer than ``WAVES`` waves across the field is waviness; the rest of the alignment is roughness that
+    neighbouring boundaries share, and is added to each boundary's own.
+    """
+    from scipy.fft import dct, idct
+
     from layerscan.measurement.traces import fit_covariance, pooled_covariance
 
-    raw, valid = followed.traces.raw, followed.valid
-    edges, stations = raw.shape
-    longest = int(min(max(stations // 4, 4), 64))
+    valid = followed.valid
+    edges, stations = valid.shape
     if stations < 32:
         return np.full(edges, np.nan), np.full(edges, np.nan)
-    own = np.empty((longest + 1, edges))
-    for b in range(edges):
-        level = raw[b][valid[b]].mean() if valid[b].any() else 0.0
-        own[:, b] = pooled_covariance(np.where(valid[b], raw[b] - level, 0.0)[None], valid[b][None], longest)[0]
+    number = np.broadcast_to(np.arange(stations), valid.shape)
+    place = np.broadcast_to(followed.first + followed.stack.position[:, None], valid.shape)
+    bend = dct(straight.frame_depth(place, number), axis=1)
+    bend[:, : 2 * WAVES + 1] = 0.0
+    raw = followed.traces.raw + idct(bend, axis=1)
+    longest = int(min(max(stations // 4, 4), 64))
+    level = np.where(valid, raw, 0.0).sum(axis=1) / np.maximum(valid.sum(axis=1), 1)
+    off = np.where(valid, raw - level[:, None], 0.0)
+    own = np.stack([pooled_covariance(off[b : b + 1], valid[b : b + 1], longest)[0] for b in range(edges)], axis=1)
     variance, length, _ = fit_covariance(own)
     enough = valid.sum(axis=1) >= 32
     rms = np.where(enough, np.sqrt(variance), np.nan)

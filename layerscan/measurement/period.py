@@ -162,7 +162,9 @@ def _refine_best(
     value: FloatArray, x: FloatArray, frequency: float, harmonics: int
 ) -> tuple[float, int, FloatArray, float]:
     """Refine the start and its multiples, which explain a profile as well with fewer harmonics; best by BIC."""
-    tried = [_refine(value, x, frequency * k, harmonics) for k in range(1, harmonics + 1) if k == 1 or frequency * k < 0.4]
+    tried = [
+        _refine(value, x, frequency * k, harmonics) for k in range(1, harmonics + 1) if k == 1 or frequency * k < 0.4
+    ]
     best = min(tried, key=lambda fit: fit[0])
     return best[1], best[2], best[3], best[4]
 

@@ -9,7 +9,7 @@ covariance to zero lag leaves over.
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -32,6 +32,7 @@ class RoughnessModel:
     hurst: float
     noise_variance: float
     replication: float
+    noise_neighbour: float = 0.0  # correlation of the noise of neighbouring stations
 
     def covariance(self, lag: FloatArray) -> FloatArray:
         """Covariance at lags in stations."""
@@ -182,10 +183,11 @@ def pooled_covariance(raw: FloatArray, valid: BoolArray, longest: int) -> tuple[
     return own / np.maximum(number, 0.5), cross / np.maximum(cross_number, 0.5)
 
 
-HURST_GRID = (0.35, 0.5, 0.6, 0.7, 0.8, 1.0)
+HURST_GRID = (0.4, 0.5, 0.6, 0.7, 0.8, 1.0)
+FIRST_LAG = 2  # interpolation lets neighbouring stations share noise, stations further apart do not
 
 
-def fit_covariance(own: FloatArray, first_lag: int = 1) -> tuple[FloatArray, FloatArray, FloatArray]:
+def fit_covariance(own: FloatArray, first_lag: int = FIRST_LAG) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Extrapolate covariances to lag zero: fit a stretched exponential and a constant to lags from ``first_lag`` on.
 
     Parameters
@@ -238,7 +240,7 @@ def fit_covariance(own: FloatArray, first_lag: int = 1) -> tuple[FloatArray, Flo
     return variance, grid[best, 1], grid[best, 0]
 
 
-def fit_roughness(own: FloatArray, cross: FloatArray, first_lag: int = 1) -> RoughnessModel:
+def fit_roughness(own: FloatArray, cross: FloatArray, first_lag: int = FIRST_LAG) -> RoughnessModel:
     """Roughness model of all traces from their pooled covariance and the cross-covariance of neighbours."""
     total = float(own[0])
     variance, length, hurst = (float(x[0]) for x in fit_covariance(own[:, None], first_lag))
@@ -246,9 +248,19 @@ def fit_roughness(own: FloatArray, cross: FloatArray, first_lag: int = 1) -> Rou
     near = slice(first_lag, min(first_lag + 4, len(own)))
     denominator = float(own[near].sum())
     replication = float(np.clip(cross[near].sum() / denominator, 0.0, 0.98)) if denominator > 0.05 * total else 0.0
-    return RoughnessModel(
+    model = RoughnessModel(
         variance=max(variance, 1e-12), length=length, hurst=hurst, noise_variance=noise, replication=replication
     )
+    if len(own) < 3:
+        return model
+    neighbour = (float(own[1]) - _offset(own, model, first_lag, 1)) / noise
+    return replace(model, noise_neighbour=float(np.clip(neighbour, 0.0, 0.4)))
+
+
+def _offset(own: FloatArray, model: RoughnessModel, first_lag: int, lag: int) -> float:
+    """Covariance of the roughness alone at a short lag: the model's, moved to where the measured ones continue it."""
+    fitted = model.covariance(np.array([float(lag), float(first_lag)]))
+    return float(fitted[0] + min(float(own[first_lag]) - fitted[1], 0.0))
 
 
 def smooth_traces(
@@ -273,7 +285,9 @@ def smooth_traces(
     index = np.arange(edges)
     coupling, vectors = np.linalg.eigh(model.replication ** np.abs(index[:, None] - index[None, :]))
     coupling = np.maximum(coupling, 1e-6)[:, None]
-    gain = coupling * power / (coupling * power + model.noise_variance)
+    turn = np.cos(2 * np.pi * np.arange(len(power)) / size)
+    noise = model.noise_variance * np.maximum(1 + 2 * model.noise_neighbour * turn, 0.05)
+    gain = coupling * power / (coupling * power + noise)
     estimate = np.where(valid, raw - level[:, None], 0.0)
     fraction = valid.mean()
     smooth = np.zeros_like(estimate)
@@ -285,7 +299,7 @@ def smooth_traces(
         smooth = vectors @ filtered
     weights = np.full(power.shape, 2.0)
     weights[0] = weights[-1] = 1.0
-    variance = (weights * gain * model.noise_variance).sum(axis=1) / size
+    variance = (weights * gain * noise).sum(axis=1) / size
     u = np.sqrt(vectors**2 @ variance)
     spread = np.where(valid, u[:, None], math.sqrt(model.variance + model.noise_variance))
     own = (vectors**2 @ ((weights * gain).sum(axis=1) / size))[:, None]
