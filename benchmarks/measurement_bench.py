@@ -4,8 +4,8 @@
     python benchmarks/measurement_bench.py --only kinds --kinds easy,tem --seeds 0:5
     python benchmarks/measurement_bench.py --write              also benchmarks/results/measurement.json and the figure
 
-Parts: kinds, lattice, disordered, isolated, traces, detection, cost. Bounds are Cramer-Rao bounds: of the period of a
-periodic profile, and of a boundary of height D blurred by s: sqrt(2 sqrt(pi) s sigma^2 / W) / D.
+Parts: kinds, lattice, disordered, isolated, traces, detection, cost, null. Bounds are Cramer-Rao bounds: of the period
+of a periodic profile, and of a boundary of height D blurred by s: sqrt(2 sqrt(pi) s sigma^2 / W) / D.
 """
 
 from __future__ import annotations
@@ -31,7 +31,7 @@ from sections import KINDS, Recipe, Truth, make_section, render_section  # noqa:
 from layerscan.records import Boundary, Exclusion, Layer, Measurement, Micrograph, PixelSize  # noqa: E402
 from layerscan.settings import MeasureSettings  # noqa: E402
 
-PARTS = ("kinds", "lattice", "disordered", "isolated", "traces", "detection", "cost")
+PARTS = ("kinds", "lattice", "disordered", "isolated", "traces", "detection", "cost", "null")
 RESULTS = ROOT / "benchmarks" / "results"
 
 
@@ -429,6 +429,18 @@ def run_detection(kinds: list[str], seeds: range, negatives: int) -> dict[str, A
     return out
 
 
+def run_null(seeds: range) -> dict[str, Any]:
+    """Quantiles of the statistic over pictures without layers: where the p-value of a detection comes from."""
+    from layerscan.measurement.detection import detect_layers
+
+    found = [detect_layers(make_negative(kind, seed).astype(np.float32)) for kind in NEGATIVES for seed in seeds]
+    statistic = np.array([one.statistic or 0.0 for one in found if "scan_lines" not in one.flags])
+    share = (0.5, 0.2, 0.1, 0.05, 0.02, 0.01, 0.005, 0.001)
+    out = {"pictures": len(statistic), **{f"share {s}": float(np.quantile(statistic, 1 - s)) for s in share}}
+    show("null", out)
+    return out
+
+
 def _not_banner(truth: Truth) -> np.ndarray:
     mask = np.ones(truth.shape, dtype=bool)
     if truth.recipe.banner_rows:
@@ -528,7 +540,7 @@ def parse_seeds(text: str) -> range:
 
 def main(arguments: list[str] | None = None) -> dict[str, Any]:
     parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
-    parser.add_argument("--only", default=",".join(PARTS), help="parts, separated by commas")
+    parser.add_argument("--only", default=",".join(PARTS[:-1]), help=f"parts, separated by commas: {', '.join(PARTS)}")
     parser.add_argument("--kinds", default=",".join(KINDS))
     parser.add_argument("--seeds", default="0:12", help="FIRST:LAST, half-open, or a count")
     parser.add_argument("--negatives", type=int, default=180)
@@ -552,6 +564,8 @@ def main(arguments: list[str] | None = None) -> dict[str, Any]:
         out["traces"] = run_traces(seeds)
     if "detection" in parts:
         out["detection"] = run_detection(kinds, seeds, options.negatives)
+    if "null" in parts:
+        out["null"] = run_null(seeds)
     if "cost" in parts:
         out["cost"] = run_cost(options.largest)
     if options.write:

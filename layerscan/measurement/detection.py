@@ -20,6 +20,7 @@ from layerscan.measurement.evidence import (
     judge_candidate,
     layer_statistic,
     measure_purity,
+    p_value_of,
 )
 from layerscan.measurement.layered_area import global_direction, map_layers, mean_direction, pooled_spacing
 from layerscan.measurement.orientation import Tiles, analyse_tiles
@@ -203,7 +204,7 @@ def _not_layered(best: _Judged, judged: list[_Judged]) -> LayerDetection:
     aligned = [one for one in judged if alignment_statistic(one.evidence) > 1]
     if not aligned:
         return LayerDetection(
-            layered=False, periodic=False, statistic=best.statistic, p_value=None, region=None,
+            layered=False, periodic=False, statistic=best.statistic, p_value=p_value_of(best.statistic), region=None,
             flags=("no_layers_found",), evidence=best.evidence, reason="weak",
         )  # fmt: skip
     one = aligned[0]
@@ -214,7 +215,7 @@ def _not_layered(best: _Judged, judged: list[_Judged]) -> LayerDetection:
         layered=False,
         periodic=False,
         statistic=best.statistic,
-        p_value=None,
+        p_value=p_value_of(best.statistic),
         region=None,
         aligned=True,
         orientation_deg=orientation,
@@ -243,7 +244,7 @@ def _layered(best: _Judged, levels: tuple[Level, ...]) -> LayerDetection:
     harmonics, wander = measure_purity(candidate, straight, levels)
     if is_hum(direction.angle_deg, harmonics, level.factor / candidate.frequency, levels):
         return LayerDetection(
-            layered=False, periodic=False, statistic=statistic, p_value=None, region=None,
+            layered=False, periodic=False, statistic=statistic, p_value=p_value_of(statistic), region=None,
             flags=("no_layers_found", "scan_lines"), evidence=evidence, reason="one sinusoid locked to the scan lines",
         )  # fmt: skip
     flags = ["orientation_varies"] if direction.varies else []
@@ -256,7 +257,7 @@ def _layered(best: _Judged, levels: tuple[Level, ...]) -> LayerDetection:
         layered=True,
         periodic=evidence.spacing_cv < 0.25,
         statistic=statistic,
-        p_value=None,
+        p_value=p_value_of(statistic),
         region=region,
         valid=valid,
         valid_step_px=step,
