@@ -22,7 +22,7 @@ from layerscan_napari import __version__, calls
 if TYPE_CHECKING:
     from layerscan.records import Average, Measurement, Micrograph, Prediction, Progress
 
-SCHEMA = "layerscan.desk/1"
+SCHEMA: Literal["layerscan.desk/1"] = "layerscan.desk/1"
 TABLE_COLUMNS = (
     "name", "note", "image", "page", "line", "width", "edited",
     "period_nm", "u_period_nm", "sd_period_nm", "n_period",

@@ -132,7 +132,7 @@ def serve(jobs: BinaryIO, answers: BinaryIO) -> None:
         try:
             result = compute.complete(job, DragBudget(), lambda what, fraction: tell("progress", (what, fraction)))
             assert result.measurement is not None
-            tell("result", (replace(result, job=None), traces.traced_segments(result.measurement)))
+            tell("result", (result, traces.traced_segments(result.measurement)))
         except Exception as error:
             tell("error", error.with_traceback(None))
 

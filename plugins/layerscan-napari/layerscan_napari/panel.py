@@ -238,8 +238,10 @@ class LayerPanel(QWidget):
         self._on_image_chosen()
 
     def _list_images(self, event: Any = None) -> None:
+        from napari.layers import Image
+
         held = self.image
-        found = [layer for layer in self.viewer.layers if layer._type_string == "image" and images.can_measure(layer)]
+        found = [layer for layer in self.viewer.layers if isinstance(layer, Image) and images.can_measure(layer)]
         with QSignalBlocker(self.image_box):
             self._images = found
             self.image_box.clear()
@@ -455,7 +457,8 @@ class LayerPanel(QWidget):
         if result.final:
             self.shown = result
             self._show_doubts(result)
-            self.layers.set_boundaries(len((result.unedited or result.measurement).boundaries))
+            found = result.unedited or result.measurement
+            self.layers.set_boundaries(0 if found is None else len(found.boundaries))
             self.layers.edit_state.setText(notes.edits_in_words(result))
             self.status.setText(" ".join(result.notes) or notes.up_to_date(result))
         elif result.notes:

@@ -134,13 +134,13 @@ class LivePlots(QWidget):
             return
         light = prediction.reflectance
         self._predicted.setData(light.wavelength_nm, light.value)
-        banded = light.lower is not None and light.upper is not None
-        if banded:
+        top = light.value
+        if light.lower is not None and light.upper is not None:
+            top = light.upper
             self._lower.setData(light.wavelength_nm, light.lower)
             self._upper.setData(light.wavelength_nm, light.upper)
-        self._band.setVisible(banded)
+        self._band.setVisible(top is not light.value)
         self._keep_range(self.spectrum, "x", float(light.wavelength_nm[0]), float(light.wavelength_nm[-1]))
-        top = light.upper if banded else light.value
         self._keep_range(self.spectrum, "y", 0.0, float(np.nanmax(top)))
 
     def show_observed(self, observed: Spectrum | None) -> None:

@@ -140,10 +140,12 @@ class WorkControl(QObject):
             self.panel.set_line(tuple(line))
 
     def _find_image(self, path: str | None, page: int) -> Any:
+        wanted = None if path is None else Path(path).resolve()
         for image in self.panel.image_layers():
             micrograph = self.panel.micrograph(image)
-            same = micrograph is not None and micrograph.path is not None and path is not None
-            if same and micrograph.path.resolve() == Path(path).resolve() and micrograph.page == page:
+            if micrograph is None or micrograph.path is None:
+                continue
+            if micrograph.path.resolve() == wanted and micrograph.page == page:
                 return image
         return None
 
@@ -213,7 +215,8 @@ class WorkControl(QObject):
     def collect(self) -> desk.Desk:
         """All of the work as it stands."""
         panel = self.panel
-        entries, selected = [], None
+        entries: list[desk.OpenImage] = []
+        selected = None
         for image in panel.image_layers():
             micrograph = panel.micrograph(image)
             if micrograph is None:
