@@ -242,7 +242,8 @@ def _layered(best: _Judged, levels: tuple[Level, ...]) -> LayerDetection:
     angle = np.degrees(0.5 * np.arctan2(field_map.sin2, field_map.cos2)) % 180
     direction = global_direction(candidate, levels, step, valid)
     harmonics, wander = measure_purity(candidate, straight, levels)
-    if is_hum(direction.angle_deg, harmonics, level.factor / candidate.frequency, levels):
+    hum = valid.mean() > 0.7 and is_hum(direction.angle_deg, harmonics, level.factor / candidate.frequency, levels)
+    if hum:  # it fills the frame, where layers may end
         return LayerDetection(
             layered=False, periodic=False, statistic=statistic, p_value=p_value_of(statistic), region=None,
             flags=("no_layers_found", "scan_lines"), evidence=evidence, reason="one sinusoid locked to the scan lines",

@@ -90,7 +90,7 @@ def global_direction(candidate: Candidate, levels: tuple[Level, ...], step: int,
         use = use & (level.valid > 0.5)
     period = 1 / candidate.frequency * candidate.level.factor / level.factor
     tiles_say = Direction(angle_deg=mean, u_deg=spread / math.sqrt(independent), varies=spread > 2, flat=False)
-    if spread > 8 or use.sum() < 4 * period**2:
+    if spread > 5 or use.sum() < 4 * period**2:
         return tiles_say
     fine = refine_outwards(level.intensity, use, angle_deg=mean, period=period)
     offset = math.radians(abs((fine.angle_deg - mean + 90) % 180 - 90))
