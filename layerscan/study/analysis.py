@@ -458,7 +458,9 @@ def say_next_measurement(budget: Sequence[BudgetRow]) -> tuple[str | None, str |
 def planning_rows(
     specimens: Sequence[Specimen], variance: Sequence[VarianceComponents], study: StudyTable
 ) -> tuple[PlanningRow, ...]:
-    """How many specimens the wanted interval or power takes, with the spread found here."""
+    """How many specimens the wanted interval or power takes, with the spread found here: with images and layers as
+    they are, with twice the images, with twice the layers.
+    """
     sd = {c.level: c.sd for v in variance for c in v.components}
     if "specimen" not in sd or not (study.wanted_half_width or study.wanted_difference):
         return ()
@@ -467,7 +469,6 @@ def planning_rows(
         "sd_specimen_nm": sd["specimen"],
         "sd_image_nm": sd.get("image", 0.0),
         "sd_layer_nm": sd.get("layer", 0.0),
-        "layers": max(1, round(typical_layers(specimens))),
         "level": study.level,
     }
     rows: list[PlanningRow] = []
@@ -478,6 +479,7 @@ def planning_rows(
     if study.wanted_difference:
         difference = parse_quantity(study.wanted_difference, dimension="length").value
         plans.append(lambda **more: plan_power(difference, study.wanted_power, **spread, **more))
+    layers = max(1, round(typical_layers(specimens)))
     for plan in plans:
-        rows += [plan(images=count) for count in dict.fromkeys((images, 2 * images))]
+        rows += [plan(images=m, layers=k) for m, k in ((images, layers), (2 * images, layers), (images, 2 * layers))]
     return tuple(rows)

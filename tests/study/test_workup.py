@@ -371,7 +371,8 @@ def test_wanted_intervals_and_power_are_planned_from_the_spread_found():
     ]
     study = {"wanted_half_width": "3 nm", "wanted_difference": "10 nm", "wanted_power": 0.9}
     summary = summarise(make_results(images, study=study))
-    assert [row.images_per_specimen for row in summary.planning] == [3, 6, 3, 6]
+    assert [row.images_per_specimen for row in summary.planning] == [3, 6, 3, 3, 6, 3]
+    assert [row.layers_per_image for row in summary.planning] == [10, 10, 20, 10, 10, 20]
     assert all(row.specimens_per_group >= 2 for row in summary.planning)
     assert [c.level for c in summary.variance[0].components] == ["specimen", "image", "layer"]
 
