@@ -92,6 +92,7 @@ def find_stack(
         layered = (0, count)
     factor = max(1, int(period // 24))
     edges, phase, dark, bright = _segment(filled, period, layered, factor, variance)
+    edges, phase = _drop_transitions(filled, edges, phase)
     if len(edges) < 4:
         return None
     contrast = bright - dark
@@ -164,6 +165,28 @@ def _segment(
     centres = (np.arange(blocks) + 0.5) * factor - 0.5
     at = np.arange(count)
     return edges, found.phase, np.interp(at, centres, found.level[0]), np.interp(at, centres, found.level[1])
+
+
+def _drop_transitions(filled: FloatArray, edges: FloatArray, phase: IntArray) -> tuple[FloatArray, IntArray]:
+    """Take out an end layer that is but the blurred step between its neighbour and another material beyond."""
+    for last in (False, True):
+        if len(phase) < 6 or phase[-1 if last else 0] != OTHER:
+            continue
+        i = len(phase) - 2 if last else 1  # the end layer; its neighbour inside, the other material outside
+        inside, outside = (i - 1, i + 1) if last else (i + 1, i - 1)
+        width = np.diff(edges)
+        typical = float(np.median(width[phase == phase[i]]))
+        if width[i] >= 0.4 * typical:
+            continue
+        level = [
+            float(np.median(filled[max(math.ceil(edges[k]), 0) : int(edges[k + 1]) + 1])) for k in (inside, i, outside)
+        ]
+        if min(level[0], level[2]) < level[1] < max(level[0], level[2]):
+            middle = 0.5 * (edges[i] + edges[i + 1])
+            edges = np.delete(edges, i if last else i + 1)
+            edges[i if last else 1] = middle
+            phase = np.delete(phase, i)
+    return edges, phase
 
 
 def _start_blur(

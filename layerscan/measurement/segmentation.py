@@ -223,6 +223,7 @@ _STARTS = (
     _Start(low=0.02, high=0.6, dark=0.12),  # thin dark layers between thick bright ones
     _Start(low=0.4, high=0.98, dark=0.88),
 )
+_FAIR_RESIDUAL = 0.25  # the same where both phases are of similar thickness
 _GOOD_RESIDUAL = 0.12  # residual over contrast below which the first start needs no rival
 
 
@@ -275,10 +276,17 @@ def segment_profile(
         cost, residual, found = _train(profile, period, layered, noise, rounds, start)
         if best is None or cost < best[0]:
             best = cost, found
-        if start is _STARTS[0] and residual < _GOOD_RESIDUAL:
+        if start is _STARTS[0] and (residual < _GOOD_RESIDUAL or (residual < _FAIR_RESIDUAL and _is_even(found))):
             break
     assert best is not None
     return best[1]
+
+
+def _is_even(found: Segments) -> bool:
+    """Whether both phases are of similar thickness, so that a start from the middle cannot have missed one."""
+    width = np.diff(found.edge)
+    medians = [float(np.median(width[found.phase == k])) for k in (DARK, BRIGHT) if (found.phase == k).any()]
+    return len(medians) == 2 and max(medians) < 2.2 * min(medians)
 
 
 def _train(
@@ -299,6 +307,7 @@ def _train(
     ends = [_end_level(profile[: layered[0]], period), _end_level(profile[layered[1] :][::-1], period)]
     edge, phase = np.array([0, count]), np.array([OTHER])
     residual = np.zeros(0)
+    outside = np.zeros(0)
     previous: FloatArray | None = None
     for _ in range(rounds):
         density, survival = _duration_tables(log_mean, log_sd, longest, 0.02)
@@ -323,14 +332,31 @@ def _train(
         labels = np.repeat(phase, np.diff(edge))
         fitted = np.where(labels == DARK, level[0], level[1])
         residual = (profile - fitted)[labels != OTHER]
+        outside = _outside_residual(profile, edge, phase)
         rms = 1.4826 * float(np.median(np.abs(residual)))
         spread[:] = max(min(max(rms, 0.1 * contrast), 0.5 * contrast), noise)
     found = Segments(edge=edge.astype(np.float64), phase=phase, level=level, noise=float(spread[0]))
     if len(residual) < 2:
         return math.inf, math.inf, found
     variance = float(np.mean(residual**2)) + noise**2 + 1e-30
-    length = 0.5 * len(residual) * math.log(variance) + 0.5 * len(phase) * math.log(count)
+    # all samples count, those of other materials too: else layers would be given away to them
+    every = (float((residual**2).sum()) + float((outside**2).sum())) / count + noise**2 + 1e-30
+    length = 0.5 * count * math.log(every) + 1.0 * len(phase) * math.log(count)
     return length, math.sqrt(variance) / max(float(np.median(level[1] - level[0])), 1e-12), found
+
+
+def _outside_residual(profile: FloatArray, edge: IntArray, phase: IntArray) -> FloatArray:
+    """Residual of the other materials at both ends about a line through each."""
+    parts = []
+    for side in (0, -1):
+        if phase[side] != OTHER or (side == -1 and len(phase) == 1):
+            continue
+        part = profile[edge[0] : edge[1]] if side == 0 else profile[edge[-2] : edge[-1]]
+        if len(part) > 2:
+            x = np.arange(len(part)) - 0.5 * (len(part) - 1)
+            part = part - part.mean() - x * float((x * part).sum() / (x * x).sum())
+            parts.append(part)
+    return np.concatenate(parts) if parts else np.zeros(0)
 
 
 def _end_level(part: FloatArray, period: float) -> float:
