@@ -9,6 +9,10 @@ DRAG_BUDGET_MS = 16.0
 """Processor time that one refresh may take while the mouse moves: one frame of a 60 Hz screen."""
 
 
+REST = "rest"
+"""The part of a refresh that always runs: reading the line, drawing plots, numbers and marks."""
+
+
 class DragBudget:
     """Chooses the parts of a refresh that fit while dragging; the others follow on release.
 
@@ -35,9 +39,9 @@ class DragBudget:
         return None if not costs else min(median(costs), costs[-1])
 
     def fitting(self, parts: tuple[str, ...]) -> tuple[str, ...]:
-        """The leading parts that fit together; each part needs those before it, so the first misfit ends the list."""
+        """The leading parts that fit beside ``REST``; each needs those before it, so the first misfit ends the list."""
         chosen: list[str] = []
-        total = 0.0
+        total = self.cost_ms(REST) or 0.0
         for part in parts:
             cost = self.cost_ms(part)
             if cost is None or total + cost > self.budget_ms:

@@ -13,7 +13,7 @@ from typing import TYPE_CHECKING, Any, TypeVar
 from layerscan_napari.budget import DragBudget
 
 if TYPE_CHECKING:
-    from layerscan.records import Comparison, Measurement, Micrograph, Prediction, Progress, Spectrum
+    from layerscan.records import Comparison, FloatArray, Measurement, Micrograph, Prediction, Progress, Spectrum
     from layerscan.settings import CompareSettings, MeasureSettings, PredictSettings
 
 R = TypeVar("R")
@@ -37,6 +37,8 @@ class Job:
 class Result:
     """What a job gave. ``following`` names the parts that were too slow for a drag and follow on release.
 
+    ``profile`` is the plain mean along the band, (distance along the line in nm, intensity), where the measurement
+    itself is among those.
     ``unedited`` is the same measurement without corrections by hand, where there are any. ``notes`` say why a
     prediction or comparison is missing.
     """
@@ -49,6 +51,7 @@ class Result:
     following: tuple[str, ...] = ()
     notes: tuple[str, ...] = ()
     final: bool = False
+    profile: tuple[FloatArray, FloatArray] | None = None
 
     @property
     def origin_nm(self) -> float:
@@ -72,7 +75,7 @@ def refresh(job: Job, budget: DragBudget) -> Result:
     following = tuple(part for part in parts if part not in fitting)
     result = Result(job=job, following=following)
     if MEASURE not in fitting:
-        return result
+        return replace(result, profile=band_profile(job))
     try:
         measurement = _timed(budget, MEASURE, lambda: layerscan.measure(job.micrograph, settings=job.measure))
         result = replace(result, measurement=measurement)
@@ -83,6 +86,35 @@ def refresh(job: Job, budget: DragBudget) -> Result:
     except LayerscanError as error:
         result = replace(result, notes=(str(error),))
     return result
+
+
+def band_profile(job: Job) -> tuple[FloatArray, FloatArray] | None:
+    """Distance along the line in nm and intensity averaged across the band; None where the line misses the image.
+
+    The quick look while a line moves: no shear, no boundaries. It runs the way that depth grows in the measurement.
+    """
+    import numpy as np
+    from layerscan.measurement.line import sample_band
+    from layerscan.settings import parse_width
+
+    line, size = job.measure.line, job.micrograph.pixel_size
+    if line is None or size is None:
+        return None
+    ends = [(line[0], line[1]), (line[2], line[3])]
+    rise, run = ends[1][0] - ends[0][0], ends[1][1] - ends[0][1]
+    if rise < 0 or (rise == 0 and run < 0):
+        ends.reverse()
+    value, unit = parse_width(job.measure.width or "10")
+    width_px = value if unit == "px" else value / min(size.row_nm, size.column_nm)
+    band = sample_band(job.micrograph.load(), start=ends[0], stop=ends[1], width_px=width_px)
+    known = np.isfinite(band.intensity)
+    number = known.sum(axis=1)
+    if not number.any():
+        return None
+    total = np.where(known, band.intensity, 0.0).sum(axis=1, dtype=float)
+    mean = np.divide(total, number, out=np.full(len(number), np.nan), where=number > 0)
+    step_nm = np.hypot(rise * size.row_nm, run * size.column_nm) / np.hypot(rise, run)
+    return np.arange(len(mean)) * step_nm, mean
 
 
 def complete(job: Job, budget: DragBudget, progress: Progress | None = None) -> Result:

@@ -7,12 +7,13 @@ with its uncertainty, and replaces what the drag has shown.
 
 from __future__ import annotations
 
+import time
 from typing import TYPE_CHECKING, Any
 
 from qtpy.QtCore import QObject, QTimer, Signal
 
 from layerscan_napari import compute
-from layerscan_napari.budget import DragBudget
+from layerscan_napari.budget import REST, DragBudget
 from layerscan_napari.worker import Task
 
 if TYPE_CHECKING:
@@ -113,6 +114,7 @@ class LiveLine(QObject):
 
     def refresh(self) -> compute.Result | None:
         """Compute and show what fits into a drag, if the line has changed."""
+        start = time.thread_time()
         line = self._read_line()
         if line is None or line == self._line:
             return None
@@ -122,8 +124,11 @@ class LiveLine(QObject):
         job = self._make_job(line)
         if job is None:
             return None
+        begun = time.thread_time()
         result = compute.refresh(job, self.budget)
+        computed = time.thread_time() - begun
         self.refreshed.emit(result)
+        self.budget.record(REST, 1e3 * (time.thread_time() - start - computed))
         return result
 
     # --- on release ---------------------------------------------------------------------------------------------------

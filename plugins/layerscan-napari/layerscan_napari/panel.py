@@ -450,6 +450,9 @@ class LayerPanel(QWidget):
             before = () if result.unedited is None else result.unedited.boundaries
             self.plots.show_measurement(result.measurement, [b.depth_nm - result.origin_nm for b in before])
             self._mark(result)
+        elif result.profile is not None:
+            self.plots.show_profile(*result.profile)
+            self._mark(result)
         if compute.PREDICT not in result.following:
             self.plots.show_prediction(result.prediction)
         self.plots.set_following(result.following)
@@ -532,7 +535,6 @@ class LayerPanel(QWidget):
         self._pick_timer.stop()
         self.live.pause()
         self.field.stop()
-        self.work.cancel()
 
     def _offer_materials(self) -> None:
         """Offer the catalogue's names while a material is typed; the catalogue is read in the background."""

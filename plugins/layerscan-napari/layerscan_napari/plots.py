@@ -108,6 +108,17 @@ class LivePlots(QWidget):
             self._earlier_marks.setData(*_posts(earlier_nm, low, high))
         self._show_thickness(measurement)
 
+    def show_profile(self, distance_nm: FloatArray, intensity: FloatArray) -> None:
+        """A profile alone, while its boundaries follow later; it begins where the one before began."""
+        before = self._profile_curve.getData()[0]
+        start = float(before[0]) if before is not None and len(before) else 0.0
+        depth = distance_nm + start
+        self._profile_curve.setData(depth, intensity)
+        self._boundary_marks.setData(_NOTHING, _NOTHING)
+        self._earlier_marks.setData(_NOTHING, _NOTHING)
+        self._keep_range(self.profile, "x", float(depth[0]), float(depth[-1]))
+        self._keep_range(self.profile, "y", *_limits(intensity))
+
     def _show_thickness(self, measurement: Measurement | None) -> None:
         layers = () if measurement is None else measurement.layers
         groups: dict[str, list[tuple[float, float, float]]] = {"dark": [], "bright": [], "other": []}

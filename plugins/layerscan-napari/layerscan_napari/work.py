@@ -74,9 +74,6 @@ class WorkControl(QObject):
     def _on_finished(self) -> None:
         self._tasks = [task for task in self._tasks if task is not self.sender()]
 
-    def cancel(self) -> None:
-        """Stop reading files. Writing goes on to its end, so that nothing stays half done."""
-
     # --- keeping ------------------------------------------------------------------------------------------------------
 
     def keep(self) -> None:

@@ -26,7 +26,7 @@ from layerscan.records import (
 from layerscan.settings import CompareSettings, MeasureSettings, PredictSettings
 
 from layerscan_napari import calls, colours, compute, desk, edits, images, pyramid, reader, traces
-from layerscan_napari.budget import DragBudget
+from layerscan_napari.budget import REST, DragBudget
 
 PACKAGE = Path(compute.__file__).parent
 
@@ -138,6 +138,14 @@ def test_that_what_does_not_fit_together_follows_on_release():
     budget.record("measure", 40)
     budget.record("measure", 40)
     assert budget.fitting(("measure", "predict")) == ()
+
+
+def test_that_what_always_runs_is_set_aside():
+    budget = DragBudget(16)
+    budget.record("measure", 12)
+    assert budget.fitting(("measure",)) == ("measure",)
+    budget.record(REST, 5)
+    assert budget.fitting(("measure",)) == ()
 
 
 def test_that_one_slow_first_run_is_not_held_against_a_part():
@@ -545,6 +553,20 @@ def test_that_a_drag_shows_the_same_numbers_as_the_release(line_job):
     assert again.measurement.period == final.measurement.period
     assert np.array_equal(again.prediction.reflectance.value, final.prediction.reflectance.value)
     assert final.measurement.period.mean == pytest.approx(PERIOD_PX * PIXEL_NM, rel=0.02)
+
+
+@pytest.mark.parametrize("line", [(180.0, 20.0, 180.0, 460.0), (180.0, 460.0, 180.0, 20.0), (300.0, 30.0, 60.0, 420.0)])
+def test_that_the_quick_profile_is_that_of_the_measurement(line_job, line):
+    # the measurement shears its band along the layers, so a narrow band is compared; both run the same way
+    import layerscan
+
+    job = replace(line_job, measure=MeasureSettings(line=line, width="3"))
+    distance, intensity = compute.band_profile(job)
+    exact = layerscan.measure(job.micrograph, settings=job.measure).profile
+    assert distance[-1] == pytest.approx(math.hypot(line[2] - line[0], line[3] - line[1]) * PIXEL_NM, rel=0.01)
+    both = min(len(intensity), len(exact.intensity))
+    assert np.corrcoef(intensity[:both], exact.intensity[:both])[0, 1] > 0.95
+    assert compute.refresh(job, DragBudget()).profile is not None
 
 
 def test_that_an_edited_job_keeps_both_results(line_job):

@@ -233,6 +233,7 @@ def test_that_slow_parts_follow_on_release_and_are_seen_to(lined):
     with wait_for(panel.live.refreshed) as live:
         mouse.move(row - 12, column)
     assert live.args[0].following == ("measure", "predict")
+    assert np.array_equal(panel.plots._profile_curve.getData()[1], live.args[0].profile[1])  # the profile never waits
     assert panel.readout.values["period"].text().endswith("…")
     assert panel.plots.thickness.plotItem.titleLabel.isVisible()
     with wait_for(panel.live.completed):  # a line at rest is computed without being let go
