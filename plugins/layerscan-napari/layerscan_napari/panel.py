@@ -33,6 +33,7 @@ if TYPE_CHECKING:
     from qtpy.QtGui import QHideEvent, QShowEvent
 
 DEFAULT_WIDTH = "20"
+NO_PIXEL_SIZE = "The pixel size is unknown. Type it above; without it there are no lengths."
 
 
 class LayerPanel(QWidget):
@@ -204,7 +205,10 @@ class LayerPanel(QWidget):
     def line_job(self, line: Line) -> compute.Job | None:
         """The job for a line on the image at hand; None without an image or its pixel size."""
         micrograph = self.micrograph()
-        if micrograph is None or micrograph.pixel_size is None:
+        if micrograph is None:
+            return None
+        if micrograph.pixel_size is None:
+            self.status.setText(NO_PIXEL_SIZE)
             return None
         return self.make_job(self.measure_settings(line, self._edits), micrograph)
 
@@ -293,7 +297,7 @@ class LayerPanel(QWidget):
             "unknown: type it, such as 2.5 +- 0.02 nm" if size is None else "from the file"
         )
         if size is None:
-            self.status.setText("The pixel size is unknown. Type it above; without it there are no lengths.")
+            self.status.setText(NO_PIXEL_SIZE)
 
     def _on_pixel_size(self) -> None:
         """Take the user's pixel size for the image at hand: its layers are placed anew, everything is measured anew."""
@@ -388,7 +392,7 @@ class LayerPanel(QWidget):
             notes.tell_error(error)
             self.width_edit.setText(DEFAULT_WIDTH)
         lines = None if self.image is None else overlays.find_overlay(self.viewer, self.image, overlays.LINES)
-        if lines is not None and lines.nshapes:
+        if lines is not None and any(abs(width - self._width_px()) > 1e-9 for width in lines.edge_width):
             lines.edge_width = self._width_px()
             self.live.budget.forget(compute.MEASURE)
             self.live.commit()
