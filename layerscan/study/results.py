@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any
 
 from layerscan.records import Average
 from layerscan.study.ledger import Ledger, TaskRecord, UnitRow
+from layerscan.study.work import MEASUREMENTS_FOLDER
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -66,6 +67,11 @@ class ImageResult:
     def prediction(self) -> Mapping[str, Any] | None:
         """The prediction, or None."""
         return self.predict.document if self.predict and self.predict.state == "done" else None
+
+    @property
+    def folder(self) -> str | None:
+        """Folder of the measurement's files in the study's output, None where there is none."""
+        return f"{MEASUREMENTS_FOLDER}/{self.task.folder}" if self.document and self.task and self.task.folder else None
 
     @property
     def group(self) -> str:
@@ -207,10 +213,9 @@ def image_rows(results: StudyResults) -> list[dict[str, Any]]:
     rows = []
     for image in results.images:
         row: dict[str, Any] = dict.fromkeys(IMAGE_COLUMNS)
-        row |= {
-            name: image.unit.row.get(name) for name in ("path", "group", "specimen", "section", "position", "folder")
-        }
+        row |= {name: image.unit.row.get(name) for name in ("path", "group", "specimen", "section", "position")}
         row |= {"image": image.unit.key, "state": image.state, "reason": image.reason, "edited_by_hand": image.edited}
+        row["folder"] = image.folder
         if image.task is not None:
             row |= {
                 "attempts": image.task.attempts,

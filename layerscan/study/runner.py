@@ -222,7 +222,6 @@ class _Attempt:
     unit: Unit
     number: int  # from 1
     alone: bool
-    submitted: float
 
 
 @dataclass
@@ -296,7 +295,7 @@ class _Engine:
             pure=False,
             retries=0,
         )
-        self.running[future] = _Attempt(unit=unit, number=number, alone=alone, submitted=time.monotonic())
+        self.running[future] = _Attempt(unit=unit, number=number, alone=alone)
         future.add_done_callback(self.finished.put)
 
     def _collect(self, start: float) -> None:

@@ -15,7 +15,7 @@ from layerscan.records import Progress
 from layerscan.settings import PredictSettings, Settings
 from layerscan.study.ledger import Ledger, TaskRecord, UnitRow, dump
 from layerscan.study.plan import PlannedImage, PlannedSpectrum, StudyPlan
-from layerscan.study.work import Illuminant, Observer, Step, Unit
+from layerscan.study.work import MEASUREMENTS_FOLDER, Illuminant, Observer, Step, Unit
 
 MATERIALS = ("dark", "middle", "bright", "incident", "substrate")
 
@@ -174,11 +174,11 @@ class _Maker:
         tasks = {"measure": measure}
         if image.predict is not None:
             steps += self._light_steps(image, image.predict, measure, tasks)
-        folder = str(Path("measurements") / f"{image.key}-{measure[:8]}")
+        folder = f"{MEASUREMENTS_FOLDER}/{image.key}-{measure[:8]}"
         wanted = self._open_steps(steps, folder)
         if wanted:
             self._add(image, "image", sha256, folder, wanted)
-        return UnitRow(key=image.key, kind="image", row={**row, "folder": folder}, tasks=tasks)
+        return UnitRow(key=image.key, kind="image", row=row, tasks=tasks)
 
     def _light_steps(
         self, image: PlannedImage, predict: PredictSettings, measure: str, tasks: dict[str, str]
@@ -232,7 +232,7 @@ class _Maker:
         for name in (*MATERIALS, "materials_folder"):
             text = getattr(settings, name)
             path = self.plan.folder / text if text else None
-            if path is None or not path.exists():
+            if path is None or not os.path.exists(path):
                 continue
             self._check_inside(path, name, place)
             changes[name] = str(path)

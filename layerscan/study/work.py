@@ -19,6 +19,9 @@ if TYPE_CHECKING:
 Illuminant = Literal["D65", "D50", "A"]
 Observer = Literal[2, 10]
 
+MEASUREMENTS_FOLDER = "measurements"
+"""Folder of a study's output in which every image has a folder of its own."""
+
 THUMBNAIL_PX = 300
 """Longest side of a thumbnail."""
 

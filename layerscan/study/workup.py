@@ -271,7 +271,7 @@ def make_image_row(image: ImageResult) -> ImageRow:
             OverlayArea(kind=kind, area=(r0, c0, r1, c1), reason=reason)
             for kind, r0, c0, r1, c1, reason in extras.get("areas", ())
         ),
-        figure=f"{row['folder']}/figure.svg" if document and row.get("folder") else None,
+        figure=f"{image.folder}/figure.svg" if image.folder else None,
         overrides=row.get("overrides") or {},
     )
 

@@ -57,7 +57,7 @@ def test_images_go_through_measurement_prediction_and_comparison(tmp_path):
     assert np.allclose(periods[["B_b0_0.tif", "B_b1_0.tif"]], 210.0, rtol=0.01)
     assert study.images["predicted_peak_nm"].notna().all()
     image = study.results.images[0]
-    folder = tmp_path / image.unit.row["folder"]
+    folder = tmp_path / image.folder
     assert (folder / "measurement.json").is_file()
     assert (folder / "prediction" / "prediction.json").is_file()
     assert image.task.picture[:2] == b"\xff\xd8"  # a JPEG

@@ -105,7 +105,6 @@ def make_image(group: str, specimen: str, section: int, period: float, **more) -
         "section": str(section),
         "position": more.pop("position", None),
         "exclude": "torn" if state == "excluded" else None,
-        "folder": f"measurements/{key}",
         "overrides": {},
     }
     assert not more
