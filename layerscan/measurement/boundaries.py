@@ -223,13 +223,13 @@ def _models(blur: float, hints: Hints) -> list[_Model]:
     box = {BOX: 1.7 * blur, BLUR: 0.87 * blur}
     rim = {RIM_BRIGHT: 0.15, RIM_DARK: 0.05, RIM_DECAY: 1.3 * blur}
     rims = (RIM_BRIGHT, RIM_DARK, RIM_DECAY)
-    models = [_Model(start=box, free=(BOX,), log_odds=-1.0), _Model(start=rim, free=rims, log_odds=-0.5)]
+    models = [_Model(start=box, free=(BOX,), log_odds=-1.0), _Model(start=rim, free=rims, log_odds=-1.5)]
     if not hints.known:
         models.append(_Model(start={GAMMA: 0.0}, free=(GAMMA,), log_odds=-2.0))
     if hints.gamma:
         odds = hints.log_odds_gamma
         models.append(_Model(start={GAMMA: hints.gamma}, log_odds=odds))
-        models.append(_Model(start={**rim, GAMMA: hints.gamma}, free=rims, log_odds=odds - 0.5))
+        models.append(_Model(start={**rim, GAMMA: hints.gamma}, free=rims, log_odds=odds - 1.5))
         models.append(_Model(start={**box, SKEW: hints.skew}, free=(BOX,), log_odds=hints.log_odds_skew - 1.0))
     return models
 

@@ -132,58 +132,63 @@ def sheared_mean(field, slope, group):  # type: ignore[no-untyped-def]
 
 
 @njit(cache=True)  # type: ignore[untyped-decorator]
-def _coherence(field, slope, stride):  # type: ignore[no-untyped-def]
-    """Part of the columns' variance that their sheared mean has: what is common to all of them."""
+def _shared(field, slope, margin, stride):  # type: ignore[no-untyped-def]
+    """Variance of the sheared mean profile ``margin`` samples away from the ends: what the columns have in common."""
     count, columns = field.shape
-    shared = 0.0
+    total = 0.0
     s1 = 0.0
-    every = 0.0
     n = 0
-    for d in range(0, count, stride):
+    for d in range(margin, count - margin, stride):
         value = 0.0
-        square = 0.0
         number = 0
         for j in range(columns):
             at = d + slope * (j - 0.5 * (columns - 1))
             low = math.floor(at)
-            if low < 0 or low + 1 >= count:
+            if low < 1 or low + 2 >= count:
                 continue
-            v = field[low, j] + (at - low) * (field[low + 1, j] - field[low, j])
+            x = at - low
+            x2 = x * x
+            v = (
+                x * (-0.5 + x - 0.5 * x2) * field[low - 1, j]
+                + (1 + x2 * (-2.5 + 1.5 * x)) * field[low, j]
+                + x * (0.5 + 2 * x - 1.5 * x2) * field[low + 1, j]
+                + 0.5 * x2 * (x - 1) * field[low + 2, j]
+            )
             if v == v:
                 value += v
-                square += v * v
                 number += 1
-        if number == columns:
+        if 2 * number > columns:
             value /= number
-            shared += value * value
-            every += square / number
+            total += value * value
             s1 += value
             n += 1
-    if n * stride <= 0.4 * count:
+    if n < 4:
         return -1.0
-    mean = s1 / n
-    total = every / n - mean * mean
-    return (shared / n - mean * mean) / total if total > 0 else -1.0
+    return total / n - (s1 / n) ** 2
 
 
 @njit(cache=True)  # type: ignore[untyped-decorator]
 def find_slope(field, most):  # type: ignore[no-untyped-def]
     """Slope of the layers across the band (depth per column) in which the columns agree best."""
     count, columns = field.shape
+    half = 0.5 * (columns - 1)
+    most = min(most, 0.25 * count / max(half, 0.5))
     step = min(2.0 / columns, 0.35)
     steps = int(most / step)
+    margin = math.ceil(most * half)
     stride = max(count // 400, 1)
-    best, slope = _coherence(field, 0.0, stride), 0.0
+    best, slope = _shared(field, 0.0, margin, stride), 0.0
     for i in range(1, steps + 1):
         for sign in (-1.0, 1.0):
-            value = _coherence(field, sign * i * step, stride)
+            value = _shared(field, sign * i * step, margin, stride)
             if value > best + 1e-9 * abs(best):
                 best, slope = value, sign * i * step
     width = 0.5 * step
+    margin = math.ceil((abs(slope) + 2 * step) * half)
     stride = max(count // 1000, 1)
-    best = _coherence(field, slope, stride)
+    best = _shared(field, slope, margin, stride)
     for _ in range(16):
-        left, right = _coherence(field, slope - width, stride), _coherence(field, slope + width, stride)
+        left, right = _shared(field, slope - width, margin, stride), _shared(field, slope + width, margin, stride)
         bend = left - 2 * best + right
         if left > best and left >= right:
             best, slope = left, slope - width
@@ -191,7 +196,7 @@ def find_slope(field, most):  # type: ignore[no-untyped-def]
             best, slope = right, slope + width
         elif bend < 0 and width < 0.4 * step:
             moved = 0.5 * width * (left - right) / bend
-            value = _coherence(field, slope + moved, stride)
+            value = _shared(field, slope + moved, margin, stride)
             if value > best:
                 best, slope = value, slope + moved
             width *= 0.25
@@ -350,7 +355,8 @@ def measure_line(
     z = _stands_out(field[low:high], slope, mean)
     if period is None or z < LEAST_Z:
         return None, z, region
-    stack = find_stack(mean, variance=variance, period=period)
+    noise = np.where(np.isfinite(mean), single[low:high], np.nan) if columns >= 6 else None
+    stack = find_stack(mean, variance=variance, period=period, noise=noise)
     if stack is None or len(stack.position) < LEAST_BOUNDARIES:
         return None, z, region
     cosine = 1 / math.sqrt(1 + slope * slope)

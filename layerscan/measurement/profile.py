@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from layerscan.measurement.boundaries import EdgeFit, Hints, fit_boundaries, plain_model
+from layerscan.measurement.boundaries import EdgeFit, Hints, fit_boundaries, plain_model, read_hints
 from layerscan.measurement.edges import SHARED, model_profile
 from layerscan.measurement.segmentation import BRIGHT, DARK, OTHER, segment_profile
 
@@ -60,7 +60,8 @@ def find_stack(
     layered: tuple[int, int] | None = None,
     nuisance: bool = True,
     blur: float | None = None,
-    hints: Hints | None = None,
+    noise: FloatArray | None = None,
+    full_scale: float | None = None,
 ) -> Stack | None:
     """Find the layers of a mean profile.
 
@@ -78,8 +79,11 @@ def find_stack(
         Try the nuisance models.
     blur : float, optional
         Edge blur to start from [samples].
-    hints : Hints, optional
-        What the noise says about gamma and about counting.
+    noise : (N,) float array, optional
+        Variance of the noise of single columns at each depth: where it differs between the phases it tells of gamma or
+        of counted electrons.
+    full_scale : float, optional
+        Largest intensity that the file can hold; negative where the picture is clipped, so that noise says nothing.
 
     Returns
     -------
@@ -126,6 +130,7 @@ def find_stack(
     dark, bright = dark + contrast * low, dark + contrast * high
     centre = np.clip(np.rint(_centres(fit.position, count)).astype(int), 0, count - 1)
     level = (fit.level - low[centre]) / rise[centre]
+    hints = None if noise is None else _noise_hints(noise, fit.position, first_bright, dark, bright, full_scale)
     beyond = _beyond(fit, other, count)
     position, level, place, keep = _with_beyond(fit, level, beyond, period)
     fit = fit_boundaries(
@@ -206,6 +211,38 @@ def _start_blur(
         cost = float(np.mean(np.minimum(off**2, 0.25))) if len(off) else 0.0
         best = min(best, (cost, float(blur)))
     return best[1]
+
+
+def _noise_hints(
+    noise: FloatArray,
+    position: FloatArray,
+    bright_first: bool,
+    dark: FloatArray,
+    bright: FloatArray,
+    full_scale: float | None,
+) -> Hints:
+    """Compare the noise inside the layers of both phases, away from their edges; a clipped phase says nothing."""
+    if full_scale is not None and full_scale < 0:
+        return Hints()
+    at = np.arange(len(noise))
+    index = np.searchsorted(position, at)
+    gap = np.minimum(
+        np.abs(at - position[np.clip(index, 0, len(position) - 1)]), np.abs(at - position[np.clip(index - 1, 0, None)])
+    )
+    inside = (index > 0) & (index < len(position)) & np.isfinite(noise)
+    medians = []
+    for is_bright in (False, True):
+        own = inside & ((index % 2 == 0) == (bright_first == is_bright))
+        if own.sum() < 8:
+            return Hints()
+        deep = own & (gap >= np.quantile(gap[own], 0.6))
+        medians.append(float(np.median(noise[deep])))
+    if not min(medians) > 0:
+        return Hints()
+    return read_hints(
+        math.log(medians[1] / medians[0]), dark=float(np.median(dark)), bright=float(np.median(bright)),
+        full_scale=full_scale,
+    )  # fmt: skip
 
 
 def _beyond(fit: EdgeFit, other: tuple[bool, bool], count: int) -> tuple[float | None, float | None]:

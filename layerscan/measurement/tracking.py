@@ -9,10 +9,9 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numba import njit
 
-from layerscan.measurement.boundaries import Hints, read_hints
 from layerscan.measurement.edges import RIM_DECAY
 from layerscan.measurement.profile import Stack, find_stack
-from layerscan.measurement.segmentation import BRIGHT, DARK
+from layerscan.measurement.segmentation import BRIGHT
 from layerscan.measurement.traces import (
     RoughnessModel,
     Traces,
@@ -290,7 +289,7 @@ def follow_layers(
         mean, single = stack.dark + contrast * mean, contrast**2 * single
         again = find_stack(
             mean, variance=_variance(single, number), period=period, layered=inside, blur=float(stack.fit.shared[0]),
-            hints=_hints(stack, noise, full_scale),
+            noise=noise, full_scale=full_scale,
         )  # fmt: skip
         if again is None:
             break
@@ -365,32 +364,6 @@ def find_terminations(
             if at_end and stop - start < 0.9 * len(shown):
                 ended[i : i + 2] += 1
     return ended, gone
-
-
-def _hints(stack: Stack, noise: FloatArray, full_scale: float | None) -> Hints:
-    """Compare the noise inside the layers of both phases, away from their edges; a clipped phase says nothing."""
-    if full_scale is not None and full_scale < 0:
-        return Hints()
-    position, phase = stack.position, stack.phase
-    at = np.arange(len(noise))
-    index = np.searchsorted(position, at)
-    gap = np.minimum(
-        np.abs(at - position[np.clip(index, 0, len(position) - 1)]), np.abs(at - position[np.clip(index - 1, 0, None)])
-    )
-    inside = (index > 0) & (index < len(position)) & np.isfinite(noise)
-    medians = []
-    for name in (DARK, BRIGHT):
-        own = inside & (phase[index] == name)
-        if own.sum() < 8:
-            return Hints()
-        deep = own & (gap >= np.quantile(gap[own], 0.6))
-        medians.append(float(np.median(noise[deep])))
-    if not min(medians) > 0:
-        return Hints()
-    return read_hints(
-        math.log(medians[1] / medians[0]), dark=float(np.median(stack.dark)), bright=float(np.median(stack.bright)),
-        full_scale=full_scale,
-    )  # fmt: skip
 
 
 def _variance(single: FloatArray, number: FloatArray) -> FloatArray:

@@ -85,7 +85,9 @@ def test_layers_are_found_with_resin_and_substrate_left_out() -> None:
     at = np.array([60.0, 70, 80, 90, 100, 110, 120, 130, 140, 150, 160])
     levels = np.array([0.45, 0, 1, 0, 1, 0, 1, 0, 1, 0, 1, 1.6])
     profile = step_profile(220, at, blur=1.2, levels=levels, noise=0.03, seed=1)
-    stack = find_stack(profile, variance=np.full(220, 0.03**2), period=20.0, layered=(60, 160))
+    stack = find_stack(
+        profile, variance=np.full(220, 0.03**2), period=20.0, layered=(60, 160), noise=np.full(220, 9e-4)
+    )
     assert stack is not None
     u = np.sqrt(np.diag(stack.fit.covariance))
     assert np.abs(stack.position - at).max() < 0.5
