@@ -221,7 +221,7 @@ def layer_statistic(evidence: Evidence) -> float:
     return min(
         evidence.peak / 14,
         evidence.persistence / 0.55,
-        evidence.share / 0.3,
+        evidence.share / 0.36,
         evidence.swings / 3.9,
         evidence.alone / 20,
         evidence.length,
@@ -264,9 +264,9 @@ def alignment_statistic(evidence: Evidence) -> float:
 
 def _regularity(evidence: Evidence) -> float:
     """Even spacing and heights, weighed with how far the line stands out; few alternations must be more even."""
-    uneven = math.hypot(evidence.spacing_cv / 0.3, evidence.height_cv / 0.42, evidence.chirp)
-    most = 0.84 if evidence.swings < 8 else 1.6
-    return min(math.sqrt(evidence.peak / 23), most) / max(uneven, 1e-6)
+    many = min(max((evidence.swings - 7) / 5, 0.0), 1.0)  # 0 for up to 7 alternations, 1 for 12 and more
+    uneven = math.hypot(evidence.spacing_cv / 0.3, evidence.height_cv / (0.16 + 0.26 * many), evidence.chirp)
+    return min(math.sqrt(evidence.peak / 23), 0.9 + 0.7 * many) / max(uneven, 1e-6)
 
 
 def measure_purity(candidate: Candidate, straight: StraightCandidate, levels: tuple[Level, ...]) -> tuple[float, float]:
