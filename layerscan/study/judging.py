@@ -55,6 +55,7 @@ def judge_limits(
                     group=group,
                     value=estimate.mean if estimate else None,
                     u=estimate.u if estimate else None,
+                    degrees_of_freedom=estimate.degrees_of_freedom if estimate else None,
                     rule=rule,
                     lot=lot,
                     caution=RELEASE_CAUTION,
@@ -135,4 +136,4 @@ def _estimate_colour(
             labs = [c["lab"] for c in colours if (c["illuminant"], c["observer_deg"]) == wanted]
         if labs:
             values.append(math.fsum(float(colour_difference(limit.target, lab)) for lab in labs) / len(labs))
-    return estimate_mean(values, quantity="colour_difference", level=study.level, u_systematic=0.0) if values else None
+    return estimate_mean(values, quantity="colour_difference", level=study.level) if values else None

@@ -34,26 +34,50 @@ class Rule:
     probability: float = 0.95
 
 
-def conformance_probability(value: float, u: float, limit: Limit) -> float:
-    """Probability that the true value lies within the limits, for a normal distribution about the value.
+def conformance_probability(value: float, u: float, limit: Limit, *, degrees_of_freedom: float | None = None) -> float:
+    """Probability that the true value lies within the limits.
+
+    Parameters
+    ----------
+    value, u : float
+        In the limit's unit.
+    degrees_of_freedom : float, optional
+        Of u. The distribution about the value is then Student's t scaled by u, else it is normal.
 
     References
     ----------
-    JCGM 106:2012, 7.3 and 7.4 (eq. 7 to 11): Phi((high - value) / u) - Phi((low - value) / u).
+    JCGM 106:2012, 7.3 and 7.4 (eq. 7 to 11): Phi((high - value) / u) - Phi((low - value) / u). For t: JCGM 101:2008,
+    6.4.9.
 
     Examples
     --------
     >>> round(conformance_probability(2.7, 0.2, Limit(name="x", unit="mm", high=3.0)), 2)
     0.93
     """
-    from scipy.special import ndtr
+    from scipy.special import ndtr, stdtr
 
     if u <= 0:
         inside = (limit.low is None or value >= limit.low) and (limit.high is None or value <= limit.high)
         return float(inside)
-    upper = 1.0 if limit.high is None else float(ndtr((limit.high - value) / u))
-    lower = 0.0 if limit.low is None else float(ndtr((limit.low - value) / u))
-    return upper - lower
+
+    def below(bound: float) -> float:
+        z = (bound - value) / u
+        return float(stdtr(degrees_of_freedom, z) if degrees_of_freedom else ndtr(z))
+
+    return (1.0 if limit.high is None else below(limit.high)) - (0.0 if limit.low is None else below(limit.low))
+
+
+def coverage_factor(k: float, degrees_of_freedom: float | None) -> float:
+    """Factor that covers with few degrees of freedom what ``k`` covers with many (JCGM 100:2008, G.3).
+
+    Examples
+    --------
+    >>> round(coverage_factor(2.0, None), 2), round(coverage_factor(2.0, 2.0), 2)
+    (2.0, 4.53)
+    """
+    from scipy.special import ndtr, stdtrit
+
+    return k if not degrees_of_freedom else float(stdtrit(degrees_of_freedom, ndtr(k)))
 
 
 def decide(
@@ -62,6 +86,7 @@ def decide(
     group: str,
     value: float | None,
     u: float | None,
+    degrees_of_freedom: float | None = None,
     rule: Rule,
     lot: Lot,
     caution: str,
@@ -75,6 +100,8 @@ def decide(
     value, u : float or None
         The value and its combined standard uncertainty in the limit's unit. Without a value, or without an
         uncertainty under a rule that needs one, the decision is undecided and says why.
+    degrees_of_freedom : float, optional
+        Of u: where it rests on few specimens, the guard band is wider.
     rule, lot, caution
         The decision rule, what the record carries, and the caution that stands beside the decision.
 
@@ -82,9 +109,12 @@ def decide(
     -------
     ReleaseDecision
     """
-    band = None if u is None or rule.kind != "guarded" else rule.guard * rule.coverage_factor * u
+    factor = coverage_factor(rule.coverage_factor, degrees_of_freedom)
+    band = None if u is None or rule.kind != "guarded" else rule.guard * factor * u
     accept_low, accept_high = _narrowed(limit, band or 0.0)
-    probability = None if value is None or u is None else conformance_probability(value, u, limit)
+    probability = None
+    if value is not None and u is not None:
+        probability = conformance_probability(value, u, limit, degrees_of_freedom=degrees_of_freedom)
     decision, reason = _judge(limit, value, u, band, probability, rule, why_missing)
     if lot.calibration_overdue and decision == "pass":
         decision, reason = (
@@ -122,8 +152,9 @@ def say_rule(rule: Rule) -> str:
             f"{1 - rule.probability:.3g}, else undecided (JCGM 106:2012, 7 and 8)"
         )
     return (
-        f"guard band of {rule.guard:g} U on either side of each limit, U = {rule.coverage_factor:g} u: pass inside the "
-        "narrowed limits, fail outside the widened ones, else undecided (JCGM 106:2012, 8.3)"
+        f"guard band of {rule.guard:g} U on either side of each limit, U = {rule.coverage_factor:g} u, or more where u "
+        "rests on few specimens (Student's t of the same coverage, JCGM 100:2008, G.3): pass inside the narrowed limits, "
+        "fail outside the widened ones, else undecided (JCGM 106:2012, 8.3)"
     )
 
 

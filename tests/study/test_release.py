@@ -8,18 +8,19 @@ import pytest
 from layerscan.report.cautions import RELEASE_CAUTION
 from layerscan.report.summary import Lot
 from layerscan.study.judging import make_lot
-from layerscan.study.release import Limit, Rule, conformance_probability, decide
+from layerscan.study.release import Limit, Rule, conformance_probability, coverage_factor, decide
 from layerscan.study.tables import LotTable
 
 BAND = Limit(name="period", unit="nm", low=190.0, high=210.0)
 
 
-def judge(value, u, *, limit=BAND, rule=None, lot=None, why=""):
+def judge(value, u, *, limit=BAND, rule=None, lot=None, why="", nu=None):
     return decide(
         limit,
         group="A",
         value=value,
         u=u,
+        degrees_of_freedom=nu,
         rule=rule or Rule(),
         lot=lot or Lot(),
         caution=RELEASE_CAUTION,
@@ -64,6 +65,16 @@ def test_a_passed_value_rarely_does_not_conform():
 def test_the_probability_rule(value, expected):
     # Phi((210 - value) / 2) = 0.95 at value = 206.71
     assert judge(value, 2.0, rule=Rule(kind="probability", probability=0.95)).decision == expected
+
+
+def test_few_specimens_widen_the_guard_band_by_students_t():
+    # JCGM 100:2008, table G.2: t for 95.45 % is 4.53 at 2 and 2.87 at 4 degrees of freedom
+    assert coverage_factor(2.0, 2) == pytest.approx(4.53, abs=0.005)
+    assert coverage_factor(2.0, 4) == pytest.approx(2.87, abs=0.005)
+    found = judge(200.0, 2.0, nu=2)
+    assert found.guard_band == pytest.approx(2 * 4.53, abs=0.01)
+    assert (found.decision, judge(200.0, 3.0, nu=2).decision) == ("pass", "undecided")
+    assert judge(200.0, 3.0, nu=2).probability_conforming < judge(200.0, 3.0).probability_conforming
 
 
 def test_simple_acceptance_looks_at_the_value_alone():
