@@ -5,6 +5,7 @@ import os
 import shlex
 import sys
 from dataclasses import replace
+from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path
 
 import numpy as np
@@ -13,7 +14,12 @@ from drawn_sections import PERIOD_PX, PIXEL_NM, draw_section
 
 if sys.platform == "linux" and not (os.environ.get("DISPLAY") or os.environ.get("WAYLAND_DISPLAY")):
     pytest.skip("no display: napari needs one (run under Xvfb, such as 'xvfb-run -a pytest')", allow_module_level=True)
+try:
+    version("layerscan-napari")
+except PackageNotFoundError:
+    pytest.skip("the plugin is not installed (see its README)", allow_module_level=True)
 pytest.importorskip("napari", reason="napari is not installed (see the plugin's README)")
+pytest.importorskip("pytestqt", reason="pytest-qt is not installed (see the plugin's README)")
 pytest.importorskip("qtpy.QtWidgets", reason="no Qt binding is installed (see the plugin's README)")
 
 from qtpy.QtCore import QEvent, QPoint, Qt
@@ -23,7 +29,7 @@ from qtpy.QtWidgets import QAbstractButton, QApplication, QComboBox, QLabel, QLi
 from layerscan_napari import compute, overlays, worker
 from layerscan_napari.traces import value_with_u
 
-LONG_MS = 20_000
+LONG_MS = 120_000  # the first line compiles the kernels
 
 
 class Mouse:
