@@ -153,8 +153,8 @@ def say_rule(rule: Rule) -> str:
         )
     return (
         f"guard band of {rule.guard:g} U on either side of each limit, U = {rule.coverage_factor:g} u, or more where u "
-        "rests on few specimens (Student's t of the same coverage, JCGM 100:2008, G.3): pass inside the narrowed limits, "
-        "fail outside the widened ones, else undecided (JCGM 106:2012, 8.3)"
+        "rests on few specimens (Student's t of the same coverage, JCGM 100:2008, G.3): pass inside the narrowed "
+        "limits, fail outside the widened ones, else undecided (JCGM 106:2012, 8.3)"
     )
 
 
