@@ -174,9 +174,10 @@ def fit_boundaries(
     belief = np.zeros((2, SHARED))
     belief[1, EDGE:] = 1e-3
     place = np.zeros((2, len(position))) if place is None else place
+    rounds = 2 if scatter is None else 1
     scatter = 0.15 if scatter is None else scatter
     fit = None
-    for _ in range(2):
+    for _ in range(rounds):
         precision = np.where(free, 1e-6, 1 / scatter**2)
         fit = fit_edges(depth, profile, weight, *state, active, target, precision, belief, place, 8, 0.3, False)
         state = fit[:3]
@@ -188,7 +189,8 @@ def fit_boundaries(
     if nuisance and used > 40 and segments > 4:
         averaged = _average_models(depth, profile, weight, fit, target, precision, place, used, hints or Hints(), full)
         return _finish(depth, profile, weight, averaged, precision, used, scatter)
-    fit = fit_edges(depth, profile, weight, *state, active, target, precision, belief, place, 15, 1e-3, full)
+    if full:
+        fit = fit_edges(depth, profile, weight, *state, active, target, precision, belief, place, 15, 1e-3, True)
     return _finish(depth, profile, weight, (*fit[:5], active, np.zeros_like(fit[4]), fit[0]), precision, used, scatter)
 
 
