@@ -38,7 +38,8 @@ class LayerDetection:
 
     ``valid`` is a coarse map of the layered area: cell (i, j) covers the square of ``valid_step_px`` pixels that starts
     at ``(i, j) * valid_step_px``. ``orientation_map_deg`` holds the local direction of the normal at ``map_row_px`` x
-    ``map_column_px``, ``coherence`` (0 to 1) how sure it is. ``aligned`` without ``layered``: no layers, but the
+    ``map_column_px``, ``coherence`` (0 to 1) how sure it is. ``period_px`` is that of the tiles' spectra, good to start
+    from (a few per cent); boundaries measure it. ``aligned`` without ``layered``: no layers, but the
     pattern has a direction and a spacing, which are given.
     """
 
@@ -242,7 +243,8 @@ def _layered(best: _Judged, levels: tuple[Level, ...]) -> LayerDetection:
     angle = np.degrees(0.5 * np.arctan2(field_map.sin2, field_map.cos2)) % 180
     direction = global_direction(candidate, levels, step, valid)
     harmonics, wander = measure_purity(candidate, straight, levels)
-    hum = valid.mean() > 0.7 and is_hum(direction.angle_deg, harmonics, level.factor / candidate.frequency, levels)
+    period = level.factor / candidate.frequency
+    hum = valid.mean() > 0.7 and is_hum(direction.angle_deg, harmonics, period, levels)
     if hum:  # it fills the frame, where layers may end
         return LayerDetection(
             layered=False, periodic=False, statistic=statistic, p_value=p_value_of(statistic), region=None,
@@ -268,8 +270,8 @@ def _layered(best: _Judged, levels: tuple[Level, ...]) -> LayerDetection:
         coherence=np.where(member, tiles.coherence, 0.0),
         map_row_px=level.to_page(tiles.row),
         map_column_px=level.to_page(tiles.column),
-        period_px=level.factor / candidate.frequency,
-        u_period_px=None,
+        period_px=period,
+        u_period_px=period * math.hypot(0.03, evidence.spacing_cv / math.sqrt(evidence.swings)),
         seed_px=(
             float(level.to_page(straight.grid.row[seed])), float(level.to_page(straight.grid.column[seed])),
         ),

@@ -250,8 +250,13 @@ def p_value_of(statistic: float) -> float:
 
 
 def alignment_statistic(evidence: Evidence) -> float:
-    """Above 1: an aligned pattern with a spacing, such as rods or short lamellae that end, whether layered or not."""
+    """Above 1: an aligned pattern with a spacing, such as rods or short lamellae that end, without being layered.
+
+    What goes on unchanged along its lines without being regular is an edge, curtains or fringes.
+    """
     return min(
+        evidence.peak / 9,
+        0.6 / max(evidence.persistence, 1e-6),
         evidence.near_persistence / 0.4,
         evidence.near_share / 0.4,
         evidence.swings / 4.9,
