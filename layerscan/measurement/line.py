@@ -17,7 +17,6 @@ from layerscan.errors import InputError, MeasurementError
 from layerscan.measurement.field import Frame, sample_field
 from layerscan.measurement.profile import find_stack
 from layerscan.measurement.result import FoundLayers, build_measurement, empty_measurement
-from layerscan.measurement.segmentation import OTHER
 from layerscan.records import Detection
 
 if TYPE_CHECKING:
@@ -476,6 +475,3 @@ def _band_region(picture: Picture, start: tuple[float, float], stop: tuple[float
         min(max(math.floor(low_r - half), 0), rows - 1), min(max(math.floor(low_c - half), 0), columns - 1),
         min(max(math.ceil(high_r + half) + 1, 1), rows), min(max(math.ceil(high_c + half) + 1, 1), columns),
     )  # fmt: skip
-
-
-__all__ = ["OTHER", "Band", "measure_line", "measure_line_of", "sample_band"]

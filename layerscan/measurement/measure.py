@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from layerscan.errors import CalibrationError, InputError, MeasurementError
+from layerscan.errors import CalibrationError, InputError
 from layerscan.measurement.result import Aligned, FoundLayers, build_measurement, empty_measurement
 from layerscan.records import Detection
 
@@ -294,6 +294,7 @@ def describe_field(
     number = np.broadcast_to(np.arange(stations), followed.depth.shape)
     along: FloatArray = straight.station_start + straight.station_step * number.astype(np.float64)
     from layerscan.measurement.field import frame_to_picture
+    from layerscan.measurement.statistics import count_missing
 
     row, column = frame_to_picture(straight.frame, followed.depth, along)
     inside = _inside(picture.intensity, row, column)
@@ -339,6 +340,7 @@ def describe_field(
         lateral_noise=np.array([float(np.median(u)) for u in traces.u]),
         replication=traces.model.replication if edges > 2 else None,
         terminations=followed.terminations,
+        missing=count_missing(np.diff(mean), phases[1:-1]),
         flags=_field_flags(straight),
     )
 
@@ -440,6 +442,3 @@ def _spacing(followed: FollowedStack, seen: LayerDetection) -> tuple[float | Non
     from layerscan.measurement.spectrum import dominant_spacing
 
     return dominant_spacing(followed.profile, near=seen.period_px)
-
-
-__all__ = ["MeasurementError", "Picture", "measure_micrograph", "prepare_picture"]

@@ -227,7 +227,7 @@ def build_measurement(
     if len(inner) >= 2:
         statistics = describe_stack(
             depth=found.depth * scale, phase=inner, covariance=found.covariance * scale**2,
-            replication=found.replication, terminations=int(found.terminations.sum()), missing=found.missing,
+            replication=found.replication, terminations=(int(found.terminations.sum()) + 1) // 2, missing=found.missing,
             limited_by=limited_by, next_measurement=advice,
         )  # fmt: skip
     periodic = detection.periodic and period is not None and _is_periodic(period)

@@ -128,6 +128,18 @@ def longest_run(phase: tuple[str, ...], seen: BoolArray, *, least_common: int) -
     return None if best is None else (best[2], best[3], best[0] // 2)
 
 
+def count_missing(thickness: FloatArray, phase: tuple[str, ...]) -> int:
+    """Layers so thick that one of the other phase between them must be missing: their own and most of a period more."""
+    names = np.array(phase, dtype=object)
+    typical = {name: float(np.median(thickness[names == name])) for name in ("dark", "bright") if (names == name).any()}
+    if len(typical) < 2 or len(thickness) < LEAST_FOR_TRENDS:
+        return 0
+    period = sum(typical.values())
+    return sum(
+        bool(name in typical and t > typical[name] + 0.7 * period) for t, name in zip(thickness, phase, strict=True)
+    )
+
+
 def steady_span(depth: FloatArray, covariance: FloatArray, phase: tuple[str, ...]) -> tuple[float, float] | None:
     """Distance from the first to the last boundary realised in the image, using what all boundaries say about it.
 

@@ -135,3 +135,15 @@ def test_a_gamma_that_the_noise_reveals_displaces_no_boundary() -> None:
         shifts.append(abs(float(np.mean(alternating * (fit.position - at)))))
     assert shifts[1] < 0.03 < 0.08 < shifts[0] + 0.08
     assert shifts[1] < 0.5 * shifts[0] + 0.02
+
+
+def test_a_blurred_step_to_a_brighter_material_is_no_thin_layer() -> None:
+    # dark layer, then a substrate brighter than the bright phase: the step passes the bright level without a layer
+    at = np.array([60.0, 80, 100, 120, 140, 160, 180, 200])
+    levels = np.array([1.0, 0, 1, 0, 1, 0, 1, 0, 1.5])
+    profile = step_profile(320, at, blur=2.0, levels=levels, noise=0.02, seed=3)
+    stack = find_stack(profile, variance=np.full(320, 4e-4), period=40.0, layered=(60, 210), noise=np.full(320, 4e-4))
+    assert stack is not None
+    assert len(stack.position) == 8
+    assert stack.phase[-1] == OTHER
+    assert stack.phase[-2] == DARK

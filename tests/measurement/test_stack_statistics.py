@@ -9,6 +9,7 @@ from layerscan.geometry import correct_lengths
 from layerscan.measurement.budget import budget_rows, common_parts, largest_component
 from layerscan.measurement.statistics import (
     average_thickness,
+    count_missing,
     describe_phase,
     describe_stack,
     longest_run,
@@ -169,3 +170,11 @@ def test_values_left_out_do_not_steer_their_own_average() -> None:
     first, second = smooth_traces(raw, valid, model), smooth_traces(moved, valid, model)
     assert second[0][1, 150] - first[0][1, 150] > 0.05
     assert abs(second[2][1, 150] - first[2][1, 150]) < 0.01
+
+
+def test_a_merged_layer_counts_as_one_missing() -> None:
+    # a dark layer left out: its bright neighbours merge into one as thick as two and the gap
+    thickness = np.array([8.0, 12, 8, 12, 8, 32, 8, 12, 8, 12])
+    phase = ("dark", "bright") * 5
+    assert count_missing(thickness, phase) == 1
+    assert count_missing(np.where(thickness == 32, 13, thickness), phase) == 0
