@@ -368,6 +368,57 @@ class MaterialsDocument(_Part):
     media: list[MediumModel]
 
 
+class StudyDocument(_Part):
+    """What a run of a study did."""
+
+    schema_: Literal["layerscan.study/1"] = Field("layerscan.study/1", alias="schema")
+    version: str
+    folder: str
+    ledger: str
+    report: str
+    written: list[str]
+    images: int
+    done: int
+    failed: int
+    excluded: int
+    missing: int
+    without_layers: int
+    worked_on: int
+    kept: int
+    failures: list[list[str]] = Field(description="[path, reason] of each image or spectrum that failed")
+    answer: str
+    decisions: list[list[str]] = Field(description="[group, limit, pass | fail | undecided]")
+    exit_code: int
+
+
+class ProblemModel(_Part):
+    """Something in a plan that is missing or worth knowing."""
+
+    place: str
+    text: str
+    severity: str
+
+
+class StudyCheckDocument(_Part):
+    """What a run of a study would do; nothing was run."""
+
+    schema_: Literal["layerscan.study_check/1"] = Field("layerscan.study_check/1", alias="schema")
+    version: str
+    plan: str
+    folder: str
+    images: int
+    spectra: int
+    groups: list[tuple[str, int, int]] = Field(description="[group, specimens, images]")
+    done: int
+    to_measure: int
+    to_predict: int
+    to_compare: int
+    to_read: int
+    problems: list[ProblemModel]
+    not_stated: list[str]
+    exit_code: int
+
+
 DOCUMENTS: dict[str, type[_Part]] = {
     "measurement": MeasurementDocument,
     "prediction": PredictionDocument,
@@ -375,4 +426,6 @@ DOCUMENTS: dict[str, type[_Part]] = {
     "inspection": InspectionDocument,
     "verification": VerificationDocument,
     "materials": MaterialsDocument,
+    "study": StudyDocument,
+    "study_check": StudyCheckDocument,
 }

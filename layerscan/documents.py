@@ -504,8 +504,15 @@ def _index_589(medium: records.Medium, axis: int) -> list[float] | None:
     return [value.real, value.imag]
 
 
+def study_document(answer: Any, *, version: str) -> dict[str, Any]:
+    """``layerscan.study/1`` or ``layerscan.study_check/1`` of what a study's run or check answered."""
+    what = "study" if hasattr(answer, "answer") else "study_check"
+    document = {"schema": f"layerscan.{what}/1", "version": version, **asdict(answer)}
+    return _complete(document, models.DOCUMENTS[what])
+
+
 def schema(what: str) -> dict[str, Any]:
-    """JSON Schema (2020-12) of a document: measurement, prediction, comparison, inspection, verification, materials."""
+    """JSON Schema (2020-12) of a document, by its name in ``document_models.DOCUMENTS``."""
     if what not in models.DOCUMENTS:
         raise InputError(f"There is no document '{what}'. Known are {', '.join(models.DOCUMENTS)}.")
     return {

@@ -2,13 +2,13 @@
 
 from __future__ import annotations
 
-from dataclasses import asdict
 from typing import TYPE_CHECKING
 
 import click
 
+from layerscan import documents
+from layerscan._version import __version__
 from layerscan.commands.options import clear_progress, print_document, progress
-from layerscan.document_files import plain
 from layerscan.report.cautions import RELEASE_CAUTION
 
 if TYPE_CHECKING:
@@ -33,7 +33,7 @@ def study(plan: str, check: bool, cluster: str | None, workers: int | None, out:
     show = progress()
     if check:
         answer = check_study(plan, out=out)
-        document = {"schema": "layerscan.study_check/1", **plain(asdict(answer))}
+        document = documents.study_document(answer, version=__version__)
         print_document(document, as_json=as_json, lines=_check_lines(answer))
         return answer.exit_code
     outcome = run_study(plan, out=out, cluster=cluster, workers=workers, progress=show)
@@ -57,7 +57,7 @@ def report(folder: str, figures: tuple[str, ...], as_json: bool) -> int:
 
 
 def _show(outcome: StudyOutcome, as_json: bool) -> int:
-    document = {"schema": "layerscan.study/1", **plain(asdict(outcome))}
+    document = documents.study_document(outcome, version=__version__)
     print_document(document, as_json=as_json, lines=_outcome_lines(outcome))
     return outcome.exit_code
 

@@ -157,3 +157,22 @@ def test_wrong_input_gives_a_message_and_nothing_on_standard_output(capfd, tmp_p
     assert (got, out) == (code, "")
     assert message in err
     assert "Traceback" not in err
+
+
+def test_a_study_from_the_command_line(capfd, image, tmp_path):
+    (tmp_path / "a.tif").write_bytes(image[0].read_bytes())
+    (tmp_path / "STUDY.toml").write_text(
+        '[study]\ntitle = "invented"\n[[images]]\nfile = "a.tif"\ngroup = "g"\nspecimen = "s"\n'
+        'pixel_size = "2 +- 0.02 nm"\n'
+    )
+    code, out, _ = run(capfd, "study", tmp_path / "STUDY.toml", "--check", "--json")
+    assert code == 0
+    assert validate(out, "study_check")["to_measure"] == 1
+    code, out, _ = run(capfd, "study", tmp_path / "STUDY.toml", "--workers", 1, "--json", "--out", tmp_path / "out")
+    outcome = validate(out, "study")
+    assert (code, outcome["done"], outcome["failed"]) == (0, 1, 0)
+    code, out, _ = run(capfd, "report", tmp_path / "out", "--json")
+    assert (code, validate(out, "study")["done"]) == (0, 1)
+    code, out, err = run(capfd, "report", tmp_path / "nothing")
+    assert (code, out) == (3, "")
+    assert "nothing" in err
