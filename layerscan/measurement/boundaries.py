@@ -176,7 +176,7 @@ def fit_boundaries(
     place = np.zeros((2, len(position))) if place is None else place
     rounds = 2 if scatter is None else 1
     scatter = 0.15 if scatter is None else scatter
-    fit = None
+    fit: Any = None
     for _ in range(rounds):
         precision = np.where(free, 1e-6, 1 / scatter**2)
         fit = fit_edges(depth, profile, weight, *state, active, target, precision, belief, place, 8, 0.3, False)

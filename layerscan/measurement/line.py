@@ -17,6 +17,7 @@ from layerscan.errors import InputError, MeasurementError
 from layerscan.measurement.field import Frame, sample_field
 from layerscan.measurement.profile import find_stack
 from layerscan.measurement.result import FoundLayers, build_measurement, empty_measurement
+from layerscan.measurement.spectrum import dominant_spacing, strongest_spacing
 from layerscan.records import Detection
 
 if TYPE_CHECKING:
@@ -320,7 +321,25 @@ def _ends_on_grid(
 def measure_line(
     picture: Picture, *, start: tuple[float, float], stop: tuple[float, float], width_px: float
 ) -> tuple[FoundLayers | None, float | None, Region]:
-    """Find the layers along a line: (layers or None, how far they stand out of the noise, region of the band).
+    """Find the layers along a line.
+
+    Parameters
+    ----------
+    picture : Picture
+        Pixels on a square grid.
+    start, stop : (row, column)
+        Ends of the line on that grid; depth grows from ``start``.
+    width_px : float
+        Width of the band.
+
+    Returns
+    -------
+    found : FoundLayers or None
+        None where nothing stands out of the noise.
+    z : float
+        How far the layers stand out, in standard deviations.
+    region : Region
+        Part of the grid that holds the band.
 
     Raises
     ------
@@ -350,7 +369,7 @@ def measure_line(
     mean = np.where(number[low:high] >= 0.5 * columns, mean[low:high], np.nan)
     variance = _variance_of_mean(mean, single[low:high], number[low:high], columns)
     region = _band_region(picture, start, stop, width_px)
-    period = profile_period(mean)
+    period = strongest_spacing(mean)
     z = _stands_out(field[low:high], slope, mean)
     if period is None or z < LEAST_Z:
         return None, z, region
@@ -367,8 +386,6 @@ def measure_line(
     u = np.sqrt(np.maximum(np.diag(stack.fit.covariance), 0.0)) * cosine
     phases: tuple[Phase, ...] = tuple(("dark", "bright", "other")[k] for k in stack.phase)  # type: ignore[misc]
     nothing = np.full(len(depth), np.nan)
-    from layerscan.measurement.spectrum import dominant_spacing
-
     spacing, u_spacing = dominant_spacing(mean, near=period)
     orientation = band.angle_rad - math.atan(slope)
     found = FoundLayers(
@@ -456,13 +473,6 @@ def _peak_excess(mean: FloatArray) -> float:
         return 0.0
     ratio = float(power.max()) * math.log(2) / float(np.median(power))
     return math.sqrt(2 * max(ratio - math.log(len(power)), 0.0))
-
-
-def profile_period(mean: FloatArray) -> float | None:
-    """Dominant spacing of a profile [samples]; None where it holds less than 1.5 of them."""
-    from layerscan.measurement.spectrum import strongest_spacing
-
-    return strongest_spacing(mean)
 
 
 def _band_region(picture: Picture, start: tuple[float, float], stop: tuple[float, float], width: float) -> Region:
