@@ -94,8 +94,8 @@ def run(arguments: list[str] | None = None) -> int:
         if os.environ.get("LAYERSCAN_TRACEBACK"):
             raise
         return _fail(
-            f"layerscan: unexpected {type(error).__name__}: {error}\nThis is a fault of the program, not of your input. "
-            "Set LAYERSCAN_TRACEBACK=1 to see where it happened.",
+            f"layerscan: unexpected {type(error).__name__}: {error}\n"
+            "This is a fault of the program, not of your input. Set LAYERSCAN_TRACEBACK=1 to see where it happened.",
             1,
         )
 

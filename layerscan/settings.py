@@ -164,17 +164,29 @@ WidthText = Annotated[str, AfterValidator(_width)]
 class MeasureSettings(Settings):
     """What can be chosen when one image is measured."""
 
-    pixel_size: PixelSizeText | None = Field(None, description="size of a pixel, 'VALUE [+- U] UNIT' or 'ROW UNIT, COLUMN UNIT'")
+    pixel_size: PixelSizeText | None = Field(
+        None, description="size of a pixel, 'VALUE [+- U] UNIT' or 'ROW UNIT, COLUMN UNIT'"
+    )
     page: int = Field(0, ge=0, description="page of a file with several images, from 0")
-    region: tuple[int, int, int, int] | None = Field(None, description="part of the image: ROW0,COL0,ROW1,COL1 in pixels, half-open")
-    line: tuple[float, float, float, float] | None = Field(None, description="measure along a line R0,C0,R1,C1 instead of the field")
+    region: tuple[int, int, int, int] | None = Field(
+        None, description="part of the image: ROW0,COL0,ROW1,COL1 in pixels, half-open"
+    )
+    line: tuple[float, float, float, float] | None = Field(
+        None, description="measure along a line R0,C0,R1,C1 instead of the field"
+    )
     width: WidthText | None = Field(None, description="width of the line: pixels ('20') or a length ('300 nm')")
     obliquity: AngleText | None = Field(None, description="angle between layer normal and image plane")
-    stage_tilt: TiltText | None = Field(None, description="stage tilt of the imaged face; 'wall ANGLE' for a face cut perpendicular")
-    compression: CompressionText | None = Field(None, description="relative compression along the cut, such as '5 +- 2 %'")
+    stage_tilt: TiltText | None = Field(
+        None, description="stage tilt of the imaged face; 'wall ANGLE' for a face cut perpendicular"
+    )
+    compression: CompressionText | None = Field(
+        None, description="relative compression along the cut, such as '5 +- 2 %'"
+    )
     shrinkage: ShrinkageText | None = Field(None, description="relative shrinkage in preparation, such as '3 %'")
 
-    edits: tuple[Annotated[str, AfterValidator(lambda t: (parse_edit(t), t)[1])], ...] = Field((), description="boundaries corrected by hand: 'move INDEX SHIFT UNIT', 'delete INDEX', 'add DEPTH UNIT'")
+    edits: tuple[Annotated[str, AfterValidator(lambda t: (parse_edit(t), t)[1])], ...] = Field(
+        (), description="boundaries corrected by hand: 'move INDEX SHIFT UNIT', 'delete INDEX', 'add DEPTH UNIT'"
+    )
 
     @model_validator(mode="after")
     def _consistent(self) -> MeasureSettings:
@@ -197,18 +209,26 @@ class PredictSettings(Settings):
     middle: str | None = Field(None, description="material of the layers of middle grey")
     incident: str | None = Field(None, description="medium that the light comes from (air if not stated)")
     substrate: str | None = Field(None, description="medium behind the stack, or 'absorber': nothing comes back")
-    lit_side: Literal["start", "end"] | None = Field(None, description="which end of the measured stack faces the light")
+    lit_side: Literal["start", "end"] | None = Field(
+        None, description="which end of the measured stack faces the light"
+    )
     layers: int | None = Field(None, ge=1, le=1_000_000, description="layers in the specimen, if more than were seen")
     angle: float = Field(0.0, ge=0, le=90, description="angle of incidence in degrees")
     aperture: float = Field(0.0, ge=0, lt=3, description="effective numerical aperture of the illumination")
-    polarisation: Literal["s", "p", "unpolarised", "left", "right"] = Field("unpolarised", description="polarisation of the light")
-    wavelengths: Annotated[str, AfterValidator(lambda t: (parse_wavelengths(t), t)[1])] = Field("380:780:1", description="START:STOP:STEP in nm")
+    polarisation: Literal["s", "p", "unpolarised", "left", "right"] = Field(
+        "unpolarised", description="polarisation of the light"
+    )
+    wavelengths: Annotated[str, AfterValidator(lambda t: (parse_wavelengths(t), t)[1])] = Field(
+        "380:780:1", description="START:STOP:STEP in nm"
+    )
     bandwidth: float = Field(0.0, ge=0, le=200, description="instrument bandwidth (full width at half maximum) in nm")
     illuminant: Literal["D65", "D50", "A"] = Field("D65", description="illuminant of the colour")
     observer: Literal[2, 10] = Field(2, description="standard observer in degrees")
     draws: int = Field(500, ge=0, le=100_000, description="draws that carry the uncertainty; 0 for none")
     seed: int = Field(1, ge=0, description="seed of the draws")
-    vary: Annotated[str, AfterValidator(lambda t: (parse_vary(t), t)[1])] | None = Field(None, description="series NAME=START:STOP:STEP")
+    vary: Annotated[str, AfterValidator(lambda t: (parse_vary(t), t)[1])] | None = Field(
+        None, description="series NAME=START:STOP:STEP"
+    )
     poisson_ratio: float = Field(0.46, gt=-1, le=0.5, description="Poisson ratio for a strain series")
     materials_folder: str | None = Field(None, description="folder with further materials in the catalogue's form")
 
@@ -217,5 +237,9 @@ class CompareSettings(Settings):
     """What can be chosen when a prediction is compared with an observation."""
 
     lab: tuple[float, float, float] | None = Field(None, description="observed colour L*,a*,b* instead of a spectrum")
-    scale: Literal["absolute", "free"] = Field("absolute", description="trust the height of the observed spectrum, or fit it")
-    quantity: Literal["reflectance", "transmittance", "absorbance"] | None = Field(None, description="what the observed spectrum is")
+    scale: Literal["absolute", "free"] = Field(
+        "absolute", description="trust the height of the observed spectrum, or fit it"
+    )
+    quantity: Literal["reflectance", "transmittance", "absorbance"] | None = Field(
+        None, description="what the observed spectrum is"
+    )

@@ -181,11 +181,11 @@ def resample(quantity: Quantity, *, draws: int, rng: np.random.Generator) -> Flo
 
     if not quantity.u:
         return np.full(draws, quantity.value)
-    if quantity.distribution == "rectangular":
-        return rng.uniform(quantity.low, quantity.high, draws)
-    if quantity.distribution == "triangular" and quantity.low is not None and quantity.high is not None:
-        mode = _triangular_mode(quantity)
-        return rng.triangular(quantity.low, mode, quantity.high, draws)
+    if quantity.low is not None and quantity.high is not None:
+        if quantity.distribution == "rectangular":
+            return rng.uniform(quantity.low, quantity.high, draws)
+        if quantity.distribution == "triangular":
+            return rng.triangular(quantity.low, _triangular_mode(quantity), quantity.high, draws)
     if quantity.degrees_of_freedom:
         return quantity.value + quantity.u * rng.standard_t(quantity.degrees_of_freedom, draws)
     return rng.normal(quantity.value, quantity.u, draws)

@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING, Any
 from layerscan import documents
 from layerscan._version import __version__
 from layerscan.document_files import file_sha256, require_source
+from layerscan.document_models import DOCUMENTS
 from layerscan.errors import InputError, SettingsError
 from layerscan.layer_tables import layer_table, read_layer_table
 from layerscan.records import LayerTable, Measurement, Micrograph, Prediction, Spectrum, Verification
@@ -204,7 +205,7 @@ def verify(path: Path | str, *, progress: Progress | None = None) -> Verificatio
 
     path = Path(path)
     kind = documents.document_kind(path)
-    saved = documents.read_document(path, documents.models.DOCUMENTS[kind]).model_dump(by_alias=True)
+    saved = documents.read_document(path, DOCUMENTS[kind]).model_dump(by_alias=True)
     if kind == "measurement":
         found = measure(require_source(saved["image"]["path"], path), progress=progress, **saved["settings"])
         again = documents.measurement_document(found)

@@ -38,7 +38,7 @@ METAVARS = {
 NAMES = {"edits": "--edit"}
 
 
-class NumberList(click.ParamType):
+class NumberList(click.ParamType):  # type: ignore[type-arg]
     """Numbers with commas between them, such as ``0,0,400,600``."""
 
     def __init__(self, count: int, kind: type) -> None:
