@@ -231,9 +231,9 @@ def layer_statistic(evidence: Evidence) -> float:
     )
 
 
-# Statistic that a share of simulated pictures without layers exceeds: all nine kinds of sample_images/negatives.py, seeds
-# 500 to 579, mains hum apart (refused by its own rule). `benchmarks/measurement_bench.py --only null --seeds 500:580`
-# makes it again.
+# Statistic that a share of simulated pictures without layers exceeds: all nine kinds of sample_images/negatives.py,
+# seeds 500 to 579, mains hum apart (refused by its own rule). It is made again by
+# `benchmarks/measurement_bench.py --only null --seeds 500:580`.
 NULL_SHARE = (0.5, 0.2, 0.1, 0.05, 0.02, 0.01, 0.005, 0.0015)
 NULL_STATISTIC = (0.195, 0.317, 0.395, 0.478, 0.603, 0.710, 0.826, 0.983)
 LEAST_P = 0.0015  # one in the 657 simulated pictures: nothing smaller can be claimed
