@@ -244,8 +244,8 @@ def _layered(best: _Judged, levels: tuple[Level, ...]) -> LayerDetection:
     direction = global_direction(candidate, levels, step, valid)
     harmonics, wander = measure_purity(candidate, straight, levels)
     period = level.factor / candidate.frequency
-    hum = valid.mean() > 0.7 and is_hum(direction.angle_deg, harmonics, period, levels)
-    if hum:  # it fills the frame, where layers may end
+    steady = valid.mean() > 0.7 and wander < 2 * STEADY  # hum fills the frame and keeps its beat
+    if steady and is_hum(direction.angle_deg, harmonics, period, levels):
         return LayerDetection(
             layered=False, periodic=False, statistic=statistic, p_value=p_value_of(statistic), region=None,
             flags=("no_layers_found", "scan_lines"), evidence=evidence, reason="one sinusoid locked to the scan lines",
