@@ -147,7 +147,17 @@ def find_stack(
         alternating[0] = OTHER
     if other[1]:
         alternating[-1] = OTHER
+    _name_long_ends(alternating, fit.position, count)
     return Stack(fit=fit, phase=alternating, dark=dark, bright=bright, weight=weight, beyond=beyond)
+
+
+def _name_long_ends(phase: IntArray, position: FloatArray, count: int) -> None:
+    """Name an end OTHER, in place, where it is far longer than every layer of its phase: resin of the same grey."""
+    width = np.diff(position)
+    for side, shown in ((0, position[0] + 0.5), (-1, count - 0.5 - position[-1])):
+        own = width[phase[1:-1] == phase[side]]
+        if phase[side] != OTHER and len(own) >= 3 and shown > 1.8 * own.max() and shown > 2.2 * np.median(own):
+            phase[side] = OTHER
 
 
 def _segment(

@@ -147,3 +147,14 @@ def test_a_blurred_step_to_a_brighter_material_is_no_thin_layer() -> None:
     assert len(stack.position) == 8
     assert stack.phase[-1] == OTHER
     assert stack.phase[-2] == DARK
+
+
+def test_resin_of_the_grey_of_a_phase_is_no_layer() -> None:
+    # the end is far longer than any layer of its phase, so the frame does not cut a layer there
+    at = 90 + 10.0 * np.arange(13)
+    profile = step_profile(260, at, blur=1.2, noise=0.02, seed=4)
+    stack = find_stack(profile, variance=np.full(260, 4e-4), period=20.0)
+    assert stack is not None
+    assert stack.position == pytest.approx(at, abs=0.3)
+    assert stack.phase[0] == OTHER
+    assert stack.phase[-1] == OTHER
