@@ -156,7 +156,7 @@ def _name_long_ends(phase: IntArray, position: FloatArray, count: int) -> None:
     width = np.diff(position)
     for side, shown in ((0, position[0] + 0.5), (-1, count - 0.5 - position[-1])):
         own = width[phase[1:-1] == phase[side]]
-        if phase[side] != OTHER and len(own) >= 3 and shown > 1.8 * own.max() and shown > 2.2 * np.median(own):
+        if phase[side] != OTHER and len(own) >= 3 and shown > 1.6 * own.max() and shown > 1.8 * np.median(own):
             phase[side] = OTHER
 
 
