@@ -47,6 +47,9 @@ FLAGS: Mapping[str, str] = {
     "near_nyquist": "A layer is only a few pixels wide.",
     "not_resolved": "The layer is thinner than the blur resolves on its own; its thickness leans on its neighbours.",
     "line_taken_as_normal": "The line is too narrow to show the layers' direction; it was taken as their normal.",
+    "sharper_than_pixels": "The edges are sharper than the pixels, so no boundary is known better than a pixel allows.",
+    "field_too_small": "The field is too small in one direction to tell layers from other patterns; measure along a line (--line).",
+    "line_cut_by_frame": "Part of the line lies outside the image (or region); only the part inside was measured.",
     "tilt_uncorrected": "No obliquity of the section was stated; an oblique cut shows layers too thick.",
     "geometry_corrected": "Thicknesses were corrected for the stated section geometry.",
     "orientation_varies": "The layers' direction varies across the field.",
@@ -57,7 +60,7 @@ FLAGS: Mapping[str, str] = {
     "scan_lines": "A weak sinusoid runs along the scan lines, as mains pick-up makes it; it was not taken for layers.",
     "ends_cut_by_frame": "The stack goes on beyond the frame: layers seen are not the layers of the specimen.",
     "spacing_ambiguous": "The dominant spacing may be a harmonic or one of several.",
-    "irregular": "The structure is irregular; the stated spread is part of the answer.",
+    "irregular": "Lamellae are aligned but too irregular to be told apart: direction and main spacing only, with their spread.",
     # predicting
     "lit_side_assumed": "Which end faces the light was not stated; the start of the stack was assumed.",
     "substrate_assumed": "The substrate was not stated.",

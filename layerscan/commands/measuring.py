@@ -88,7 +88,8 @@ def _measurement_lines(found: Measurement) -> Iterator[str]:
     if not found.layered:
         yield f"{found.image.path}: no layered structure found (p = {found.detection.p_value})"
         return
-    yield f"{found.image.path}: {len(found.layers)} layers, {'periodic' if found.periodic else 'not periodic'}"
+    layers = f"{len(found.layers)} layers" if found.layers else "aligned lamellae that cannot be told apart"
+    yield f"{found.image.path}: {layers}, {'periodic' if found.periodic else 'not periodic'}"
     for name, average in (
         ("period", found.period),
         ("dark layers", found.dark),

@@ -201,7 +201,7 @@ def _candidates(levels: tuple[Level, ...], all_tiles: tuple[Tiles, ...]) -> list
 
 
 def _not_layered(best: _Judged, judged: list[_Judged]) -> LayerDetection:
-    """No layers; where the pattern is aligned all the same, its direction and spacing are given."""
+    """No layers that can be told apart; where the pattern is aligned all the same, its direction and spacing."""
     aligned = [one for one in judged if alignment_statistic(one.evidence) > 1]
     if not aligned:
         return LayerDetection(
@@ -223,7 +223,7 @@ def _not_layered(best: _Judged, judged: list[_Judged]) -> LayerDetection:
         u_orientation_deg=spread / math.sqrt(count),
         period_px=spacing * factor,
         u_period_px=u_spacing * factor,
-        flags=("no_layers_found", "irregular"),
+        flags=("irregular",),
         evidence=one.evidence,
         reason="aligned, but not layered",
     )

@@ -14,7 +14,7 @@ _ROOT2 = math.sqrt(2.0)
 _NORM = 1.0 / math.sqrt(2.0 * math.pi)
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def blurred_rim(v, s, decay):  # type: ignore[no-untyped-def]
     """One-sided exponential (v > 0) blurred by a Gaussian: value and derivatives by v, s and decay."""
     gauss = math.exp(-0.5 * (v / s) ** 2)
@@ -29,7 +29,7 @@ def blurred_rim(v, s, decay):  # type: ignore[no-untyped-def]
     return value, by_v, by_s, by_decay
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def blurred_edge(u, s, box, skew):  # type: ignore[no-untyped-def]
     """Blurred step: value and derivatives by u, s, box width and skew.
 
@@ -58,7 +58,7 @@ def blurred_edge(u, s, box, skew):  # type: ignore[no-untyped-def]
     return value, by_u, by_s, by_box, extra
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def _reach(shared, active):  # type: ignore[no-untyped-def]
     """Distance from an edge beyond which it is a plain step."""
     reach = 4.5 * shared[BLUR] + 0.5 * shared[BOX]
@@ -67,7 +67,7 @@ def _reach(shared, active):  # type: ignore[no-untyped-def]
     return reach
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def _band_width(position, reach):  # type: ignore[no-untyped-def]
     """Largest number of parameters that one sample couples."""
     widest, low = 0, 0
@@ -78,7 +78,7 @@ def _band_width(position, reach):  # type: ignore[no-untyped-def]
     return 2 * (widest + 1) + 1
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def model_profile(depth, position, level, shared, active):  # type: ignore[no-untyped-def]
     """Model intensity (dark 0, bright 1) at the given depths [samples], which must increase."""
     out = np.empty(depth.size)
@@ -106,7 +106,7 @@ def model_profile(depth, position, level, shared, active):  # type: ignore[no-un
     return out
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def _accumulate(  # type: ignore[no-untyped-def]
     depth, value, weight, position, level, shared, active, target, precision, belief, place, band, border, corner, g, gs
 ):
@@ -221,7 +221,7 @@ def _accumulate(  # type: ignore[no-untyped-def]
     return cost
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def _cholesky(band):  # type: ignore[no-untyped-def]
     """Banded Cholesky in place; band[i, k] holds the element (i, i - k). False where it is not positive."""
     n, width = band.shape
@@ -239,7 +239,7 @@ def _cholesky(band):  # type: ignore[no-untyped-def]
     return True
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def _solve(band, x):  # type: ignore[no-untyped-def]
     """Solve with the banded Cholesky factor, in place."""
     n, width = band.shape
@@ -255,7 +255,7 @@ def _solve(band, x):  # type: ignore[no-untyped-def]
         x[i] = total / band[i, 0]
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def _solve_from(band, x, first):  # type: ignore[no-untyped-def]
     """Solve with the banded Cholesky factor, in place, where x is zero before ``first``."""
     n, width = band.shape
@@ -271,7 +271,7 @@ def _solve_from(band, x, first):  # type: ignore[no-untyped-def]
         x[i] = total / band[i, 0]
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def _bordered(band, border, corner, active):  # type: ignore[no-untyped-def]
     """Factor the arrow matrix: (ok, border solved, inverse of the Schur complement)."""
     solved = np.zeros(border.shape)
@@ -299,7 +299,7 @@ def _bordered(band, border, corner, active):  # type: ignore[no-untyped-def]
     return True, solved, inverse
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def fit_edges(  # type: ignore[no-untyped-def]
     depth, value, weight, position, level, shared, active, target, precision, belief, place, rounds, tolerance, full
 ):
@@ -471,7 +471,7 @@ def fit_edges(  # type: ignore[no-untyped-def]
     return position, level, shared, cost, covariance, ok, inverse
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def correlation_factor(residual, weight, longest):  # type: ignore[no-untyped-def]
     """Factor on the variance of smooth estimates because residuals are correlated: 1 + 2 sum of the first lags."""
     total = 0.0

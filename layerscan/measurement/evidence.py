@@ -253,7 +253,8 @@ def p_value_of(statistic: float) -> float:
 def alignment_statistic(evidence: Evidence) -> float:
     """Above 1: an aligned pattern with a spacing, such as rods or short lamellae that end, without being layered.
 
-    What goes on unchanged along its lines without being regular is an edge, curtains or fringes.
+    What goes on unchanged along its lines without being regular is an edge, curtains or fringes; what ends inside the
+    field puts part of its power into other directions (``rivals``, and an ``alone`` that is not large).
     """
     return min(
         evidence.peak / 9,
@@ -262,8 +263,10 @@ def alignment_statistic(evidence: Evidence) -> float:
         evidence.near_share / 0.4,
         evidence.swings / 4.9,
         evidence.alone / 20,
+        50 / max(evidence.alone, 1e-6),
         evidence.length,
         0.2 / max(evidence.second, 1e-6),
+        evidence.rivals / 0.15,
         0.4 / max(evidence.rivals, 1e-6),
     )
 

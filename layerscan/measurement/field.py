@@ -108,7 +108,7 @@ def frame_to_picture(frame: Frame, depth: FloatArray, station: FloatArray) -> tu
 # --- the frame ------------------------------------------------------------------------------------------------------
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def _misfit(angle, weight, row, column, normal, k):  # type: ignore[no-untyped-def]
     """Weighted mean of sin^2 between the map and the frame's normals; row, column relative to the base point."""
     cos, sin = math.cos(normal), math.sin(normal)
@@ -127,7 +127,7 @@ def _misfit(angle, weight, row, column, normal, k):  # type: ignore[no-untyped-d
     return total / norm
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def _search_frame(angle, weight, row, column, k_max):  # type: ignore[no-untyped-def]
     """Best straight and best circular frame: (misfit, normal, curvature) of each, grid search and refinement."""
     best = np.empty((2, 3))
@@ -197,7 +197,7 @@ def fit_frame(*, angle_rad: FloatArray, weight: FloatArray, row: FloatArray, col
 # --- sampling -------------------------------------------------------------------------------------------------------
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def interpolate(image, row, column):  # type: ignore[no-untyped-def]
     """Cubic convolution (Keys 1981, a = -1/2), bilinear at the frame and beside holes, NaN outside the picture."""
     rows, columns = image.shape
@@ -238,7 +238,7 @@ def interpolate(image, row, column):  # type: ignore[no-untyped-def]
     return (1 - y) * ((1 - x) * image[r, c] + x * image[r, c1]) + y * ((1 - x) * image[r1, c] + x * image[r1, c1])
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def sample_field(  # type: ignore[no-untyped-def]
     image, frame, depth_start, step, count, station_start, station_step, inner, shift, node_start, node_step
 ):
@@ -293,7 +293,7 @@ def sample_field(  # type: ignore[no-untyped-def]
 # --- alignment ------------------------------------------------------------------------------------------------------
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def _best_shift(template, field, j, centre, half, start, reach, score):  # type: ignore[no-untyped-def]
     """Shift of column j against the template in a window: normalised correlation, parabola through its peak."""
     count = template.size
@@ -331,7 +331,7 @@ def _best_shift(template, field, j, centre, half, start, reach, score):  # type:
     return base + moved, best
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def track_columns(field, first, nodes, node_step, node_start, half, reach, memory):  # type: ignore[no-untyped-def]
     """Follow the layers from the first column outwards: shift (nodes, columns) against an evolving mean profile."""
     count, columns = field.shape
@@ -398,7 +398,7 @@ def track_columns(field, first, nodes, node_step, node_start, half, reach, memor
     return shift, quality
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def hold_unseen(field, shift, node_start, node_step, half):  # type: ignore[no-untyped-def]
     """Shift in which nodes whose window lies mostly outside the picture go with the nearest one inside."""
     count, columns = field.shape
@@ -426,7 +426,7 @@ def hold_unseen(field, shift, node_start, node_step, half):  # type: ignore[no-u
     return out
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def aligned_mean(field, shift, node_start, node_step):  # type: ignore[no-untyped-def]
     """Mean profile of a field after its shift (linear interpolation), NaN where no column reaches."""
     count, columns = field.shape
@@ -451,7 +451,7 @@ def aligned_mean(field, shift, node_start, node_step):  # type: ignore[no-untype
     return total
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def refine_shift(field, template, shift, node_start, node_step, half, reach, width):  # type: ignore[no-untyped-def]
     """Correlate every column with the whole mean profile again and smooth the corrections along the stations."""
     _count, columns = field.shape
@@ -487,7 +487,7 @@ def refine_shift(field, template, shift, node_start, node_step, half, reach, wid
     return smooth
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def settle_shift(field, template, shift, node_start, node_step, half, reach, price):  # type: ignore[no-untyped-def]
     """Best path of corrections along the columns for each node (dynamic programming), to undo slips by a period.
 

@@ -81,7 +81,7 @@ def sample_band(
     return Band(intensity=field, start=start, angle_rad=angle)
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def sheared_mean(field, slope, group):  # type: ignore[no-untyped-def]
     """Mean profile with column j moved by slope times its distance from the middle; columns joined by ``group`` first.
 
@@ -131,7 +131,7 @@ def sheared_mean(field, slope, group):  # type: ignore[no-untyped-def]
     return mean, variance, number
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def _shared(field, slope, margin, stride):  # type: ignore[no-untyped-def]
     """Variance of the sheared mean profile ``margin`` samples away from the ends: what the columns have in common."""
     count, columns = field.shape
@@ -167,7 +167,7 @@ def _shared(field, slope, margin, stride):  # type: ignore[no-untyped-def]
     return total / n - (s1 / n) ** 2
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def find_slope(field, most):  # type: ignore[no-untyped-def]
     """Slope of the layers across the band (depth per column) in which the columns agree best."""
     count, columns = field.shape
@@ -205,6 +205,62 @@ def find_slope(field, most):  # type: ignore[no-untyped-def]
         else:
             width *= 0.5
     return slope, best
+
+
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
+def column_shifts(field, slope, mean):  # type: ignore[no-untyped-def]
+    """How far each column lies from the mean profile [samples], by its derivative; NaN where nothing is seen."""
+    count, columns = field.shape
+    out = np.full(columns, np.nan)
+    for j in range(columns):
+        shift = slope * (j - 0.5 * (columns - 1))
+        whole = math.floor(shift)
+        x = shift - whole
+        x2 = x * x
+        w0 = x * (-0.5 + x - 0.5 * x2)
+        w1 = 1 + x2 * (-2.5 + 1.5 * x)
+        w2 = x * (0.5 + 2 * x - 1.5 * x2)
+        w3 = 0.5 * x2 * (x - 1)
+        above = 0.0
+        below = 0.0
+        for d in range(1, count - 1):
+            at = d + whole
+            if at < 1 or at + 2 >= count:
+                continue
+            rise = 0.5 * (mean[d + 1] - mean[d - 1])
+            value = w0 * field[at - 1, j] + w1 * field[at, j] + w2 * field[at + 1, j] + w3 * field[at + 2, j] - mean[d]
+            if value == value and rise == rise:
+                above += value * rise
+                below += rise * rise
+        if below > 0:
+            out[j] = above / below
+    return out
+
+
+def refine_slope(field: NDArray[np.float32], slope: float) -> tuple[float, float]:
+    """Slope of the layers across a band by least squares over its columns, and its standard uncertainty.
+
+    ``find_slope`` compares how alike the columns are, which interpolation between samples disturbs; here each column is
+    placed against the mean profile, and a straight line through the places corrects the slope.
+    """
+    columns = field.shape[1]
+    across = np.arange(columns) - 0.5 * (columns - 1)
+    u = 0.0
+    for _ in range(3):
+        mean, _, _ = sheared_mean(field, slope, 1)
+        shift = column_shifts(field, slope, mean)
+        good = np.isfinite(shift)
+        if good.sum() < 4:
+            return slope, u
+        x = across[good] - across[good].mean()
+        y = shift[good] - shift[good].mean()
+        square = float((x * x).sum())
+        change = float((x * y).sum()) / square
+        u = math.sqrt(float(((y - change * x) ** 2).sum()) / (len(x) - 2) / square)
+        slope -= change
+        if abs(change) < 0.1 * u:
+            break
+    return slope, u
 
 
 def measure_line_of(
@@ -260,7 +316,18 @@ def measure_line_of(
         found = apply_edits(found, settings, unit_nm=picture.unit_nm)
     if progress is not None:
         progress("measured", 1.0)
-    return build_measurement(micrograph, settings, detection, found, unit_nm=picture.unit_nm, flags=picture.flags)
+    flags = (*picture.flags, "line_cut_by_frame") if _is_cut(settings, micrograph.shape) else picture.flags
+    return build_measurement(micrograph, settings, detection, found, unit_nm=picture.unit_nm, flags=flags)
+
+
+def _is_cut(settings: MeasureSettings, shape: tuple[int, int]) -> bool:
+    """Whether an end of the line lies outside the image or the region."""
+    assert settings.line is not None
+    r0, c0, r1, c1 = settings.line
+    low_row, low_column, high_row, high_column = settings.region or (0, 0, *shape)
+    rows_in = low_row - 0.5 <= min(r0, r1) and max(r0, r1) <= high_row - 0.5
+    columns_in = low_column - 0.5 <= min(c0, c1) and max(c0, c1) <= high_column - 0.5
+    return not (rows_in and columns_in)
 
 
 def _bounding_box(settings: MeasureSettings, shape: tuple[int, int], width: float) -> Region:
@@ -357,10 +424,10 @@ def measure_line(
         field = _level_columns(field)
     group = max(1, columns // 6)
     joined = _join(field, group)
-    slope = 0.0
+    slope, u_slope = 0.0, None
     sure = columns >= 4 and joined.shape[1] >= 2
     if sure:
-        slope = find_slope(joined, MOST_SLOPE * group)[0] / group
+        slope, u_slope = refine_slope(field, find_slope(joined, MOST_SLOPE * group)[0] / group)
     mean, single, number = sheared_mean(field, slope, 1)
     enough = np.flatnonzero(number >= 0.5 * columns)
     if len(enough) < LEAST_SAMPLES:
@@ -392,7 +459,9 @@ def measure_line(
         depth=depth, covariance=stack.fit.covariance * cosine**2, phase=phases,
         ends=(float(stack.position[0]) * cosine, float(high - low - 1 - stack.position[-1]) * cosine),
         blur=float(math.hypot(stack.fit.shared[0], stack.fit.shared[1] / math.sqrt(12))) * cosine,
-        orientation_rad=orientation % math.pi, u_orientation_rad=None,
+        orientation_rad=orientation % math.pi,
+        u_orientation_rad=None if u_slope is None else u_slope * cosine**2,
+        u_direction=0.0 if u_slope is None else (abs(slope) + 0.5 * u_slope) * u_slope * cosine**2,
         spacing=spacing * cosine, u_spacing=u_spacing * cosine,
         spacing_method="power spectrum of the line profile",
         profile_depth=(np.arange(high - low, dtype=np.float64) - float(stack.position[0])) * cosine, profile=mean,

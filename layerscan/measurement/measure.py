@@ -3,13 +3,19 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
 
 from layerscan.errors import CalibrationError, InputError
-from layerscan.measurement.result import Aligned, FoundLayers, build_measurement, empty_measurement
+from layerscan.measurement.result import (
+    Aligned,
+    FoundLayers,
+    build_measurement,
+    empty_measurement,
+    pattern_measurement,
+)
 from layerscan.records import Detection
 
 if TYPE_CHECKING:
@@ -71,6 +77,9 @@ def measure_micrograph(
         return measure_line_of(micrograph, settings, progress=progress)
     picture = prepare_picture(micrograph, settings.region)
     return _measure_field(micrograph, settings, picture, progress)
+
+
+SMALL_FIELD_PX = 32  # the detector compares places along the layers, for which it needs some
 
 
 @dataclass(frozen=True, kw_only=True, eq=False)
@@ -181,7 +190,13 @@ def _measure_field(
     detection = _detection(seen, picture)
     if not seen.layered or seen.period_px is None:
         flags = (*picture.flags, *seen.flags)
-        return empty_measurement(micrograph, settings, detection, flags=flags, aligned=_aligned(seen, picture))
+        if min(image.shape) < SMALL_FIELD_PX:
+            flags = (*flags, "field_too_small")
+        aligned = _aligned(seen, picture)
+        if aligned is None:
+            return empty_measurement(micrograph, settings, detection, flags=flags)
+        evidence = replace(detection, layered=True, p_value=None)  # its p-value is that of layers told apart
+        return pattern_measurement(micrograph, settings, evidence, aligned, flags=flags)
     _say(progress, "straightening the field", 0.3)
     period = seen.period_px
     region = _grown_region(seen, image.shape, 1.5 * period)

@@ -16,7 +16,7 @@ if TYPE_CHECKING:
     I8 = NDArray[np.int64]
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def scan_lines(power: F4, near: F4, band: I8, ky: F8, kx: F8, out: F8) -> None:
     """Strongest line of each spectrum: angle [rad], frequency, contrast, coherence, second line over first, energy.
 
@@ -72,7 +72,7 @@ def scan_lines(power: F4, near: F4, band: I8, ky: F8, kx: F8, out: F8) -> None:
         out[t, 5] = first
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def _normal(cos2: F8, sin2: F8, grid: F8, r: float, c: float) -> tuple[float, float]:
     """Unit normal (row, column) at a point; ``grid`` = first row, row step, first column, column step."""
     i = min(max((r - grid[0]) / grid[1], 0.0), cos2.shape[0] - 1.0)
@@ -91,7 +91,7 @@ def _normal(cos2: F8, sin2: F8, grid: F8, r: float, c: float) -> tuple[float, fl
     return (sine if y >= 0 else -sine), cosine
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def follow(
     cos2: F8, sin2: F8, grid: F8, row: F8, column: F8, first_r: F8, first_c: F8, step: float, across: bool,
     limits: F8, path_r: F8, path_c: F8,
@@ -127,7 +127,7 @@ def follow(
                 break
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def block_means(
     image: F4, usable: F4, has_mask: bool, row: F8, column: F8, stride: int, block: int, mean: F8, number: F8
 ) -> None:
@@ -161,7 +161,7 @@ def block_means(
             mean[d, b] = total / count if count > 0 else 0.0
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def bin_profile(
     image: F4, use: NDArray[np.bool_], cos: float, sin: float, origin: F8, width: float, total: F8, number: F8
 ) -> None:
@@ -176,7 +176,7 @@ def bin_profile(
                     number[d] += 1.0
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def rotation_normal_equations(
     image: F4, use: NDArray[np.bool_], cos: float, sin: float, origin: F8, width: float, profile: F8, slope: F8
 ) -> tuple[float, float, float, float]:
@@ -201,7 +201,7 @@ def rotation_normal_equations(
     return a, b, e, n
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def lateral_shifts(
     image: F4, use: NDArray[np.bool_], cos: float, sin: float, origin: F8, width: float, profile: F8, slope: F8,
     lateral: F8, weight: F8, moment: F8,

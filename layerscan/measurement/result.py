@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -38,6 +38,7 @@ if TYPE_CHECKING:
 
 NOT_RESOLVED = 3.0  # a layer thinner than this many blurs leans on its neighbours
 FEW_PERIODS = 5
+SHARP = 0.25  # px; an edge less blurred than this says in which pixel it lies, and no more
 
 
 @dataclass(frozen=True, kw_only=True, eq=False)
@@ -108,30 +109,9 @@ def image_source(micrograph: Micrograph) -> ImageSource:
 
 
 def empty_measurement(
-    micrograph: Micrograph,
-    settings: MeasureSettings,
-    detection: Detection,
-    *,
-    flags: tuple[str, ...] = (),
-    aligned: Aligned | None = None,
+    micrograph: Micrograph, settings: MeasureSettings, detection: Detection, *, flags: tuple[str, ...] = ()
 ) -> Measurement:
-    """The answer where no layered structure was found: the evidence, and no numbers.
-
-    ``aligned`` gives the direction and spacing of a pattern that has both without being layered.
-    """
-    spacing = None
-    if aligned is not None:
-        geometry = section_geometry(settings, aligned.orientation_rad)
-        scale = aligned.unit_nm * geometry.factor
-        relative = micrograph.pixel_size.u_relative if micrograph.pixel_size else None
-        value = aligned.spacing * scale
-        spacing = Spacing(
-            value=value,
-            u=math.sqrt(
-                (aligned.u_spacing * scale) ** 2 + (value * (relative or 0.0)) ** 2 + (value * geometry.u_relative) ** 2
-            ),
-            method="power spectrum of aligned blocks",
-        )
+    """The answer where no layered structure was found: the evidence, and no numbers."""
     return Measurement(
         version=__version__,
         settings=settings.model_dump(),
@@ -141,9 +121,30 @@ def empty_measurement(
         layered=False,
         periodic=False,
         detection=detection,
-        orientation_deg=None if aligned is None else math.degrees(aligned.orientation_rad) % 180,
-        u_orientation_deg=None if aligned is None else math.degrees(aligned.u_orientation_rad),
-        spacing=spacing,
+    )
+
+
+def pattern_measurement(
+    micrograph: Micrograph, settings: MeasureSettings, detection: Detection, aligned: Aligned, *, flags: tuple[str, ...]
+) -> Measurement:
+    """The answer where lamellae are aligned but too irregular to be told apart: direction and spacing, nothing else."""
+    geometry = section_geometry(settings, aligned.orientation_rad)
+    scale = aligned.unit_nm * geometry.factor
+    relative = micrograph.pixel_size.u_relative if micrograph.pixel_size else None
+    value = aligned.spacing * scale
+    u = math.hypot(aligned.u_spacing * scale, value * (relative or 0.0), value * geometry.u_relative)
+    return Measurement(
+        version=__version__,
+        settings=settings.model_dump(),
+        flags=_unique((*general_flags(micrograph), "irregular", "not_periodic", *flags)),
+        image=image_source(micrograph),
+        structure="lamellae",
+        layered=True,
+        periodic=False,
+        detection=detection,
+        orientation_deg=math.degrees(aligned.orientation_rad) % 180,
+        u_orientation_deg=math.degrees(aligned.u_orientation_rad),
+        spacing=Spacing(value=value, u=u, method="power spectrum of aligned blocks"),
     )
 
 
@@ -175,6 +176,16 @@ def section_geometry(settings: MeasureSettings, orientation_rad: float) -> Geome
     )
 
 
+def _blunt(found: FoundLayers) -> FoundLayers:
+    """Boundaries known no better than the pixel they lie in: a rectangle one pixel wide (JCGM 100:2008, 4.3.7)."""
+    pixel = 1 / 12
+    return replace(
+        found,
+        covariance=found.covariance + pixel * np.eye(len(found.depth)),
+        u_station=np.sqrt(found.u_station**2 + pixel),
+    )
+
+
 def build_measurement(
     micrograph: Micrograph,
     settings: MeasureSettings,
@@ -201,6 +212,9 @@ def build_measurement(
     Measurement
     """
     assert micrograph.pixel_size is not None
+    if found.blur < SHARP:
+        found = _blunt(found)
+        flags = (*flags, "sharper_than_pixels")
     geometry = section_geometry(settings, found.orientation_rad)
     scale = unit_nm * geometry.factor
     u_pixel = micrograph.pixel_size.u_relative

@@ -33,7 +33,7 @@ class Segments:
     noise: float
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def _duration_tables(log_mean, log_sd, longest, tail):  # type: ignore[no-untyped-def]
     """Log probability of each duration, and log survival of a duration cut off by the frame: both (2, longest + 1)."""
     density = np.full((2, longest + 1), -1e9)
@@ -54,7 +54,7 @@ def _duration_tables(log_mean, log_sd, longest, tail):  # type: ignore[no-untype
     return density, survival
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def _viterbi(profile, level, noise, scatter, density, survival, start_level, end_level, end_cost):  # type: ignore[no-untyped-def]
     """Best sequence: returns (edges, phases). Start and end level NaN: the stack reaches that end of the profile."""
     count = profile.size
@@ -151,7 +151,7 @@ def _viterbi(profile, level, noise, scatter, density, survival, start_level, end
     return edges[: n + 1][::-1].copy(), phases[:n][::-1].copy()
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def _smooth_levels(profile, edge, phase, length, low, high, level):  # type: ignore[no-untyped-def]
     """Levels of both phases along the profile: kernel mean over segment means, the contrast kept in bounds."""
     n = phase.size

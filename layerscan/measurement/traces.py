@@ -51,7 +51,7 @@ class Traces:
     model: RoughnessModel
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def match_columns(  # type: ignore[no-untyped-def]
     field, centre, gain, position, level, shared, decay_active, moved, prior, limit, raw, information, misfit
 ):

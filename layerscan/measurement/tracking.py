@@ -56,7 +56,7 @@ class FollowedStack:
     terminations: NDArray[np.int64]
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def mean_profile(field, moved, position):  # type: ignore[no-untyped-def]
     """Mean over the stations along the traces, outliers beyond 4 sd left out: (mean, variance of one, number, noise).
 
@@ -139,7 +139,7 @@ def mean_profile(field, moved, position):  # type: ignore[no-untyped-def]
     return mean, variance, number, noise
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def local_gain(field, moved, position, profile, dark, bright, node_step, half, spread):  # type: ignore[no-untyped-def]
     """Offset and gain of each station against the mean profile in overlapping depth windows, smoothed along stations.
 
@@ -214,7 +214,7 @@ def local_gain(field, moved, position, profile, dark, bright, node_step, half, s
     return centre, gain
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def normalise(field, centre, gain):  # type: ignore[no-untyped-def]
     """The field brought to 0 (dark) and 1 (bright), NaN where it has no gain."""
     out = np.empty_like(field)
@@ -305,7 +305,7 @@ def follow_layers(
     return _keep_covered(result, straight, number)
 
 
-@njit(cache=True)  # type: ignore[untyped-decorator]
+@njit(cache=True, nogil=True)  # type: ignore[untyped-decorator]
 def layer_values(even, position, moved, window):  # type: ignore[no-untyped-def]
     """Mean normalised intensity in the core of each layer at each station, over a window of stations; NaN if unseen."""
     count, stations = even.shape
