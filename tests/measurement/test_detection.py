@@ -53,7 +53,7 @@ def test_pictures_without_layers_are_refused(kind):
 @pytest.mark.slow
 @pytest.mark.parametrize("kind", NEGATIVES)
 def test_no_alarm_in_a_thousand(kind):
-    # issue 3: no false alarm in 1,000 seeded negatives (112 of each of nine kinds), which bounds the rate at 0.3 %
+    # aim: no false alarm in 1,000 seeded negatives (112 of each of nine kinds), which bounds the rate at 0.3 %
     alarms = [seed for seed in range(112) if _detect(make_negative(kind, seed)).layered]
     assert alarms == []
 
@@ -61,7 +61,7 @@ def test_no_alarm_in_a_thousand(kind):
 @pytest.mark.slow
 @pytest.mark.parametrize("kind", KINDS)
 def test_nearly_all_layered_sections_are_found(kind):
-    # issue 3: at least 98 % found
+    # aim: at least 98 % found
     found = [_detect(*make_section(kind, seed)).layered for seed in range(100)]
     assert np.mean(found) >= 0.98
 

@@ -240,7 +240,7 @@ def test_roughness_is_free_of_noise_bias() -> None:
 
 
 def test_traces_follow_boundaries_through_noise_with_honest_uncertainty() -> None:
-    # noise/contrast 0.5 on 1 px roughness: facts of the trade give 0.36 px for the prototype, 0.73 for a cheapest path
+    # noise/contrast 0.5 on 1 px roughness: own Monte Carlo gave 0.36 px at best, 0.73 px for a cheapest path
     recipe = sections.Recipe(
         period_px=28.0, orientation_deg=90.0, noise=0.25, roughness_px=1.0, correlation_length_px=15.0, replication=0.3,
         pixel_size_nm=1.0,

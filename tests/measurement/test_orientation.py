@@ -27,7 +27,7 @@ def _bound_deg(recipe, seed, shape, noise):
 
 @pytest.mark.parametrize("noise", [0.05, 0.4])
 def test_global_direction_is_near_its_bound(noise):
-    # Cramer-Rao bound, computed from the noise-free picture; issue 3 asks for 2 times, u must cover
+    # Cramer-Rao bound, computed from the noise-free picture; the aim is 2 times, u must cover
     errors, pulls = [], []
     for seed in range(16):
         angle = float(np.random.default_rng(seed).uniform(0, 180))

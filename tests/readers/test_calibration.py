@@ -191,7 +191,7 @@ def test_user_gives_each_axis(tmp_path):
     ],
 )
 def test_impossible_pixel_size_text(tmp_path, given, match):
-    # issue 2, bad input: zero, negative, NaN, absurd, unknown unit
+    # bad input: zero, negative, NaN, absurd, unknown unit
     path = tmp_path / "a.tif"
     tifffile.imwrite(path, PICTURE)
     with pytest.raises(SettingsError, match=match):
@@ -200,7 +200,7 @@ def test_impossible_pixel_size_text(tmp_path, given, match):
 
 @pytest.mark.parametrize("given", [0.0, -2.5, float("nan"), float("inf"), 1e12, (2.5, 0.0), (1.0, 2.0, 3.0), "wide"])
 def test_impossible_pixel_size_number(tmp_path, given):
-    # issue 2, bad input
+    # bad input
     path = tmp_path / "a.tif"
     tifffile.imwrite(path, PICTURE)
     with pytest.raises(SettingsError, match="Pixel size"):
@@ -298,7 +298,7 @@ def test_from_array_refuses_impossible_uncertainty(u):
     ],
 )
 def test_from_array_refuses(array, match):
-    # issue 2, bad input
+    # bad input
     with pytest.raises(InputError, match=match):
         from_array(array, pixel_size_nm=2.0)
 

@@ -119,7 +119,7 @@ def test_worker_that_dies(tmp_path, monkeypatch):
 
 @pytest.mark.parametrize("name", ["a.dm3", "a.dm4", "a.ser", "a.emi", "a.emd", "a.hdf5"])
 def test_noise_is_refused(tmp_path, name):
-    # issue 2, bad input: no container at all
+    # bad input: no container at all
     pytest.importorskip("rsciio", reason="RosettaSciIO is not installed")
     path = tmp_path / name
     path.write_bytes(np.random.default_rng(4).bytes(3000))

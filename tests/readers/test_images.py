@@ -152,7 +152,7 @@ def test_pages(tmp_path):
 @pytest.mark.parametrize("page", [3, -1, 10**9])
 @pytest.mark.parametrize("suffix", ["tif", "mrc", "npy"])
 def test_page_out_of_range(tmp_path, page, suffix):
-    # issue 2, bad input
+    # bad input
     path = tmp_path / f"a.{suffix}"
     stack = np.stack([PICTURE] * 3)
     if suffix == "tif":
@@ -245,7 +245,7 @@ def test_packed_mrc(tmp_path):
 
 
 def test_complex_is_refused(tmp_path):
-    # issue 2, bad input: complex numbers are no intensities
+    # bad input: complex numbers are no intensities
     path = tmp_path / "a.mrc"
     with mrcfile.new(path) as mrc:
         mrc.set_data(PICTURE.astype(np.complex64))
@@ -257,7 +257,7 @@ def test_complex_is_refused(tmp_path):
 
 
 def test_infinities_become_holes_and_all_nan_is_refused(tmp_path):
-    # issue 2, bad input: NaN and infinities
+    # bad input: NaN and infinities
     path = tmp_path / "a.tif"
     values = PICTURE.astype(np.float32)
     values[0, 0], values[0, 1], values[1, 1] = np.inf, -np.inf, np.nan
@@ -273,7 +273,7 @@ def test_infinities_become_holes_and_all_nan_is_refused(tmp_path):
 @pytest.mark.parametrize("shape", [(3, 3), (1, 1), (1, 50), (50, 1), (8, 4000), (4000, 8)])
 @pytest.mark.parametrize("suffix", ["tif", "png", "npy", "mrc"])
 def test_odd_shapes_open(tmp_path, shape, suffix):
-    # issue 2: a 3x3 or 8x4000 image
+    # aim: a 3x3 or 8x4000 image
     path = tmp_path / f"a.{suffix}"
     values = (np.arange(shape[0] * shape[1]) % 251).reshape(shape).astype(np.uint8)
     if suffix == "tif":
@@ -310,7 +310,7 @@ def test_hash_is_that_of_the_file(tmp_path):
 
 
 def test_missing_empty_folder_and_other_files(tmp_path):
-    # issue 2, bad input
+    # bad input
     with pytest.raises(InputError, match="There is no file"):
         open_plain(tmp_path / "none.tif")
     with pytest.raises(InputError, match="is a folder"):
@@ -341,7 +341,7 @@ def test_wrong_suffix_does_not_matter(tmp_path):
 @pytest.mark.parametrize("keep", [4, 8, 100, 0.5, 0.95])
 @pytest.mark.parametrize("suffix", ["tif", "png", "jpg", "mrc", "npy", "bmp"])
 def test_truncated_files(tmp_path, suffix, keep):
-    # issue 2, bad input: cut short
+    # bad input: cut short
     path = tmp_path / f"a.{suffix}"
     if suffix == "tif":
         tifffile.imwrite(path, PICTURE)

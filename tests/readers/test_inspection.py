@@ -16,7 +16,7 @@ RAMP = np.tile(np.arange(10, 74, dtype=np.uint8), (40, 1))
 
 
 def test_unknown_pixel_size_says_how_to_give_one():
-    # issue 2: an error or advice that says how to give one, never a default
+    # aim: an error or advice that says how to give one, never a default
     found = inspect_image(from_array(RAMP, pixel_size_nm=None))
     assert found.image.pixel_size is None
     assert found.field_of_view_nm is None

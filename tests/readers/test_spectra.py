@@ -32,7 +32,7 @@ def lines(wavelength, value, *, separator=",", decimal=".", form="{:.4f}"):
 @pytest.mark.parametrize("form", ["{:.4f}", "{:.6e}", "{:.5E}"])
 @pytest.mark.parametrize("end", ["\n", "\r\n", "\r"])
 def test_separators_and_decimals(tmp_path, separator, decimal, form, end):
-    # issue 2: comma or point, tabs, semicolons, exponents; line ends of three systems
+    # aim: comma or point, tabs, semicolons, exponents; line ends of three systems
     text = lines(WAVELENGTH, VALUE, separator=separator, decimal=decimal, form=form).replace("\n", end)
     if decimal == "," and separator.strip() == ",":  # nothing tells the two kinds of comma apart
         with pytest.raises(InputError, match=r"s\.csv"):
@@ -58,7 +58,7 @@ def test_separators_and_decimals(tmp_path, separator, decimal, form, end):
     ],
 )
 def test_header_says_quantity_and_unit(tmp_path, header, factor, kind):
-    # issue 2: percent or fraction; reflectance, transmittance or absorbance
+    # aim: percent or fraction; reflectance, transmittance or absorbance
     found = open_spectrum(write(tmp_path, header + "\n" + lines(WAVELENGTH, VALUE * factor)))
     assert found.kind == kind
     np.testing.assert_allclose(found.value, VALUE, atol=6e-5)
@@ -75,7 +75,7 @@ def test_percent_from_values_is_a_doubt(tmp_path):
 
 @pytest.mark.parametrize("header", ["wavelength (um)\treflectance\n", "wavelength (µm)\treflectance\n", ""])
 def test_micrometres(tmp_path, header):
-    # issue 2: nm or um
+    # aim: nm or um
     found = open_spectrum(write(tmp_path, header + lines(WAVELENGTH / 1e3, VALUE, separator="\t", form="{:.6f}")))
     np.testing.assert_allclose(found.wavelength_nm, WAVELENGTH)
     assert bool(header) != any("taken as um" in doubt for doubt in found.doubts)
@@ -90,7 +90,7 @@ def test_wave_numbers(tmp_path):
 
 
 def test_order_and_duplicates(tmp_path):
-    # issue 2: unsorted, duplicated
+    # aim: unsorted, duplicated
     rng = np.random.default_rng(3)
     order = rng.permutation(WAVELENGTH.size)
     wavelength = np.concatenate([WAVELENGTH[order], WAVELENGTH[:2]])
@@ -189,13 +189,13 @@ def test_gaps_are_left_out(tmp_path):
     ],
 )
 def test_bad_spectra(tmp_path, text, match):
-    # issue 2, bad input: three rows, duplicated, non-numeric
+    # bad input: three rows, duplicated, non-numeric
     with pytest.raises(InputError, match=match):
         open_spectrum(write(tmp_path, text))
 
 
 def test_missing_empty_and_folder(tmp_path):
-    # issue 2, bad input
+    # bad input
     with pytest.raises(InputError, match="There is no file"):
         open_spectrum(tmp_path / "none.csv")
     with pytest.raises(InputError, match="is empty"):
