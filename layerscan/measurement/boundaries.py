@@ -218,6 +218,8 @@ class _Model:
     start: dict[int, float]
     free: tuple[int, ...] = ()
     log_odds: float = 0.0
+    inward: float = 0.0  # how far the boundaries are moved into the bright layers to start with, in blurs
+    steps: int = 2  # steps after which a model that gains nothing is given up
 
 
 def _models(blur: float, hints: Hints) -> list[_Model]:
@@ -225,7 +227,12 @@ def _models(blur: float, hints: Hints) -> list[_Model]:
     box = {BOX: 1.7 * blur, BLUR: 0.87 * blur}
     rim = {RIM_BRIGHT: 0.15, RIM_DARK: 0.05, RIM_DECAY: 1.3 * blur}
     rims = (RIM_BRIGHT, RIM_DARK, RIM_DECAY)
-    models = [_Model(start=box, free=(BOX,), log_odds=-1.0), _Model(start=rim, free=rims, log_odds=-1.5)]
+    strong = {RIM_BRIGHT: 0.8, RIM_DARK: 0.3, RIM_DECAY: 1.1 * blur, BLUR: 0.7 * blur}
+    models = [
+        _Model(start=box, free=(BOX,), log_odds=-1.0),
+        _Model(start=rim, free=rims, log_odds=-1.5),
+        _Model(start=strong, free=rims, log_odds=-1.5, inward=0.5, steps=6),
+    ]
     if not hints.known:
         models.append(_Model(start={GAMMA: 0.0}, free=(GAMMA,), log_odds=-2.0))
     if hints.gamma:
@@ -277,9 +284,11 @@ def _average_models(
         shared = fit[2].copy()
         for name, value in model.start.items():
             shared[name] = value
+        begin = fit[0] + model.inward * blur * np.where(target[:-1] > 0.5, -1.0, 1.0)
         trial = fit_edges(
-            depth, profile, weight, fit[0], fit[1], shared, active, target, precision, belief, place, 2, 0.3, False
-        )
+            depth, profile, weight, begin, fit[1], shared, active, target, precision, belief, place, model.steps, 0.3,
+            False,
+        )  # fmt: skip
         if not trial[5] or (model.log_odds <= 0 and trial[3] > fit[3] - unit):
             continue  # two steps gain less than the model costs
         trial = fit_edges(
