@@ -10,6 +10,7 @@ import numpy as np
 
 from layerscan.measurement.candidates import Candidate, StraightCandidate, aligned_profiles, high_pass
 from layerscan.measurement.layered_area import refine_outwards
+from layerscan.measurement.orientation import TILE_PX
 
 if TYPE_CHECKING:
     from layerscan.measurement.orientation import OrientationMap, Tiles
@@ -106,7 +107,11 @@ def judge_candidate(
 def _rivals(
     candidate: Candidate, field_map: OrientationMap, levels: tuple[Level, ...], all_tiles: tuple[Tiles, ...]
 ) -> float:
-    """Largest share, over the finer levels, of tiles with a strong line more than 25 degrees off the candidate's."""
+    """Largest share, over the finer levels, of tiles with a strong line more than 25 degrees off the candidate's.
+
+    Where a tile holds fewer than three periods of the candidate, its leakage looks like a second line beside it: there
+    the second line does not count.
+    """
     own = candidate.tiles
     amplitude = float(np.median(own.amplitude[candidate.member]))
     worst = 0.0
@@ -123,7 +128,9 @@ def _rivals(
         strong = (tiles.contrast > LEAST_CONTRAST) & (tiles.amplitude > 0.5 * amplitude)
         here = candidate.member[i, j]
         if here.any():
-            worst = max(worst, float((strong & (off | (tiles.second > 0.5)) & here).sum() / here.sum()))
+            periods = candidate.frequency * level.factor / candidate.level.factor * TILE_PX
+            beside = tiles.second > (0.5 if periods >= 3 else math.inf)
+            worst = max(worst, float((strong & (off | beside) & here).sum() / here.sum()))
     return worst
 
 
