@@ -240,11 +240,18 @@ def fit_covariance(own: FloatArray, first_lag: int = FIRST_LAG) -> tuple[FloatAr
     return variance, grid[best, 1], grid[best, 0]
 
 
-def fit_roughness(own: FloatArray, cross: FloatArray, first_lag: int = FIRST_LAG) -> RoughnessModel:
-    """Roughness model of all traces from their pooled covariance and the cross-covariance of neighbours."""
+def fit_roughness(
+    own: FloatArray, cross: FloatArray, first_lag: int = FIRST_LAG, least_noise: float = 0.0
+) -> RoughnessModel:
+    """Roughness model of all traces from their pooled covariance and the cross-covariance of neighbours.
+
+    ``least_noise`` is the variance that the picture's own noise gives a matched edge: where the extrapolation leaves
+    less than that, the roughness is given the rest.
+    """
     total = float(own[0])
     variance, length, hurst = (float(x[0]) for x in fit_covariance(own[:, None], first_lag))
-    noise = max(total - variance, 1e-4 * max(total, 1e-12))
+    noise = max(total - variance, min(least_noise, total), 1e-4 * max(total, 1e-12))
+    variance = min(variance, max(total - noise, 0.0))
     near = slice(first_lag, min(first_lag + 4, len(own)))
     denominator = float(own[near].sum())
     replication = float(np.clip(cross[near].sum() / denominator, 0.0, 0.98)) if denominator > 0.05 * total else 0.0
@@ -305,6 +312,15 @@ def smooth_traces(
     own = (vectors**2 @ ((weights * gain).sum(axis=1) / size))[:, None]
     apart = np.where(valid, smooth - own * (raw - level[:, None] - smooth) / np.maximum(1 - own, 0.05), smooth)
     return smooth + level[:, None], spread, apart + level[:, None]
+
+
+def matched_noise(misfit: FloatArray, information: FloatArray, valid: BoolArray) -> float:
+    """Variance of a matched edge from the residuals about it and the bound: mean square residual over information.
+
+    Lowered somewhat, since interpolated samples share noise that the residuals show only in part.
+    """
+    use = valid & np.isfinite(misfit) & (information > 0)
+    return 0.85 * float(np.median(misfit[use] / information[use])) if use.any() else 0.0
 
 
 def mark_outliers(misfit: FloatArray, information: FloatArray) -> NDArray[np.bool_]:

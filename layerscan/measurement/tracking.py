@@ -18,6 +18,7 @@ from layerscan.measurement.traces import (
     fit_roughness,
     mark_outliers,
     match_columns,
+    matched_noise,
     pooled_covariance,
     smooth_traces,
 )
@@ -399,7 +400,7 @@ def _trace(
         centred = np.where(valid, raw, np.nan)
         level = np.array([np.mean(r[v]) if v.any() else 0.0 for r, v in zip(raw, valid, strict=True)])
         own, cross = pooled_covariance(np.where(valid, centred - level[:, None], 0.0), valid, longest)
-        model = fit_roughness(own, cross)
+        model = fit_roughness(own, cross, least_noise=matched_noise(misfit, information, valid))
         smooth, u, apart = smooth_traces(raw, valid, model)
         widths = 0.5 * np.diff(fit.position, prepend=fit.position[0] - period, append=fit.position[-1] + period)
         bound = np.minimum(widths[:-1], widths[1:])[:, None]

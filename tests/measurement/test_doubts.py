@@ -4,6 +4,7 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+import sections
 
 from layerscan import workflow
 from layerscan.readers.images import from_array, open_image
@@ -56,3 +57,21 @@ def test_irregular_lamellae_have_a_direction_and_a_spacing_and_no_false_precisio
     assert 950 <= found.spacing.value <= 1450
     assert found.spacing.u > 0.05 * found.spacing.value
     assert {"irregular", "banner_excluded", "calibration_uncertainty_unknown"} <= set(found.flags)
+
+
+@pytest.mark.parametrize("seed", [202, 207])
+def test_a_trace_is_no_surer_than_the_noise_of_the_picture_allows(seed):
+    # Cramer-Rao bound of one column's edge; these two sections once gave traces with u of 0.01 and 0.09 px at 0.3 px
+    recipe = sections.Recipe(
+        period_px=28.0, cv_dark=0.05, cv_bright=0.05, blur_px=1.2, noise=0.1, orientation_deg=90.0, roughness_px=1.0,
+        correlation_length_px=15.0, replication=0.3, pixel_size_nm=1.0,
+    )  # fmt: skip
+    picture, truth = sections.render_section(recipe, seed, (256, 512))
+    found = workflow.measure(from_array(picture.astype(np.float32), pixel_size_nm=1.0))
+    pulls = []
+    for boundary in found.boundaries[1:-1]:
+        index, _ = truth.nearest_boundary(boundary.trace.row_px, boundary.trace.column_px)
+        off = truth.boundary_distance(boundary.trace.row_px, boundary.trace.column_px, index)
+        pulls.append(np.mean((off / boundary.trace.u_depth_nm) ** 2))
+    assert len(pulls) > 10
+    assert 0.7 < np.sqrt(np.mean(pulls)) < 1.5
