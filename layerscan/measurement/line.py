@@ -15,7 +15,7 @@ from numba import njit
 
 from layerscan.errors import InputError, MeasurementError
 from layerscan.measurement.field import Frame, sample_field
-from layerscan.measurement.profile import find_stack
+from layerscan.measurement.profile import edge_flags, find_stack
 from layerscan.measurement.result import FoundLayers, build_measurement, empty_measurement
 from layerscan.measurement.spectrum import dominant_spacing, strongest_spacing
 from layerscan.records import Detection
@@ -467,7 +467,7 @@ def measure_line(
         profile_depth=(np.arange(high - low, dtype=np.float64) - float(stack.position[0])) * cosine, profile=mean,
         station_depth=depth[:, None], u_station=u[:, None], row=row[:, None], column=column[:, None],
         station_step=1.0, roughness=nothing, correlation_length=nothing, lateral_noise=u,
-        flags=() if sure else ("line_taken_as_normal",),
+        flags=(() if sure else ("line_taken_as_normal",)) + edge_flags(stack),
     )  # fmt: skip
     return found, z, region
 

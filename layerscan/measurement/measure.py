@@ -304,6 +304,8 @@ def describe_field(
     picture: Picture, straight: StraightField, followed: FollowedStack, seen: LayerDetection
 ) -> FoundLayers:
     """Bring a followed stack into the form that line and field share."""
+    from layerscan.measurement.profile import edge_flags
+
     stack, traces = followed.stack, followed.traces
     edges, stations = followed.depth.shape
     number = np.broadcast_to(np.arange(stations), followed.depth.shape)
@@ -356,7 +358,7 @@ def describe_field(
         replication=traces.model.replication if edges > 2 else None,
         terminations=followed.terminations,
         missing=count_missing(np.diff(mean), phases[1:-1]),
-        flags=_field_flags(straight),
+        flags=_field_flags(straight) + edge_flags(stack),
     )
 
 

@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from layerscan.measurement.boundaries import EdgeFit, Hints, fit_boundaries, plain_model, read_hints
-from layerscan.measurement.edges import SHARED, model_profile
+from layerscan.measurement.edges import RIM_DECAY, SHARED, model_profile
 from layerscan.measurement.segmentation import BRIGHT, DARK, OTHER, segment_profile
 
 if TYPE_CHECKING:
@@ -41,6 +41,11 @@ class Stack:
     def contrast(self) -> float:
         """Median difference of the phases' levels."""
         return float(np.median(self.bright - self.dark))
+
+
+def edge_flags(stack: Stack) -> tuple[str, ...]:
+    """What the chosen edge model says to the user."""
+    return ("edge_brightening",) if bool(stack.fit.active[RIM_DECAY]) else ()
 
 
 def fill_gaps(profile: FloatArray) -> FloatArray:

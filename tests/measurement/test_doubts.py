@@ -7,6 +7,7 @@ import pytest
 import sections
 
 from layerscan import workflow
+from layerscan.readers.banner import find_banner
 from layerscan.readers.images import from_array, open_image
 
 REAL = Path(__file__).resolve().parents[3] / "shared" / "real"
@@ -75,3 +76,23 @@ def test_a_trace_is_no_surer_than_the_noise_of_the_picture_allows(seed):
         pulls.append(np.mean((off / boundary.trace.u_depth_nm) ** 2))
     assert len(pulls) > 10
     assert 0.7 < np.sqrt(np.mean(pulls)) < 1.5
+
+
+def test_brightened_edges_say_that_all_of_them_may_be_displaced_alike():
+    # own sections with edge brightening and gamma not 1: errors stay within what u says
+    pulls = []
+    for seed in range(600, 606):
+        picture, truth = sections.make_section("sem", seed)
+        banner = find_banner(picture.astype(np.float32))
+        excluded = () if banner is None else (banner,)
+        found = workflow.measure(from_array(picture.astype(np.float32), pixel_size_nm=1.0, excluded=excluded))
+        assert "edge_brightening" in found.flags
+        off = []
+        for boundary in found.boundaries:
+            index, _ = truth.nearest_boundary(boundary.trace.row_px, boundary.trace.column_px)
+            error = truth.boundary_distance(boundary.trace.row_px, boundary.trace.column_px, index)
+            if truth.required()[index]:  # not in a corner, where the truth ends with the frame
+                off.append(np.mean(error) / boundary.u_nm)
+        pulls.append(np.mean(np.square(off)))
+        assert found.period.u < 0.2 * found.dark.u  # a shift of alternating sign leaves the period alone
+    assert np.sqrt(np.mean(pulls)) < 1.3
