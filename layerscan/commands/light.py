@@ -71,7 +71,8 @@ def _prediction_lines(light: Prediction) -> Iterator[str]:
         for point in light.series.points:
             best = max(point.peaks, key=lambda peak: peak.reflectance, default=None)
             at = "no peak" if best is None else f"peak {best.wavelength_nm:.1f} nm, {best.reflectance:.3f}"
-            yield f"  {light.series.name} {point.value:g} {light.series.unit}: {at}, {point.colour.srgb}"
+            unit = "" if light.series.unit == "1" else f" {light.series.unit}"
+            yield f"  {light.series.name} {point.value:g}{unit}: {at}, {point.colour.srgb}"
 
 
 def _colour(colour: Colour) -> str:
