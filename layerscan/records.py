@@ -47,7 +47,7 @@ FLAGS: Mapping[str, str] = {
     "near_nyquist": "A layer is only a few pixels wide.",
     "not_resolved": "The layer is thinner than the blur resolves on its own; its thickness leans on its neighbours.",
     "line_taken_as_normal": "The line is too narrow to show the layers' direction; it was taken as their normal.",
-    "edge_brightening": "Edges are brightened; how the recording turned signal into grey may move all of them towards one phase. u says how far; periods are not touched.",
+    "edge_shape_doubtful": "Edges are brightened or rounded, no plain blurred steps; how signal became grey may move all of them towards one phase. u says how far; periods are not touched.",
     "sharper_than_pixels": "The edges are sharper than the pixels, so no boundary is known better than a pixel allows.",
     "field_too_small": "The field is too small in one direction to tell layers from other patterns; measure along a line (--line).",
     "line_cut_by_frame": "Part of the line lies outside the image (or region); only the part inside was measured.",

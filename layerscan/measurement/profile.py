@@ -45,7 +45,7 @@ class Stack:
 
 def edge_flags(stack: Stack) -> tuple[str, ...]:
     """What the chosen edge model says to the user."""
-    return ("edge_brightening",) if bool(stack.fit.active[RIM_DECAY]) else ()
+    return ("edge_shape_doubtful",) if bool(stack.fit.active[RIM_DECAY]) else ()
 
 
 def fill_gaps(profile: FloatArray) -> FloatArray:

@@ -86,7 +86,7 @@ def test_brightened_edges_say_that_all_of_them_may_be_displaced_alike():
         banner = find_banner(picture.astype(np.float32))
         excluded = () if banner is None else (banner,)
         found = workflow.measure(from_array(picture.astype(np.float32), pixel_size_nm=1.0, excluded=excluded))
-        assert "edge_brightening" in found.flags
+        assert "edge_shape_doubtful" in found.flags
         off = []
         for boundary in found.boundaries:
             index, _ = truth.nearest_boundary(boundary.trace.row_px, boundary.trace.column_px)
