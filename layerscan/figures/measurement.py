@@ -47,14 +47,14 @@ def measurement_drawing(
     intensity = _usable_pixels(micrograph)
 
     def compose(figure: Figure) -> None:
-        if measurement.layered:
+        if measurement.layers:
             _compose_layers(figure, measurement, intensity, lit_side, longest_px)
         else:
             _compose_no_layers(figure, measurement, intensity, longest_px)
 
     return Drawing(
         width_in=11.0,
-        height_in=8.4 if measurement.layered else 5.2,
+        height_in=8.4 if measurement.layers else 5.2,
         title=f"Layers measured in {_image_name(measurement)}",
         description=describe_measurement(measurement, lit_side=lit_side),
         compose=compose,
@@ -65,6 +65,8 @@ def describe_measurement(measurement: Measurement, *, lit_side: LitSide = "start
     """What the figure shows, in words, for readers who cannot see it."""
     if not measurement.layered:
         return "The micrograph. No layered structure was found in it, so no layers, period or thickness are shown."
+    if not measurement.layers:
+        return f"The micrograph. {' '.join(_pattern_words(measurement))}"
     parts = [f"The micrograph with {len(measurement.boundaries)} layer boundaries drawn over it"]
     left_out = [item.reason for item in measurement.image.excluded]
     if left_out:
@@ -136,12 +138,26 @@ def _compose_no_layers(figure: Figure, measurement: Measurement, intensity: Floa
     side.set_axis_off()
     found = measurement.detection
     lines = ["No layered structure was found.", "No layer, period or thickness is stated.", ""]
+    if measurement.layered:
+        lines = [*_pattern_words(measurement), ""]
     if found.statistic is not None:
         lines.append(f"Test statistic {found.statistic:.3g}")
     if found.p_value is not None:
         lines.append(f"p = {found.p_value:.2g} that a picture without layers shows as much")
     side.text(0.02, 0.9, "\n".join(lines), va="top", fontsize=10, linespacing=1.6, transform=side.transAxes)
     figure.suptitle(_image_name(measurement), x=0.01, ha="left", fontsize=11)
+
+
+def _pattern_words(measurement: Measurement) -> list[str]:
+    """What is known of lamellae that cannot be told apart."""
+    lines = ["Aligned lamellae, too irregular to be told apart.", "No layer, period or thickness is stated."]
+    if measurement.spacing is not None and measurement.spacing.u is not None:
+        lines.append(f"Main spacing {measurement.spacing.value:.0f} \u00b1 {measurement.spacing.u:.0f} nm.")
+    if measurement.orientation_deg is not None and measurement.u_orientation_deg is not None:
+        lines.append(
+            f"Layer normal {measurement.orientation_deg:.1f} \u00b1 {measurement.u_orientation_deg:.1f} degrees."
+        )
+    return lines
 
 
 def _headline(measurement: Measurement) -> str:

@@ -339,3 +339,11 @@ def test_real_noise_holds_no_layers():
             stack = np.array(file.data, dtype=np.float32)
     pages = stack.reshape(-1, *stack.shape[-2:])
     assert not any(detect_layers(page).layered for page in pages[:4])
+
+
+@pytest.mark.parametrize("seed", [4, 8, 15])
+def test_bent_layers_along_the_scan_lines_are_no_hum(seed):
+    # own sections with one termination, which bends the layers: their straight average looks like one weak sinusoid
+    recipe = Recipe(period_px=28.0, noise=0.08, cv_dark=0.05, cv_bright=0.05, terminations=1, pixel_size_nm=1.0)
+    image, _ = render_section(recipe, seed, (512, 512))
+    assert _detect(image).layered
