@@ -11,8 +11,9 @@ import numpy as np
 from layerscan.errors import InputError
 from layerscan.measurement.candidates import Candidate, StraightCandidate, fundamental_period, straighten_candidate
 from layerscan.measurement.evidence import (
-    HUM_MOST_ALONE,
+    CLEAR_LINE,
     LEAST_CONTRAST,
+    LOCKED,
     PURE,
     STEADY,
     Evidence,
@@ -245,8 +246,9 @@ def _layered(best: _Judged, levels: tuple[Level, ...]) -> LayerDetection:
     direction = global_direction(candidate, levels, step, valid)
     harmonics, wander = measure_purity(candidate, straight, levels)
     period = level.factor / candidate.frequency
-    # hum fills the frame, keeps its beat, and lies over a picture of something else
-    steady = valid.mean() > 0.7 and wander < 2 * STEADY and evidence.alone < HUM_MOST_ALONE
+    # hum fills the frame and keeps its beat; where it stands out clearly it is the same all along the rows
+    bent = evidence.alone > CLEAR_LINE and evidence.persistence < LOCKED
+    steady = valid.mean() > 0.7 and wander < 2 * STEADY and not bent
     if steady and is_hum(direction.angle_deg, harmonics, period, levels):
         return LayerDetection(
             layered=False, periodic=False, statistic=statistic, p_value=p_value_of(statistic), region=None,

@@ -333,9 +333,7 @@ def _phase_wander(profile: FloatArray, frequency: float) -> float:
 
 PURE = 0.03  # harmonics of a sinusoid: knife chatter, mains hum; layers with sharp edges have 0.06 and more
 STEADY = 0.2  # rad
-HUM_MOST_ALONE = (
-    8000.0  # of 74 refused hum pictures the largest stood out 5,700-fold, bent layers along the rows 17,000
-)
+CLEAR_LINE, LOCKED = 5000.0, 0.9  # hum as clear (own pictures) persists to 0.99, bent layers to 0.66-0.80
 
 
 def is_hum(angle_deg: float, harmonics: float, period_px: float, levels: tuple[Level, ...]) -> bool:
